@@ -1,0 +1,1 @@
+"""From a spectrum to an MK type: reading, preparing, measuring, matching, assigning."""

@@ -1,0 +1,1 @@
+"""From an MK type and photometry to reddening, distance, luminosity and radius."""
