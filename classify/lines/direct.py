@@ -11,6 +11,7 @@ the last term written out band by band, since both bands carry their own error.
 from __future__ import annotations
 
 from dataclasses import dataclass, field
+from functools import lru_cache
 
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
@@ -48,6 +49,9 @@ class BulkLines:
     telluric : overlaps a telluric band
     too_coarse : the line spread is wider than the feature's coarsest
     width_at : (n, f, 3) full width at depths 0.1, 0.2, 0.3; only for features with ``wings``, else NaN
+    fwhm_angstrom : (n,) line spread
+    band_var : (n, f, 2) variance of the blue and red side-band means (all in one where the other is missing)
+    filled_flux, sigma, good : (n, m) what was measured: flux interpolated over bad pixels, its error, usable pixels
     """
 
     features: FeatureTable
@@ -67,8 +71,10 @@ class BulkLines:
     too_coarse: BoolArray
     width_at: FloatArray
     fwhm_angstrom: FloatArray
+    band_var: FloatArray = field(repr=False)
     filled_flux: FloatArray = field(repr=False)
     sigma: FloatArray = field(repr=False)
+    good: BoolArray = field(repr=False)
 
     def column(self, name: str) -> tuple[FloatArray, FloatArray]:
         """(ew, ew_err) of one feature by name, each (n,)."""
@@ -144,7 +150,7 @@ def measure_many(
     coarsest = np.array([x.coarsest_fwhm for x in features])
     return BulkLines(
         features=features, telluric=_telluric(features, np.broadcast_to(velocity_kms, (n,))),
-        too_coarse=fwhm[:, None] > coarsest, fwhm_angstrom=fwhm.copy(), filled_flux=filled, sigma=noise,
+        too_coarse=fwhm[:, None] > coarsest, fwhm_angstrom=fwhm.copy(), filled_flux=filled, sigma=noise, good=good,
         **{k: (v > 0 if k in _FLAGS else v) for k, v in out.items()})
 
 
@@ -157,6 +163,7 @@ def _empty(n: int, f: int) -> dict[str, FloatArray]:
     names = ("ew", "ew_err", "depth", "depth_err", "continuum", "continuum_err", "blue", "red", "width", *_FLAGS)
     out = {name: np.full((n, f), np.nan if name not in _FLAGS else 0.0) for name in names}
     out["width_at"] = np.full((n, f, len(FIXED_DEPTHS)), np.nan)
+    out["band_var"] = np.zeros((n, f, 2))
     return out
 
 
@@ -260,15 +267,21 @@ def _measure(plan: WindowPlan, flux: FloatArray, sigma: FloatArray, valid: BoolA
         total_var = pixel_var + lean_blue**2 * blue_var[:, w.which] + lean_red**2 * red_var[:, w.which]
         ew_err = np.sqrt(total_var)
 
+        # depth and continuum: in the core of a line, at the middle of the window of a band
         c = plan.core
-        core_mean, core_var, _ = _band_mean(c, flux, variance, None, f, rho)
-        core_share = np.zeros(f)
-        core_share[c.which] = [plan.core_weight_red[s:s + k].mean() for s, k in zip(c.starts, c.count)]
-        core_level = blue + (red - blue) * core_share
+        share_red = np.zeros(f)
+        share_red[w.which] = np.add.reduceat(plan.weight_red, w.starts) / w.count if w.which.size else 0.0
+        share_red[c.which] = np.add.reduceat(plan.core_weight_red, c.starts) / c.count if c.which.size else 0.0
+        middle = blue + (red - blue) * share_red
         one = has_blue ^ has_red
-        core_level_var = np.where(one, blue_var + red_var, (1 - core_share) ** 2 * blue_var + core_share**2 * red_var)
-        depth = 1.0 - core_mean / core_level
-        depth_err = np.sqrt(core_var + (core_mean / core_level) ** 2 * core_level_var) / core_level
+        middle_var = np.where(one, blue_var + red_var, (1 - share_red) ** 2 * blue_var + share_red**2 * red_var)
+        depth, depth_err = np.full((n, f), np.nan), np.full((n, f), np.nan)
+        depth[:, w.which], depth_err[:, w.which] = ew / plan.width[w.which], ew_err / plan.width[w.which]
+        core_flux = c.sum(flux[:, c.pixels]) / c.count
+        core_var = c.sum(variance[:, c.pixels]) / c.count**2
+        ratio_core = core_flux / middle[:, c.which]
+        depth[:, c.which] = 1.0 - ratio_core
+        depth_err[:, c.which] = np.sqrt(core_var + ratio_core**2 * middle_var[:, c.which]) / middle[:, c.which]
 
     share = np.ones((n, w.which.size)) if good is None else w.sum(good[:, w.pixels]) / w.count
     enough = (share >= 1.0 - MAX_MISSING) & plan.complete[w.which] & (b > 0) & (r > 0)
@@ -277,10 +290,11 @@ def _measure(plan: WindowPlan, flux: FloatArray, sigma: FloatArray, valid: BoolA
     measured = np.isfinite(out["ew"])
     out["depth"] = np.where(measured, depth, np.nan)
     out["depth_err"] = np.where(measured, depth_err, np.nan)
-    out["continuum"] = np.where(measured, core_level, np.nan)
-    out["continuum_err"] = np.where(measured, np.sqrt(core_level_var), np.nan)
+    out["continuum"] = np.where(measured, middle, np.nan)
+    out["continuum_err"] = np.where(measured, np.sqrt(middle_var), np.nan)
     out["blue"], out["red"] = np.where(measured, blue, np.nan), np.where(measured, red, np.nan)
     out["width"][:] = plan.width
+    out["band_var"] = np.stack([blue_var, red_var], axis=-1)
     wants_blue, wants_red = plan.wants_blue, plan.wants_red
     lost_band = (wants_blue & ~has_blue) | (wants_red & ~has_red)
     out["gappy"][:, w.which] = (share < 1.0) & measured[:, w.which]
@@ -349,15 +363,20 @@ def widths_at_depths(x: FloatArray, depth: FloatArray, centre: float,
     return out
 
 
+@lru_cache(maxsize=16)
+def _reach(features: FeatureTable) -> tuple[FloatArray, FloatArray]:
+    """Lowest and highest wavelength (f, 3) of window, blue and red band; an interval that no band can touch if none."""
+    pieces = [[i if i is not None else (np.inf, -np.inf) for i in grown(x, 0.0)] for x in features]
+    bounds = np.array(pieces, float)
+    return bounds[..., 0], bounds[..., 1]
+
+
 def _telluric(features: FeatureTable, velocity_kms: FloatArray) -> BoolArray:
     """(n, f): the window or a side band falls on a telluric band, which stands still in the observer's frame."""
-    factor = 1.0 / (1.0 + velocity_kms / LIGHT_KMS)
-    out = np.zeros((velocity_kms.size, len(features)), bool)
-    for k, feature in enumerate(features):
-        window, blue, red = grown(feature, 0.0)
-        for interval in (window, blue, red):
-            if interval is None:
-                continue
-            for band in TELLURIC:
-                out[:, k] |= (band.window[0] * factor <= interval[1]) & (band.window[1] * factor >= interval[0])
-    return out
+    lo, hi = _reach(features)
+    factor = 1.0 / (1.0 + np.unique(velocity_kms) / LIGHT_KMS)
+    hit = np.zeros((factor.size, len(features)), bool)
+    for band in TELLURIC:
+        start, stop = band.window[0] * factor, band.window[1] * factor
+        hit |= ((start[:, None, None] <= hi) & (stop[:, None, None] >= lo)).any(axis=2)
+    return hit[np.searchsorted(np.unique(velocity_kms), velocity_kms)]

@@ -68,9 +68,11 @@ class FeatureTable(Sequence[Feature]):
 
     features: tuple[Feature, ...]
     _by_name: dict[str, int] = field(init=False, repr=False, compare=False)
+    _hash: int = field(init=False, repr=False, compare=False)
 
     def __post_init__(self) -> None:
         object.__setattr__(self, "_by_name", {f.name: i for i, f in enumerate(self.features)})
+        object.__setattr__(self, "_hash", hash(self.features))
         if len(self._by_name) != len(self.features):
             raise RequestError("two features share one name")
 
@@ -84,7 +86,7 @@ class FeatureTable(Sequence[Feature]):
         return self.features[self.index_of(key) if isinstance(key, str) else key]
 
     def __hash__(self) -> int:
-        return hash(self.features)
+        return self._hash
 
     def index_of(self, name: str) -> int:
         """Column number of the feature ``name``; raises RequestError when there is none."""

@@ -62,7 +62,7 @@ class WindowPlan:
 
     Attributes
     ----------
-    window, blue, red, core : :class:`Gather` of the summed window, of the side bands and of the line's core
+    window, blue, red, core : :class:`Gather` of the summed window, the side bands and the line core (none for a band)
     complete : (f,) whole window on the grid
     wants_blue, wants_red : (f,) the definition has that side band
     blue_ok, red_ok : (f,) at least half of it is on the grid (False where there is none by definition)
@@ -141,8 +141,8 @@ def make_plan(wave_angstrom: FloatArray, features: FeatureTable, growth: float, 
         blues.append(_inside(wave, blue, widths, True))
         reds.append(_inside(wave, red, widths, True))
         half = 0.35 * fwhm_angstrom
-        core = (feature.wavelength - half, feature.wavelength + half)
-        cores.append(_inside(wave, core if feature.kind != "band" else window, widths, True))
+        core = None if feature.kind == "band" else (feature.wavelength - half, feature.wavelength + half)
+        cores.append(_inside(wave, core, widths, True))
         i, j = windows[-1]
         complete.append(bool(window[0] >= lo_edge and window[1] <= hi_edge and j - i >= 2))
         blue_ok.append(on_grid(blue) and blues[-1][1] > blues[-1][0])

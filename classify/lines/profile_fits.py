@@ -1,0 +1,449 @@
+"""Profile fits of every line and blend in many spectra: Gaussian against Voigt, blends together, all in batches."""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Iterator, Sequence
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from starfathom.classify.lines.direct import FIXED_DEPTHS, BulkLines
+from starfathom.classify.lines.fitting import NODE_WEIGHTS, NODES, Fits, Jobs, Ties, fit_jobs, tie
+from starfathom.classify.lines.profiles import (
+    SIGMA_TO_FWHM,
+    gaussian,
+    intrinsic_fwhm,
+    voigt,
+    voigt_fwhm,
+    width_at_depth,
+)
+from starfathom.classify.lines.windows import Gather, growth_angstrom, plan_for
+
+FloatArray = NDArray[np.float64]
+BoolArray = NDArray[np.bool_]
+IntArray = NDArray[np.intp]
+
+#: A line counts as there when its fitted area is this many standard deviations from zero.
+DETECTION_SIGMA = 3.0
+#: Below this nobody would see a line, and none is fitted freely.
+_TRACE_SIGMA = 2.0
+#: Below this significance a Voigt profile is not tried: its extra number could not be told.
+_VOIGT_SIGMA = 5.0
+#: A profile with more numbers must win by this much in the criterion: strong evidence (Kass & Raftery 1995).
+_STRONG_EVIDENCE = 6.0
+_BUCKETS = (8, 12, 16, 20, 26, 34, 44, 60, 80, 110, 150, 210, 300, 500, 1000, 4000)
+
+
+@dataclass(frozen=True)
+class BulkFits:
+    """Fitted components, one column each: a line, or one component of a blend. Arrays are (n spectra, c), NaN if unfit.
+
+    Attributes
+    ----------
+    labels, wavelength, feature : (c,) name for people, rest wavelength, column number in the feature table
+    ew, ew_err : area of the profile, angstrom, wings outside the window included
+    center, center_err : rest-frame wavelength of the centre, angstrom
+    fwhm, fwhm_err : full width at half depth of the profile
+    intrinsic, intrinsic_err : the same with the instrument taken out; the 3-sigma upper limit where ``unresolved``
+    depth, depth_err : central depth of the profile
+    sigma, gamma : Gaussian sigma and Lorentzian half width of the profile (gamma 0 for a Gaussian)
+    width_at : (n, c, 3) full width of the profile at depths 0.1, 0.2, 0.3
+    chi2, dof : of the window, shared by the components of a blend
+    residual_rms : scatter of the normalised residuals in the window
+    voigt : the Voigt profile won by the information criterion
+    detected : area at least 3 sigma from zero, fit converged
+    held : not detected; area fitted with centre at rest and the instrument's width, for the limit's sake
+    blue_loss, red_loss : mean depth of the fitted profiles in the side bands, put back into the continuum
+    """
+
+    labels: tuple[str, ...]
+    wavelength: FloatArray
+    feature: IntArray
+    ew: FloatArray
+    ew_err: FloatArray
+    center: FloatArray
+    center_err: FloatArray
+    fwhm: FloatArray
+    fwhm_err: FloatArray
+    intrinsic: FloatArray
+    intrinsic_err: FloatArray
+    unresolved: BoolArray
+    depth: FloatArray
+    depth_err: FloatArray
+    sigma: FloatArray
+    gamma: FloatArray
+    width_at: FloatArray
+    chi2: FloatArray
+    dof: FloatArray
+    residual_rms: FloatArray
+    voigt: BoolArray
+    detected: BoolArray
+    held: BoolArray
+    blue_loss: FloatArray
+    red_loss: FloatArray
+
+
+@dataclass
+class _Slot:
+    """One feature of one group of spectra on its way into a batch."""
+
+    feature: int
+    column: int
+    rows: IntArray
+    pixels: IntArray
+    share_red: FloatArray
+    nodes: FloatArray
+
+
+def fit_many(wave_angstrom: FloatArray, lines: BulkLines, *, profiles: Sequence[str] = ("gaussian", "voigt"),
+             correlation: FloatArray | None = None, fwhm_err_angstrom: float = 0.0,
+             fixed_depths: bool = True) -> BulkFits:
+    """Fit all lines and blends of ``lines``, which :func:`measure_many` measured on the grid ``wave_angstrom``.
+
+    ``fwhm_err_angstrom`` is the error of the line spread itself and goes into the intrinsic widths.
+    """
+    wave = np.ascontiguousarray(wave_angstrom, float)
+    features = lines.features
+    n = lines.ew.shape[0]
+    labels, wavelengths, owner, first = [], [], [], {}
+    for k, feature in enumerate(features):
+        first[k] = len(labels)
+        for label, rest in feature.lines:
+            labels.append(label)
+            wavelengths.append(rest)
+            owner.append(k)
+    c = len(labels)
+    out = {name: np.full((n, c), np.nan) for name in _FLOATS}
+    out["width_at"] = np.full((n, c, len(FIXED_DEPTHS)), np.nan)
+    flags = {name: np.zeros((n, c), bool) for name in ("unresolved", "voigt", "detected", "held")}
+    rho = None if correlation is None else np.atleast_2d(np.asarray(correlation, float))
+    for batch in _batches(wave, lines, first):
+        _fit_batch(wave, lines, batch, profiles, rho, fwhm_err_angstrom, fixed_depths, out, flags)
+    return BulkFits(labels=tuple(labels), wavelength=np.array(wavelengths), feature=np.array(owner, np.intp),
+                    **out, **flags)
+
+
+_FLOATS = ("ew", "ew_err", "center", "center_err", "fwhm", "fwhm_err", "intrinsic", "intrinsic_err", "depth",
+           "depth_err", "sigma", "gamma", "chi2", "dof", "residual_rms", "blue_loss", "red_loss")
+
+
+def _batches(wave: FloatArray, lines: BulkLines, first: dict[int, int]) -> Iterator[list[_Slot]]:
+    """Windows of like pixel number and equally many components, gathered over features and line spreads."""
+    growth = growth_angstrom(lines.fwhm_angstrom)
+    keys = np.round(lines.fwhm_angstrom, 1)
+    groups: dict[tuple[int, int], list[_Slot]] = {}
+    for key in np.unique(keys):
+        members = np.flatnonzero(keys == key)
+        plan = plan_for(wave, lines.features, float(growth[members[0]]), float(key))
+        where = {int(f): i for i, f in enumerate(plan.window.which)}
+        nodes = {side: _band_nodes(wave, band) for side, band in (("blue", plan.blue), ("red", plan.red))}
+        for k, feature in enumerate(lines.features):
+            if not feature.lines or k not in where:
+                continue
+            rows = members[np.isfinite(lines.ew[members, k])]
+            start, count = plan.window.starts[where[k]], plan.window.count[where[k]]
+            size = len(feature.lines)
+            if rows.size == 0 or count < size + 3:
+                continue
+            bucket = next(b for b in _BUCKETS if b >= count)
+            blue, red = nodes["blue"].get(k), nodes["red"].get(k)
+            pair = np.array([blue if blue is not None else red, red if red is not None else blue], float)
+            groups.setdefault((size, bucket), []).append(_Slot(
+                k, first[k], rows, plan.window.pixels[start:start + count],
+                plan.weight_red[start:start + count], pair - feature.wavelength))
+    for slots in groups.values():
+        pending: list[_Slot] = []
+        total = 0
+        for slot in slots:
+            pending.append(slot)
+            total += slot.rows.size
+            if total * slot.pixels.size >= 16000:
+                yield pending
+                pending, total = [], 0
+        if pending:
+            yield pending
+
+
+def _band_nodes(wave: FloatArray, band: Gather) -> dict[int, FloatArray]:
+    out = {}
+    for f, s, count in zip(band.which, band.starts, band.count):
+        lo, hi = wave[band.pixels[s]], wave[band.pixels[s + count - 1]]
+        out[int(f)] = 0.5 * (lo + hi) + 0.5 * (hi - lo) * NODES
+    return out
+
+
+def _build(wave: FloatArray, lines: BulkLines, slots: list[_Slot]) -> tuple[Jobs, IntArray, IntArray, IntArray]:
+    p = max(s.pixels.size for s in slots)
+    count = sum(s.rows.size for s in slots)
+    size = len(lines.features[slots[0].feature].lines)
+    x, y, weight, share = (np.zeros((count, p)) for _ in range(4))
+    y[:] = 1.0
+    nodes, band_var, offsets = np.zeros((count, 2, 3)), np.zeros((count, 2)), np.zeros((count, size))
+    row, column, feature_of = (np.zeros(count, np.intp) for _ in range(3))
+    at = 0
+    for s in slots:
+        feature = lines.features[s.feature]
+        here = slice(at, at + s.rows.size)
+        m = s.pixels.size
+        blue, red = lines.blue[s.rows, s.feature, None], lines.red[s.rows, s.feature, None]
+        level = blue + (red - blue) * s.share_red
+        grid = np.ix_(s.rows, s.pixels)
+        x[here, :m] = wave[s.pixels] - feature.wavelength
+        x[here, m:] = x[here, m - 1:m]
+        y[here, :m] = lines.filled_flux[grid] / level
+        noise = lines.sigma[grid] / level
+        with np.errstate(divide="ignore", invalid="ignore"):
+            weight[here, :m] = np.where(lines.good[grid] & (noise > 0) & np.isfinite(noise), noise**-2.0, 0.0)
+        share[here, :m] = s.share_red
+        nodes[here] = s.nodes
+        band_var[here] = lines.band_var[s.rows, s.feature] / (0.5 * (blue + red)) ** 2
+        offsets[here] = [rest - feature.wavelength for _, rest in feature.lines]
+        row[here], column[here], feature_of[here] = s.rows, s.column, s.feature
+        at += s.rows.size
+    return Jobs(x, y, weight, share, nodes, band_var, offsets), row, column, feature_of
+
+
+def _starts(jobs: Jobs, spread: FloatArray, window: FloatArray) -> tuple[FloatArray, FloatArray]:
+    """First guess of areas (j, k) and of one width (j,), from the depth at each component and the window's area."""
+    j, k = jobs.offsets.shape
+    depth = np.empty((j, k))
+    rows = np.arange(j)
+    for i in range(k):
+        nearest = np.argmin(np.where(jobs.weight > 0, np.abs(jobs.x - jobs.offsets[:, i, None]), np.inf), axis=1)
+        depth[:, i] = 1.0 - jobs.y[rows, nearest]
+    step = np.gradient(jobs.x, axis=1) if jobs.x.shape[1] > 1 else np.ones_like(jobs.x)
+    area = ((1.0 - jobs.y) * (jobs.weight > 0) * step).sum(axis=1)
+    root = np.sqrt(2 * np.pi)
+    total = depth.sum(axis=1)
+    with np.errstate(divide="ignore", invalid="ignore"):
+        guess = np.where(np.abs(total) > 1e-6, area / (total * root), spread)
+    width = np.clip(np.where(np.isfinite(guess), guess, spread), 0.9 * spread, np.maximum(window / 5.0, spread))
+    return depth * width[:, None] * root, width
+
+
+def _fit_batch(wave: FloatArray, lines: BulkLines, slots: list[_Slot], profiles: Sequence[str],
+               rho: FloatArray | None, fwhm_err: float, fixed_depths: bool, out: dict[str, FloatArray],
+               flags: dict[str, BoolArray]) -> None:
+    jobs, row, column, feature_of = _build(wave, lines, slots)
+    j, k = jobs.offsets.shape
+    fwhm = lines.fwhm_angstrom[row]
+    spread = fwhm / SIGMA_TO_FWHM
+    window = np.ptp(jobs.x, axis=1)
+    step = window / np.maximum((jobs.weight > 0).sum(axis=1) - 1, 1)
+    is_wide = np.array([lines.features[f].wings for f in feature_of])
+    areas, width = _starts(jobs, spread, window)
+    drift = np.where(is_wide, 6.0, np.maximum(2.0, fwhm))
+    gaps = np.diff(jobs.offsets, axis=1).min(axis=1) if k > 1 else np.full(j, np.inf)
+    drift = np.minimum(drift, np.maximum(0.5 * gaps, 0.75 * fwhm))
+    correlation = None if rho is None else (rho[row] if rho.shape[0] > 1 else rho)
+
+    best = _Best(j, k)
+
+    def attempt(is_voigt: bool, shared: bool, rows: IntArray, held: bool = False) -> None:
+        if rows.size == 0:
+            return
+        ties = tie(k, is_voigt, shared)
+        start, low, high, base = _setup(ties, jobs.offsets[rows], areas[rows], width[rows], drift[rows], window[rows],
+                                        step[rows], shared, best.full[rows] if is_voigt else None)
+        if held:
+            for i, value in ((k, np.zeros(rows.size)), (k + 1, spread[rows])):
+                start[:, i] = low[:, i] = high[:, i] = value
+        part = jobs.take(rows)
+        fits = fit_jobs(part, start, base, ties, low, high,
+                        correlation if correlation is None or correlation.shape[0] == 1 else correlation[rows])
+        best.offer(rows, fits, ties)
+
+    # with centre and width held, the area is a matched filter; where neither it nor the direct sum sees a trace of a
+    # line, there is nothing a free fit could find
+    everyone = np.arange(j)
+    attempt(False, True, everyone, held=True)
+    direct = np.abs(lines.ew[row, feature_of]) / lines.ew_err[row, feature_of]
+    trace = (best.significance().max(axis=1) >= _TRACE_SIGMA) | (direct >= _TRACE_SIGMA)
+    held = best
+    best = _Best(j, k)
+    attempt(False, True, everyone[trace])
+    apart = everyone[trace & (gaps >= 0.7 * fwhm)] if k > 1 else everyone[:0]
+    attempt(False, False, apart)
+    if "voigt" in profiles:
+        strong = best.significance().max(axis=1) >= _VOIGT_SIGMA
+        strong &= (jobs.weight > 0).sum(axis=1) >= 3 * k + 3
+        attempt(True, True, everyone[strong])
+        attempt(True, False, apart[strong[apart]])
+    seen = (best.significance() >= DETECTION_SIGMA) & best.converged[:, None]
+    lost = ~seen.any(axis=1)
+    best.take(everyone[lost], held)
+    best.store(jobs, row, column, fwhm, fwhm_err, fixed_depths, lost, out, flags)
+
+
+def _setup(ties: Ties, offsets: FloatArray, areas: FloatArray, width: FloatArray, drift: FloatArray,
+           window: FloatArray, step: FloatArray, shared: bool,
+           known: FloatArray | None) -> tuple[FloatArray, FloatArray, FloatArray, FloatArray]:
+    """Start, bounds and base of the fitted numbers; ``known`` (j, k, 4) are the Gaussian results to start from."""
+    j, k = offsets.shape
+    size = ties.per_component
+    base = np.zeros((j, k, size))
+    base[:, :, 1] = offsets
+    full = np.zeros((j, k, size))
+    full[:, :, 0], full[:, :, 2] = areas, width[:, None]
+    if known is not None:
+        ok = np.isfinite(known).all(axis=(1, 2))
+        full[ok, :, :3] = known[ok, :, :3]
+        full[ok, :, 1] -= offsets[ok]
+        full[..., 3] = 0.35 * full[..., 2]
+        full[..., 2] *= 0.8
+    low, high = np.zeros_like(full), np.zeros_like(full)
+    low[:, :, 0], high[:, :, 0] = -3.0 * window[:, None], 3.0 * window[:, None]
+    low[:, :, 1], high[:, :, 1] = -drift[:, None], drift[:, None]
+    low[:, :, 2], high[:, :, 2] = 0.3 * step[:, None], np.maximum(window / 3.0, 2.0 * width)[:, None]
+    if size == 4:
+        high[:, :, 3] = window[:, None]
+
+    def pack(values: FloatArray) -> FloatArray:
+        if not shared:
+            return values.reshape(j, -1).copy()
+        return np.concatenate([values[:, :, 0], values[:, :, 1:].mean(axis=1)], axis=1)
+
+    return pack(full), pack(low), pack(high), base.reshape(j, -1)
+
+
+class _Best:
+    """The winning fit of each job so far, by the information criterion."""
+
+    def __init__(self, jobs: int, components: int) -> None:
+        self.full = np.full((jobs, components, 4), np.nan)
+        self.covariance = np.full((jobs, components, 4, 4), np.nan)
+        self.chi2, self.dof, self.score = (np.full(jobs, np.nan) for _ in range(3))
+        self.free = np.zeros(jobs)
+        self.pixels = np.ones(jobs)
+        self.voigt = np.zeros(jobs, bool)
+        self.converged = np.zeros(jobs, bool)
+
+    def significance(self) -> FloatArray:
+        with np.errstate(invalid="ignore", divide="ignore"):
+            return np.nan_to_num(np.abs(self.full[:, :, 0]) / np.sqrt(self.covariance[:, :, 0, 0]), posinf=0.0)
+
+    def offer(self, rows: IntArray, fits: Fits, ties: Ties) -> None:
+        """Take the fit where it beats what is known.
+
+        Where even the best profile leaves more than the noise (neighbouring lines, chi2 > dof), both chi2 are scaled
+        down alike, so that an extra parameter has to explain part of the misfit and not only outrun the noise.
+        """
+        k, size = ties.components, ties.per_component
+        scale = np.maximum(np.fmin(fits.chi2 / fits.dof, self.chi2[rows] / self.dof[rows]), 1.0)
+        log_n = np.log(np.maximum(fits.pixels, 1.0))
+        mine = fits.chi2 / scale + fits.free * log_n
+        known = self.chi2[rows] / scale + self.free[rows] * log_n
+        wins = np.isnan(known) | (fits.converged & ~self.converged[rows])
+        margin = np.where(fits.free > self.free[rows], _STRONG_EVIDENCE, 0.0)
+        wins |= (mine < known - margin) & (fits.converged | ~self.converged[rows])
+        at = rows[wins]
+        self.full[at, :, 3] = 0.0
+        self.full[at, :, :size] = fits.full[wins]
+        self.covariance[at] = 0.0
+        for i in range(k):
+            block = slice(i * size, (i + 1) * size)
+            self.covariance[at, i, :size, :size] = fits.covariance[wins, block, block]
+        self.chi2[at], self.dof[at], self.free[at] = fits.chi2[wins], fits.dof[wins], fits.free
+        self.pixels[at], self.converged[at] = fits.pixels[wins], fits.converged[wins]
+        self.voigt[at] = ties.is_voigt
+
+    def take(self, rows: IntArray, other: _Best) -> None:
+        """Copy the given jobs from ``other``."""
+        for name, mine in vars(self).items():
+            mine[rows] = getattr(other, name)[rows]
+
+    def store(self, jobs: Jobs, row: IntArray, column: IntArray, fwhm: FloatArray, fwhm_err: float,
+              fixed_depths: bool, lost: BoolArray, out: dict[str, FloatArray], flags: dict[str, BoolArray]) -> None:
+        """Turn parameters into what is tabulated and write them to rows and columns of ``out`` and ``flags``."""
+        significance = self.significance()
+        loss_blue, loss_red, rms = self._residuals(jobs)
+        for i in range(self.full.shape[1]):
+            at = (row, column + i)
+            area, centre, sigma, gamma = (self.full[:, i, q] for q in range(4))
+            cov = self.covariance[:, i]
+            detected = (significance[:, i] >= DETECTION_SIGMA) & self.converged & ~lost
+            peak, by_sigma, by_gamma = _peak(sigma, gamma)
+            width = voigt_fwhm(sigma, gamma)
+            zero = np.zeros_like(area)
+            grad_depth = np.stack([peak, zero, area * by_sigma, area * by_gamma], axis=1)
+            grad_width = _gradient(voigt_fwhm, sigma, gamma)
+            inner = intrinsic_fwhm(sigma, gamma, fwhm)
+            grad_inner = _gradient(lambda s, g: intrinsic_fwhm(s, g, fwhm), sigma, gamma)
+            inner_var = _quadratic(grad_inner, cov) + _lsf_term(sigma, gamma, fwhm, fwhm_err)
+            # an unresolved width is known through its square: w^2 - I^2 with error 2 w s(w)
+            width_err = np.sqrt(_quadratic(grad_width, cov))
+            square = np.maximum(width**2 - fwhm**2, 0.0)
+            square_err = 2.0 * np.hypot(width * width_err, fwhm * fwhm_err)
+            narrow = square < 3.0 * square_err
+            limit = np.sqrt(square + 3.0 * square_err)
+            shown = {
+                "ew": area, "ew_err": np.sqrt(cov[:, 0, 0]), "center": centre, "center_err": np.sqrt(cov[:, 1, 1]),
+                "fwhm": width, "fwhm_err": width_err, "depth": area * peak,
+                "depth_err": np.sqrt(_quadratic(grad_depth, cov)), "intrinsic": np.where(narrow, limit, inner),
+                "intrinsic_err": np.where(narrow, np.nan, np.sqrt(inner_var)), "sigma": sigma, "gamma": gamma,
+                "chi2": self.chi2, "dof": self.dof, "residual_rms": rms, "blue_loss": loss_blue, "red_loss": loss_red}
+            only_seen = ("center", "center_err", "fwhm", "fwhm_err", "depth", "depth_err", "intrinsic", "intrinsic_err",
+                         "sigma", "gamma")
+            usable = self.converged
+            for name, value in shown.items():
+                out[name][at] = np.where(detected if name in only_seen else usable, value, np.nan)
+            flags["detected"][at], flags["voigt"][at] = detected, self.voigt & detected
+            flags["unresolved"][at], flags["held"][at] = narrow & detected, lost & usable
+            if fixed_depths:
+                for d, depth in enumerate(FIXED_DEPTHS):
+                    value = np.full(row.size, np.nan)
+                    if detected.any():
+                        value[detected] = width_at_depth(area[detected], sigma[detected], gamma[detected], depth)
+                    out["width_at"][row, column + i, d] = value
+
+    def _residuals(self, jobs: Jobs) -> tuple[FloatArray, FloatArray, FloatArray]:
+        x = np.concatenate([jobs.x, jobs.nodes.reshape(-1, 6)], axis=1)
+        depth = np.zeros(x.shape)
+        for i in range(self.full.shape[1]):
+            area, centre, sigma, gamma = (self.full[:, i, q, None] for q in range(4))
+            depth += area * _value(x, centre, sigma, gamma)
+        p = jobs.x.shape[1]
+        blue, red = depth[:, p:p + 3] @ NODE_WEIGHTS, depth[:, p + 3:] @ NODE_WEIGHTS
+        model = (1.0 - depth[:, :p]) / (1.0 - (blue[:, None] + (red - blue)[:, None] * jobs.share_red))
+        used = jobs.weight > 0
+        rms = np.sqrt((np.where(used, jobs.y - model, 0.0) ** 2).sum(axis=1) / np.maximum(used.sum(axis=1), 1))
+        return blue, red, rms
+
+
+def _value(x: FloatArray, centre: FloatArray, sigma: FloatArray, gamma: FloatArray) -> FloatArray:
+    value = np.empty(x.shape)
+    round_ = gamma[:, 0] <= 0
+    if round_.any():
+        value[round_] = gaussian(x[round_], centre[round_], sigma[round_])[0]
+    if not round_.all():
+        rest = ~round_
+        value[rest] = voigt(x[rest], centre[rest], sigma[rest], gamma[rest])[0]
+    return value
+
+
+def _peak(sigma: FloatArray, gamma: FloatArray) -> tuple[FloatArray, FloatArray, FloatArray]:
+    value, _, by_sigma, by_gamma = voigt(np.zeros_like(sigma), np.zeros_like(sigma), sigma, gamma)
+    return value, by_sigma, by_gamma
+
+
+def _gradient(function: Callable[[FloatArray, FloatArray], FloatArray], sigma: FloatArray,
+              gamma: FloatArray) -> FloatArray:
+    """(j, 4) derivative of a function of (sigma, gamma) by (area, centre, sigma, gamma), central differences."""
+    h = 1e-4 * np.maximum(sigma, 1e-6)
+    zero = np.zeros_like(sigma)
+    by_sigma = (function(sigma + h, gamma) - function(sigma - h, gamma)) / (2 * h)
+    by_gamma = (function(sigma, gamma + h) - function(sigma, np.maximum(gamma - h, 0.0))) \
+        / (h + np.minimum(gamma, h))
+    return np.stack([zero, zero, by_sigma, by_gamma], axis=1)
+
+
+def _lsf_term(sigma: FloatArray, gamma: FloatArray, fwhm: FloatArray, fwhm_err: float) -> FloatArray:
+    if fwhm_err <= 0:
+        return np.zeros_like(sigma)
+    by_lsf = (intrinsic_fwhm(sigma, gamma, fwhm * 1.001) - intrinsic_fwhm(sigma, gamma, fwhm * 0.999)) / (0.002 * fwhm)
+    return (by_lsf * fwhm_err) ** 2
+
+
+def _quadratic(gradient: FloatArray, covariance: FloatArray) -> FloatArray:
+    return np.maximum(np.einsum("ja,jab,jb->j", gradient, covariance, gradient), 0.0)
