@@ -1,0 +1,1 @@
+"""An invented observing run: simulated spectra, their target list, and the truth behind them."""
