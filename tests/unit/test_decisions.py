@@ -10,6 +10,7 @@ import subprocess
 import sys
 
 import pytest
+
 from starfathom import decisions
 from starfathom.classify.errors import RequestError
 from starfathom.decisions import Decision, DecisionLog

@@ -1,0 +1,156 @@
+"""The stars on the desk: read, typed in the background, queued by need, with the decisions about them."""
+
+from __future__ import annotations
+
+import threading
+from collections.abc import Callable, Iterable, Sequence
+from dataclasses import dataclass, field, replace
+from pathlib import Path
+from typing import Any
+
+from starfathom.classify.assignment import Assignment
+from starfathom.classify.errors import SpectrumError
+from starfathom.classify.prepared import Prepared
+from starfathom.classify.spectrum import PlainSpectrum
+from starfathom.decisions import Action, Decision, DecisionLog, file_digest
+from starfathom.desk.needs import MagnitudeGrid, Need, need
+
+#: Stars typed together; small, so that the first is on the page at once.
+BATCH = 12
+
+
+@dataclass
+class Star:
+    """One star of the night. ``assignment`` is None until the machine has had its say."""
+
+    name: str
+    file: str
+    settings: Any
+    spectrum: PlainSpectrum | None = None
+    assignment: Assignment | None = None
+    need: Need = field(default_factory=lambda: Need(0.0, ""))
+    row: dict[str, Any] = field(default_factory=dict)
+    digest: str = ""
+
+    @property
+    def shown(self) -> bool:
+        """True when there is a spectrum to look at."""
+        return self.spectrum is not None
+
+
+class Night:
+    """Every star, the queue through them, and the log of decisions.
+
+    Parameters
+    ----------
+    stars : in the order given
+    classifier : has ``classify_many``, ``prepare``, ``template``, ``standards``, ``library_spectrum``
+    log : where decisions are kept
+    read : reads one file, raising SpectrumError
+    magnitudes : absolute magnitudes of the plane's cells, for the order of the queue
+    """
+
+    def __init__(self, stars: Sequence[Star], classifier: Any, log: DecisionLog,
+                 read: Callable[[str], PlainSpectrum], magnitudes: MagnitudeGrid | None = None) -> None:
+        self.stars = list(stars)
+        self.classifier = classifier
+        self.log = log
+        self.magnitudes = magnitudes
+        self._read = read
+        self.queue: list[int] = list(range(len(self.stars)))
+        self.typed = 0
+        self._lock = threading.Lock()
+        self._prepared: dict[tuple[int, float, float], Prepared] = {}
+
+    # ---- the machine's say ----------------------------------------------------------------------------------------
+
+    def type_all(self, told: Callable[[], None] = lambda: None) -> None:
+        """Read and type every star, batch by batch, calling ``told`` after each."""
+        for start in range(self.typed, len(self.stars), BATCH):
+            self.type_batch(start, min(start + BATCH, len(self.stars)))
+            told()
+
+    def type_batch(self, start: int, stop: int) -> None:
+        """Read and type the stars from ``start`` up to ``stop``."""
+        batch = self.stars[start:stop]
+        spectra: list[PlainSpectrum | SpectrumError] = []
+        for star in batch:
+            try:
+                spectra.append(self._read(star.file))
+            except SpectrumError as error:
+                spectra.append(error)
+            star.digest = file_digest(star.file)
+        with self._lock:
+            said = self.classifier.classify_many(spectra, [s.settings for s in batch])
+        for star, spectrum, assignment in zip(batch, spectra, said):
+            star.spectrum = spectrum if isinstance(spectrum, PlainSpectrum) else None
+            star.assignment = assignment
+            star.need = need(assignment, self.magnitudes)
+        self.typed = stop
+        typed = sorted(range(stop), key=lambda k: (-self.stars[k].need.score, k))
+        self.queue = [*typed, *range(stop, len(self.stars))]
+
+    @property
+    def ready(self) -> bool:
+        """True when the machine has had its say on every star."""
+        return self.typed >= len(self.stars)
+
+    def prepared(self, index: int, blur_angstrom: float = 0.0, nudge_kms: float = 0.0) -> Prepared:
+        """A star made ready to compare, its line spread and velocity nudged by the given amounts.
+
+        Raises
+        ------
+        SpectrumError : the spectrum has too little to compare
+        """
+        key = (index, blur_angstrom, nudge_kms)
+        if key not in self._prepared:
+            star = self.stars[index]
+            if star.spectrum is None:
+                raise SpectrumError(f"{star.file} could not be read")
+            settings = star.settings
+            if nudge_kms:
+                settings = replace(settings, velocity_kms=self.prepared(index).velocity_kms + nudge_kms)
+            with self._lock:
+                ready = self.classifier.prepare(star.spectrum, settings)
+            if blur_angstrom:
+                ready = replace(ready, fwhm_angstrom=max(0.2, ready.fwhm_angstrom + blur_angstrom))
+            if len(self._prepared) > 24:
+                self._prepared.pop(next(iter(self._prepared)))
+            self._prepared[key] = ready
+        return self._prepared[key]
+
+    # ---- the person's say -----------------------------------------------------------------------------------------
+
+    def decisions(self) -> dict[str, Decision]:
+        """The decision that holds for each star that has one."""
+        return self.log.current()
+
+    def undecided(self, decided: Iterable[str] | None = None) -> list[int]:
+        """Stars that can be looked at and have no decision yet, neediest first."""
+        known = set(self.decisions() if decided is None else decided)
+        return [k for k in self.queue if self.stars[k].name not in known and self.stars[k].shown]
+
+    def decide(self, index: int, action: Action, mk_type: str = "", flags: tuple[str, ...] = (), remark: str = "",
+               who: str = "", probability: float | None = None) -> Decision:
+        """Keep a decision about one star, with what the machine had said. Returns it once it is on the disk."""
+        from importlib.metadata import version
+
+        star = self.stars[index]
+        said = star.assignment
+        machine: dict[str, Any] = {"version": version("starfathom")}
+        if said is not None:
+            machine |= {k: getattr(said, k) for k in ("status", "object_kind", "mk_type", "reason")}
+            machine |= {k: _finite(getattr(said, k)) for k in ("t_code", "t_code_err", "lum_code", "lum_code_err")}
+            machine |= {"type_set_90": list(said.type_set_90), "flags": list(said.flags), "probability": probability}
+        return self.log.append(Decision(star.name, action, mk_type, flags, remark, who,
+                                        machine=machine, file=star.file, digest=star.digest))
+
+
+def _finite(x: float) -> float | None:
+    return round(float(x), 3) if x == x else None
+
+
+def name_stars(paths: Sequence[str]) -> list[str]:
+    """Short names for files: without folder and suffix where that keeps them apart, else the path."""
+    names = [Path(p).name.split(".")[0] or Path(p).name for p in paths]
+    return [n if names.count(n) == 1 else str(p) for n, p in zip(names, paths)]

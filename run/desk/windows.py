@@ -1,0 +1,151 @@
+"""Windows on the spectrum: where each criterion looks, and how far a template is from the star there."""
+
+from __future__ import annotations
+
+from collections.abc import Iterable, Sequence
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from starfathom.classify.assignment import Criterion
+from starfathom.classify.prepared import Prepared
+from starfathom.templates.subtypes import LETTERS
+
+FloatArray = NDArray[np.float64]
+
+MARGIN_ANGSTROM = 6.0
+LEAST_WIDTH_ANGSTROM = 30.0
+MOST_WINDOWS = 9
+#: All windows together; more would be too narrow to see on 1280 pixels.
+MOST_ANGSTROM = 420.0
+#: A template is never perfect: its share of the continuum, added to the noise in quadrature, where the classifier
+#: gives no scatter of its own. Common practice; near the scatter of good spectra of one type in the reference library.
+TEMPLATE_SCATTER = 0.012
+
+
+@dataclass(frozen=True)
+class Mark:
+    """A named line or band: where it is, the stretch it is measured over, what it tells.
+
+    ``key`` is its name in the table of features, ``name`` its name for people; ``line`` is False for bands.
+    """
+
+    key: str
+    name: str
+    wave_angstrom: float
+    lo_angstrom: float
+    hi_angstrom: float
+    tells: str = ""
+    line: bool = True
+    types: str = ""
+
+    def serves(self, letter: str) -> bool:
+        """True when the feature tells something in stars of a spectral letter (or says nothing about which)."""
+        letters = [c for c in self.types if c in LETTERS]
+        return not letters or LETTERS.index(letters[0]) <= LETTERS.index(letter) <= LETTERS.index(letters[-1])
+
+
+def known_marks() -> tuple[Mark, ...]:
+    """Every feature of the line stage's table, telluric bands left out."""
+    from starfathom.classify.lines.features import FEATURES
+
+    return tuple(Mark(f.name, f.label, f.wavelength, f.window[0], f.window[1],
+                      f.tells + (f" ({f.types})" if f.types else ""), f.kind != "band", f.types) for f in FEATURES)
+
+
+@dataclass(frozen=True)
+class Window:
+    """One stretch of the spectrum that a criterion, or several, looks at."""
+
+    lo_angstrom: float
+    hi_angstrom: float
+    marks: tuple[Mark, ...]
+    criteria: tuple[str, ...] = ()
+
+    @property
+    def title(self) -> str:
+        return ", ".join(m.name for m in self.marks)
+
+
+def windows_for(evidence: Iterable[Criterion], marks: Sequence[Mark], lo: float, hi: float,
+                most: int = MOST_WINDOWS) -> list[Window]:
+    """The stretches that the evidence rests on, weightiest first to be kept, in order of wavelength.
+
+    Parameters
+    ----------
+    evidence : criteria; those without features add nothing
+    marks : every known feature
+    lo, hi : reach of the spectrum, angstrom; features beyond it are left out
+    most : how many windows at most
+    """
+    known = {m.key: m for m in marks if lo < m.lo_angstrom and m.hi_angstrom < hi}
+    wanted: list[tuple[Mark, str]] = []
+    for criterion in sorted(evidence, key=lambda c: -c.weight):
+        wanted += [(known[f], criterion.name) for f in criterion.features if f in known]
+    windows: list[Window] = []
+    for mark, criterion_name in wanted:
+        spare = max(MARGIN_ANGSTROM, (LEAST_WIDTH_ANGSTROM - (mark.hi_angstrom - mark.lo_angstrom)) / 2)
+        a, b = mark.lo_angstrom - spare, mark.hi_angstrom + spare
+        touching = [w for w in windows if a < w.hi_angstrom and b > w.lo_angstrom]
+        grown = b - a + sum(w.hi_angstrom - w.lo_angstrom for w in windows)
+        if not touching:
+            if len(windows) < most and (grown <= MOST_ANGSTROM or not windows):
+                windows.append(Window(a, b, (mark,), (criterion_name,)))
+            continue
+        for w in touching:
+            windows.remove(w)
+            a, b = min(a, w.lo_angstrom), max(b, w.hi_angstrom)
+        all_marks = {mark, *(m for w in touching for m in w.marks)}
+        names = dict.fromkeys([*(c for w in touching for c in w.criteria), criterion_name])
+        windows.append(Window(a, b, tuple(sorted(all_marks, key=lambda m: m.wave_angstrom)), tuple(names)))
+    return sorted(windows, key=lambda w: w.lo_angstrom)
+
+
+def misfit(prepared: Prepared, template: FloatArray, scatter: FloatArray | float = TEMPLATE_SCATTER) -> FloatArray:
+    """Star less template, in sigmas: noise of the star and imperfection of the template together.
+
+    Returns
+    -------
+    (m,) float array; NaN where either is not valid. Above 0 the star is brighter (its line is weaker).
+    """
+    sigma = np.hypot(prepared.sigma, scatter)
+    ok = prepared.valid & np.isfinite(template) & (sigma > 0)
+    out = np.full(template.shape, np.nan)
+    out[ok] = (prepared.rectified[ok] - template[ok]) / sigma[ok]
+    return out
+
+
+def rms(sigmas: FloatArray) -> float:
+    """Root mean square of the misfit over the valid pixels; NaN when there are none."""
+    ok = np.isfinite(sigmas)
+    return float(np.sqrt(np.mean(sigmas[ok] ** 2))) if ok.any() else float("nan")
+
+
+def within(wave: FloatArray, window: Window) -> slice:
+    """The pixels of a window."""
+    a, b = np.searchsorted(wave, [window.lo_angstrom, window.hi_angstrom])
+    return slice(int(a), int(b))
+
+
+def choose_marks(marks: Sequence[Mark], wave: FloatArray, template: FloatArray, lo: float, hi: float,
+                 letter: str, most: int = 26) -> list[Mark]:
+    """The features to name on a plot: those that are deep (or high) in the template, none too near another.
+
+    ``lo`` to ``hi`` is the stretch on view, names keep 1/32 of it apart; ``letter`` is the spectral letter.
+    """
+    gap = (hi - lo) / 32.0
+    depth = []
+    for m in marks:
+        if "Lick" in m.name or not m.serves(letter) or not lo + 0.3 * gap < m.wave_angstrom < hi - 0.3 * gap:
+            continue
+        near = np.abs(wave - m.wave_angstrom) < 4.0
+        values = template[near]
+        values = values[np.isfinite(values)]
+        if len(values):
+            depth.append((float(np.max(np.abs(1.0 - values))), m))
+    chosen: list[Mark] = []
+    for d, m in sorted(depth, key=lambda x: -x[0]):
+        if d > 0.02 and len(chosen) < most and all(abs(m.wave_angstrom - c.wave_angstrom) > gap for c in chosen):
+            chosen.append(m)
+    return sorted(chosen, key=lambda m: m.wave_angstrom)
