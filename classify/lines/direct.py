@@ -48,7 +48,7 @@ class BulkLines:
     gappy : bad pixels inside the window were interpolated
     telluric : overlaps a telluric band
     too_coarse : the line spread is wider than the feature's coarsest
-    width_at : (n, f, 3) full width at depths 0.1, 0.2, 0.3; only for features with ``wings``, else NaN
+    width_at, width_at_err : (n, f, 3) full width at depths 0.1, 0.2, 0.3; only for features with ``wings``, else NaN
     fwhm_angstrom : (n,) line spread
     band_var : (n, f, 2) variance of the blue and red side-band means (all in one where the other is missing)
     filled_flux, sigma, good : (n, m) what was measured: flux interpolated over bad pixels, its error, usable pixels
@@ -70,6 +70,7 @@ class BulkLines:
     telluric: BoolArray
     too_coarse: BoolArray
     width_at: FloatArray
+    width_at_err: FloatArray
     fwhm_angstrom: FloatArray
     band_var: FloatArray = field(repr=False)
     filled_flux: FloatArray = field(repr=False)
@@ -146,7 +147,7 @@ def measure_many(
             for name, value in block.items():
                 out[name][rows] = value
             if wings:
-                _measure_wings(plan, features, wave, filled[rows], out, rows, float(key))
+                _measure_wings(plan, features, wave, filled[rows], noise[rows], out, rows, float(key))
     coarsest = np.array([x.coarsest_fwhm for x in features])
     return BulkLines(
         features=features, telluric=_telluric(features, np.broadcast_to(velocity_kms, (n,))),
@@ -163,6 +164,7 @@ def _empty(n: int, f: int) -> dict[str, FloatArray]:
     names = ("ew", "ew_err", "depth", "depth_err", "continuum", "continuum_err", "blue", "red", "width", *_FLAGS)
     out = {name: np.full((n, f), np.nan if name not in _FLAGS else 0.0) for name in names}
     out["width_at"] = np.full((n, f, len(FIXED_DEPTHS)), np.nan)
+    out["width_at_err"] = np.full((n, f, len(FIXED_DEPTHS)), np.nan)
     out["band_var"] = np.zeros((n, f, 2))
     return out
 
@@ -242,7 +244,7 @@ def _measure(plan: WindowPlan, flux: FloatArray, sigma: FloatArray, valid: BoolA
 
     w = plan.window
     out = _empty(n, f)
-    del out["width_at"]
+    del out["width_at"], out["width_at_err"]
     with np.errstate(invalid="ignore", divide="ignore"):
         b, r = blue[:, w.which], red[:, w.which]
         level = w.spread(b)
@@ -304,7 +306,7 @@ def _measure(plan: WindowPlan, flux: FloatArray, sigma: FloatArray, valid: BoolA
 
 
 def _measure_wings(plan: WindowPlan, features: FeatureTable, wave: FloatArray, flux: FloatArray,
-                   out: dict[str, FloatArray], part: NDArray[np.intp], fwhm: float) -> None:
+                   sigma: FloatArray, out: dict[str, FloatArray], part: NDArray[np.intp], fwhm: float) -> None:
     """Full widths at fixed depths, read off the lightly smoothed data outward from the line's core."""
     starts = dict(zip(plan.window.which.tolist(), zip(plan.window.starts.tolist(), plan.window.count.tolist())))
     for k, feature in enumerate(features):
@@ -317,9 +319,13 @@ def _measure_wings(plan: WindowPlan, features: FeatureTable, wave: FloatArray, f
         level = blue[:, None] * (1 - share) + red[:, None] * share
         with np.errstate(invalid="ignore", divide="ignore"):
             depth = 1.0 - flux[:, pixels] / level
+            noise = sigma[:, pixels] / level
+            band = np.sqrt((out["band_var"][part, k] * 0.25).sum(axis=1)) / level.mean(axis=1)
         x = wave[pixels]
         span = max(1, round(fwhm / float(np.diff(x).mean())) | 1)
-        out["width_at"][part, k] = widths_at_depths(x, _running_mean(depth, span), feature.wavelength)
+        widths, errors = widths_at_depths(x, _running_mean(depth, span), noise / np.sqrt(span), band,
+                                          feature.wavelength)
+        out["width_at"][part, k], out["width_at_err"][part, k] = widths, errors
 
 
 def _running_mean(values: FloatArray, span: int) -> FloatArray:
@@ -331,12 +337,13 @@ def _running_mean(values: FloatArray, span: int) -> FloatArray:
     return (total[:, span:] - total[:, :-span]) / span
 
 
-def widths_at_depths(x: FloatArray, depth: FloatArray, centre: float,
-                     depths: tuple[float, ...] = FIXED_DEPTHS) -> FloatArray:
+def widths_at_depths(x: FloatArray, depth: FloatArray, noise: FloatArray, continuum_err: FloatArray, centre: float,
+                     depths: tuple[float, ...] = FIXED_DEPTHS) -> tuple[FloatArray, FloatArray]:
     """Full widths (n, k) where ``depth`` (n, p) first falls below each of ``depths`` on both sides of the core.
 
     The core is the deepest of the pixels within 4 A of ``centre``. 0 where the core is not that deep, NaN where the
-    line is still deeper at the window's edge.
+    line is still deeper at the window's edge. The errors, second, are those of the depth, ``noise`` (n, p) and the
+    relative ``continuum_err`` (n,), over the slope of the profile at the crossings.
     """
     n, p = depth.shape
     near = np.flatnonzero(np.abs(x - centre) <= 4.0)
@@ -344,7 +351,8 @@ def widths_at_depths(x: FloatArray, depth: FloatArray, centre: float,
         near = np.array([int(np.argmin(np.abs(x - centre)))])
     peak = near[np.argmax(np.nan_to_num(depth[:, near], nan=-np.inf), axis=1)]
     rows, columns = np.arange(n), np.arange(p)
-    out = np.full((n, len(depths)), np.nan)
+    widths, errors = np.full((n, len(depths)), np.nan), np.full((n, len(depths)), np.nan)
+    top = depth[rows, peak]
     for j, d in enumerate(depths):
         below = depth < d
         right = below & (columns > peak[:, None])
@@ -354,13 +362,25 @@ def widths_at_depths(x: FloatArray, depth: FloatArray, centre: float,
         found = (i_right > 0) & (i_left >= 0)
         ir, il = np.clip(i_right, 1, p - 1), np.clip(i_left, 0, p - 2)
         with np.errstate(invalid="ignore", divide="ignore"):
-            hi = x[ir] + (d - depth[rows, ir]) / (depth[rows, ir - 1] - depth[rows, ir]) * (x[ir - 1] - x[ir])
-            lo = x[il] + (d - depth[rows, il]) / (depth[rows, il + 1] - depth[rows, il]) * (x[il + 1] - x[il])
-        width = np.where(found, hi - lo, np.nan)
-        top = depth[rows, peak]
-        out[:, j] = np.where(top < d, 0.0, width)
-        out[~np.isfinite(top), j] = np.nan
-    return out
+            slope_r = (depth[rows, ir] - depth[rows, ir - 1]) / (x[ir] - x[ir - 1])
+            slope_l = (depth[rows, il + 1] - depth[rows, il]) / (x[il + 1] - x[il])
+            hi = x[ir] + (d - depth[rows, ir]) / slope_r
+            lo = x[il] + (d - depth[rows, il]) / slope_l
+            # the slope over a wider base: between two pixels noise can make it anything
+            wide_r = _slope(x, depth, rows, ir)
+            wide_l = _slope(x, depth, rows, il)
+            random = np.hypot(noise[rows, ir] / wide_r, noise[rows, il] / wide_l)
+            common = continuum_err * (1.0 - d) * (1.0 / np.abs(wide_r) + 1.0 / np.abs(wide_l))
+        absent = top < d
+        widths[:, j] = np.where(absent, 0.0, np.where(found, hi - lo, np.nan))
+        errors[:, j] = np.where(absent, np.nan, np.where(found, np.hypot(random, common), np.nan))
+        widths[~np.isfinite(top), j] = np.nan
+    return widths, errors
+
+
+def _slope(x: FloatArray, depth: FloatArray, rows: NDArray[np.intp], at: NDArray[np.intp]) -> FloatArray:
+    lo, hi = np.maximum(at - 2, 0), np.minimum(at + 2, x.size - 1)
+    return (depth[rows, hi] - depth[rows, lo]) / (x[hi] - x[lo])
 
 
 @lru_cache(maxsize=16)

@@ -72,6 +72,11 @@ class Ties:
     def per_component(self) -> int:
         return 4 if self.is_voigt else 3
 
+    @property
+    def areas(self) -> BoolArray:
+        """Which fitted numbers are areas, (q,)."""
+        return np.asarray(self.matrix[:, ::self.per_component].any(axis=1))
+
 
 def tie(components: int, is_voigt: bool, shared: bool) -> Ties:
     """Free components, or (``shared``) one shift and one width for all: fitted = areas, shift, sigma(, gamma)."""
@@ -91,7 +96,7 @@ def tie(components: int, is_voigt: bool, shared: bool) -> Ties:
 class Fits:
     """Result of a batch: ``full`` (j, k, s) parameters, ``covariance`` (j, k s, k s), ``chi2``, ``dof``, ``free``.
 
-    ``converged`` is False where the steps ran out or a free parameter ended on its bound (gamma = 0 excepted).
+    ``converged`` is False where the steps ran out or a free parameter ended on its bound (zero excepted).
     """
 
     full: FloatArray
@@ -172,7 +177,6 @@ def fit_jobs(jobs: Jobs, start: FloatArray, base: FloatArray, ties: Ties, low: F
     done = ~np.isfinite(chi2)
     converged = np.zeros(count, bool)
     live = np.flatnonzero(~done)
-    telling = ~_gammas(ties)
     part = jobs
     if live.size < count:
         part, hessian, gradient = jobs.take(live), hessian[live], gradient[live]
@@ -207,7 +211,7 @@ def fit_jobs(jobs: Jobs, start: FloatArray, base: FloatArray, ties: Ties, low: F
         if attempt >= _PATIENCE:
             # centre or width still pressed against its bound: no line of this kind in the window, give up
             pressed = (fitted[live] <= low[live]) | (fitted[live] >= high[live])
-            finished |= (pressed & (low[live] < high[live]) & telling).any(axis=1)
+            finished |= (pressed & ~_may_rest(fitted[live], low[live], high[live])).any(axis=1)
         keep = ~finished
         if not keep.all():
             live, hessian, gradient = live[keep], hessian[keep], gradient[keep]
@@ -215,11 +219,9 @@ def fit_jobs(jobs: Jobs, start: FloatArray, base: FloatArray, ties: Ties, low: F
     return _finish(jobs, fitted, base, ties, low, high, converged, correlation)
 
 
-def _gammas(ties: Ties) -> BoolArray:
-    """Which fitted numbers are Lorentzian widths, (q,)."""
-    if not ties.is_voigt:
-        return np.zeros(ties.matrix.shape[0], bool)
-    return np.asarray(ties.matrix[:, 3::4].any(axis=1))
+def _may_rest(fitted: FloatArray, low: FloatArray, high: FloatArray) -> BoolArray:
+    """Bounds that are an answer, not a failure: zero (no Lorentzian part, no such component), or a held number."""
+    return (fitted == 0.0) | (low >= high)
 
 
 def _finish(jobs: Jobs, fitted: FloatArray, base: FloatArray, ties: Ties, low: FloatArray, high: FloatArray,
@@ -228,8 +230,10 @@ def _finish(jobs: Jobs, fitted: FloatArray, base: FloatArray, ties: Ties, low: F
     hessian, _, chi2 = _normal(jobs, model, jacobian)
     size = hessian.shape[1]
     on_bound = (fitted <= low) | (fitted >= high)
-    is_gamma = _gammas(ties)
     index = np.arange(size)
+    stuck = (on_bound & ~_may_rest(fitted, low, high)).any(axis=1)
+    # an area resting at zero keeps its own error
+    on_bound &= ~(ties.areas & (low < high))
     masked = np.where(on_bound[:, :, None] | on_bound[:, None, :], 0.0, hessian)
     masked[:, index, index] += np.where(on_bound, 1.0, 0.0)
     scale = 1.0 / np.sqrt(np.maximum(np.einsum("jii->ji", masked), 1e-300))
@@ -256,4 +260,4 @@ def _finish(jobs: Jobs, fitted: FloatArray, base: FloatArray, ties: Ties, low: F
     pixels = (jobs.weight > 0).sum(axis=1).astype(float)
     return Fits(full=full, covariance=np.einsum("qa,jqr,rb->jab", ties.matrix, covariance, ties.matrix), chi2=chi2,
                 dof=np.maximum(pixels - size, 1.0), free=size, pixels=pixels,
-                converged=converged & ~(on_bound & ~is_gamma & (low < high)).any(axis=1) & np.isfinite(chi2))
+                converged=converged & ~stuck & np.isfinite(chi2))

@@ -28,6 +28,12 @@ IntArray = NDArray[np.intp]
 DETECTION_SIGMA = 3.0
 #: Below this nobody would see a line, and none is fitted freely.
 _TRACE_SIGMA = 2.0
+#: A fit with centre and width held is passed on only up to this chi2 per degree of freedom.
+_HELD_MISFIT = 3.0
+#: Nothing can be narrower than this share of the line spread; what is, is a spike or a gap between neighbours.
+_NARROWEST = 0.8
+#: Components closer than this share of the line spread share one width and shift.
+_PARTED = 0.7
 #: Below this significance a Voigt profile is not tried: its extra number could not be told.
 _VOIGT_SIGMA = 5.0
 #: A profile with more numbers must win by this much in the criterion: strong evidence (Kass & Raftery 1995).
@@ -48,7 +54,7 @@ class BulkFits:
     intrinsic, intrinsic_err : the same with the instrument taken out; the 3-sigma upper limit where ``unresolved``
     depth, depth_err : central depth of the profile
     sigma, gamma : Gaussian sigma and Lorentzian half width of the profile (gamma 0 for a Gaussian)
-    width_at : (n, c, 3) full width of the profile at depths 0.1, 0.2, 0.3
+    width_at, width_at_err : (n, c, 3) full width of the profile at depths 0.1, 0.2, 0.3
     chi2, dof : of the window, shared by the components of a blend
     residual_rms : scatter of the normalised residuals in the window
     voigt : the Voigt profile won by the information criterion
@@ -74,6 +80,7 @@ class BulkFits:
     sigma: FloatArray
     gamma: FloatArray
     width_at: FloatArray
+    width_at_err: FloatArray
     chi2: FloatArray
     dof: FloatArray
     residual_rms: FloatArray
@@ -116,6 +123,7 @@ def fit_many(wave_angstrom: FloatArray, lines: BulkLines, *, profiles: Sequence[
     c = len(labels)
     out = {name: np.full((n, c), np.nan) for name in _FLOATS}
     out["width_at"] = np.full((n, c, len(FIXED_DEPTHS)), np.nan)
+    out["width_at_err"] = np.full((n, c, len(FIXED_DEPTHS)), np.nan)
     flags = {name: np.zeros((n, c), bool) for name in ("unresolved", "voigt", "detected", "held")}
     rho = None if correlation is None else np.atleast_2d(np.asarray(correlation, float))
     for batch in _batches(wave, lines, first):
@@ -236,6 +244,9 @@ def _fit_batch(wave: FloatArray, lines: BulkLines, slots: list[_Slot], profiles:
     drift = np.where(is_wide, 6.0, np.maximum(2.0, fwhm))
     gaps = np.diff(jobs.offsets, axis=1).min(axis=1) if k > 1 else np.full(j, np.inf)
     drift = np.minimum(drift, np.maximum(0.5 * gaps, 0.75 * fwhm))
+    # where components merge, a shift would trade one for the other: they stay at rest
+    merged = gaps < _PARTED * fwhm
+    drift[merged] = 0.0
     correlation = None if rho is None else (rho[row] if rho.shape[0] > 1 else rho)
 
     best = _Best(j, k)
@@ -245,7 +256,7 @@ def _fit_batch(wave: FloatArray, lines: BulkLines, slots: list[_Slot], profiles:
             return
         ties = tie(k, is_voigt, shared)
         start, low, high, base = _setup(ties, jobs.offsets[rows], areas[rows], width[rows], drift[rows], window[rows],
-                                        step[rows], shared, best.full[rows] if is_voigt else None)
+                                        step[rows], merged[rows], shared, best.full[rows] if is_voigt else None)
         if held:
             for i, value in ((k, np.zeros(rows.size)), (k + 1, spread[rows])):
                 start[:, i] = low[:, i] = high[:, i] = value
@@ -263,21 +274,23 @@ def _fit_batch(wave: FloatArray, lines: BulkLines, slots: list[_Slot], profiles:
     held = best
     best = _Best(j, k)
     attempt(False, True, everyone[trace])
-    apart = everyone[trace & (gaps >= 0.7 * fwhm)] if k > 1 else everyone[:0]
+    apart = everyone[trace & ~merged] if k > 1 else everyone[:0]
     attempt(False, False, apart)
     if "voigt" in profiles:
-        strong = best.significance().max(axis=1) >= _VOIGT_SIGMA
+        strong = np.maximum(best.significance().max(axis=1), best.total_significance()) >= _VOIGT_SIGMA
         strong &= (jobs.weight > 0).sum(axis=1) >= 3 * k + 3
         attempt(True, True, everyone[strong])
         attempt(True, False, apart[strong[apart]])
-    seen = (best.significance() >= DETECTION_SIGMA) & best.converged[:, None]
-    lost = ~seen.any(axis=1)
+    # components that cannot be parted are each uncertain while their sum is not
+    seen = (best.significance().max(axis=1) >= DETECTION_SIGMA) | (best.total_significance() >= DETECTION_SIGMA)
+    lost = ~(seen & best.converged)
     best.take(everyone[lost], held)
-    best.store(jobs, row, column, fwhm, fwhm_err, fixed_depths, lost, out, flags)
+    rest = np.array([lines.features[f].wavelength for f in feature_of])
+    best.store(jobs, row, column, rest, fwhm, fwhm_err, fixed_depths, lost, out, flags)
 
 
 def _setup(ties: Ties, offsets: FloatArray, areas: FloatArray, width: FloatArray, drift: FloatArray,
-           window: FloatArray, step: FloatArray, shared: bool,
+           window: FloatArray, step: FloatArray, merged: BoolArray, shared: bool,
            known: FloatArray | None) -> tuple[FloatArray, FloatArray, FloatArray, FloatArray]:
     """Start, bounds and base of the fitted numbers; ``known`` (j, k, 4) are the Gaussian results to start from."""
     j, k = offsets.shape
@@ -294,6 +307,10 @@ def _setup(ties: Ties, offsets: FloatArray, areas: FloatArray, width: FloatArray
         full[..., 2] *= 0.8
     low, high = np.zeros_like(full), np.zeros_like(full)
     low[:, :, 0], high[:, :, 0] = -3.0 * window[:, None], 3.0 * window[:, None]
+    # components too close to be parted must at least agree in sign, or they cancel without limit
+    total = areas.sum(axis=1)
+    low[merged & (total >= 0), :, 0] = 0.0
+    high[merged & (total < 0), :, 0] = 0.0
     low[:, :, 1], high[:, :, 1] = -drift[:, None], drift[:, None]
     low[:, :, 2], high[:, :, 2] = 0.3 * step[:, None], np.maximum(window / 3.0, 2.0 * width)[:, None]
     if size == 4:
@@ -313,7 +330,7 @@ class _Best:
     def __init__(self, jobs: int, components: int) -> None:
         self.full = np.full((jobs, components, 4), np.nan)
         self.covariance = np.full((jobs, components, 4, 4), np.nan)
-        self.chi2, self.dof, self.score = (np.full(jobs, np.nan) for _ in range(3))
+        self.chi2, self.dof, self.total_err = (np.full(jobs, np.nan) for _ in range(3))
         self.free = np.zeros(jobs)
         self.pixels = np.ones(jobs)
         self.voigt = np.zeros(jobs, bool)
@@ -322,6 +339,10 @@ class _Best:
     def significance(self) -> FloatArray:
         with np.errstate(invalid="ignore", divide="ignore"):
             return np.nan_to_num(np.abs(self.full[:, :, 0]) / np.sqrt(self.covariance[:, :, 0, 0]), posinf=0.0)
+
+    def total_significance(self) -> FloatArray:
+        with np.errstate(invalid="ignore", divide="ignore"):
+            return np.nan_to_num(np.abs(self.full[:, :, 0].sum(axis=1)) / self.total_err, posinf=0.0)
 
     def offer(self, rows: IntArray, fits: Fits, ties: Ties) -> None:
         """Take the fit where it beats what is known.
@@ -344,6 +365,8 @@ class _Best:
         for i in range(k):
             block = slice(i * size, (i + 1) * size)
             self.covariance[at, i, :size, :size] = fits.covariance[wins, block, block]
+        between = fits.covariance[wins][:, ::size, ::size]
+        self.total_err[at] = np.sqrt(np.maximum(between.sum(axis=(1, 2)), 0.0))
         self.chi2[at], self.dof[at], self.free[at] = fits.chi2[wins], fits.dof[wins], fits.free
         self.pixels[at], self.converged[at] = fits.pixels[wins], fits.converged[wins]
         self.voigt[at] = ties.is_voigt
@@ -353,7 +376,7 @@ class _Best:
         for name, mine in vars(self).items():
             mine[rows] = getattr(other, name)[rows]
 
-    def store(self, jobs: Jobs, row: IntArray, column: IntArray, fwhm: FloatArray, fwhm_err: float,
+    def store(self, jobs: Jobs, row: IntArray, column: IntArray, rest: FloatArray, fwhm: FloatArray, fwhm_err: float,
               fixed_depths: bool, lost: BoolArray, out: dict[str, FloatArray], flags: dict[str, BoolArray]) -> None:
         """Turn parameters into what is tabulated and write them to rows and columns of ``out`` and ``flags``."""
         significance = self.significance()
@@ -370,32 +393,36 @@ class _Best:
             grad_width = _gradient(voigt_fwhm, sigma, gamma)
             inner = intrinsic_fwhm(sigma, gamma, fwhm)
             grad_inner = _gradient(lambda s, g: intrinsic_fwhm(s, g, fwhm), sigma, gamma)
-            inner_var = _quadratic(grad_inner, cov) + _lsf_term(sigma, gamma, fwhm, fwhm_err)
+            inner_var = _quadratic(grad_inner, cov) + _lsf_variance(sigma, gamma, fwhm, fwhm_err)
             # an unresolved width is known through its square: w^2 - I^2 with error 2 w s(w)
             width_err = np.sqrt(_quadratic(grad_width, cov))
+            detected &= width + 2.0 * width_err >= _NARROWEST * fwhm
             square = np.maximum(width**2 - fwhm**2, 0.0)
             square_err = 2.0 * np.hypot(width * width_err, fwhm * fwhm_err)
             narrow = square < 3.0 * square_err
             limit = np.sqrt(square + 3.0 * square_err)
             shown = {
-                "ew": area, "ew_err": np.sqrt(cov[:, 0, 0]), "center": centre, "center_err": np.sqrt(cov[:, 1, 1]),
+                "ew": area, "ew_err": np.sqrt(cov[:, 0, 0]), "center": rest + centre, "center_err": np.sqrt(cov[:, 1, 1]),
                 "fwhm": width, "fwhm_err": width_err, "depth": area * peak,
-                "depth_err": np.sqrt(_quadratic(grad_depth, cov)), "intrinsic": np.where(narrow, limit, inner),
+                "depth_err": np.sqrt(_quadratic(grad_depth, cov)),
+                "intrinsic": np.where(narrow, limit, inner),
                 "intrinsic_err": np.where(narrow, np.nan, np.sqrt(inner_var)), "sigma": sigma, "gamma": gamma,
                 "chi2": self.chi2, "dof": self.dof, "residual_rms": rms, "blue_loss": loss_blue, "red_loss": loss_red}
             only_seen = ("center", "center_err", "fwhm", "fwhm_err", "depth", "depth_err", "intrinsic", "intrinsic_err",
                          "sigma", "gamma")
-            usable = self.converged
+            # a held profile that does not explain its window says nothing of the line
+            usable = self.converged & ~(lost & (self.chi2 > _HELD_MISFIT * self.dof))
             for name, value in shown.items():
                 out[name][at] = np.where(detected if name in only_seen else usable, value, np.nan)
             flags["detected"][at], flags["voigt"][at] = detected, self.voigt & detected
             flags["unresolved"][at], flags["held"][at] = narrow & detected, lost & usable
-            if fixed_depths:
+            if fixed_depths and detected.any():
+                w = np.flatnonzero(detected)
                 for d, depth in enumerate(FIXED_DEPTHS):
-                    value = np.full(row.size, np.nan)
-                    if detected.any():
-                        value[detected] = width_at_depth(area[detected], sigma[detected], gamma[detected], depth)
-                    out["width_at"][row, column + i, d] = value
+                    value = width_at_depth(area[w], sigma[w], gamma[w], depth)
+                    out["width_at"][row[w], column[w] + i, d] = value
+                    out["width_at_err"][row[w], column[w] + i, d] = _width_at_err(
+                        value, area[w], sigma[w], gamma[w], cov[w])
 
     def _residuals(self, jobs: Jobs) -> tuple[FloatArray, FloatArray, FloatArray]:
         x = np.concatenate([jobs.x, jobs.nodes.reshape(-1, 6)], axis=1)
@@ -438,7 +465,17 @@ def _gradient(function: Callable[[FloatArray, FloatArray], FloatArray], sigma: F
     return np.stack([zero, zero, by_sigma, by_gamma], axis=1)
 
 
-def _lsf_term(sigma: FloatArray, gamma: FloatArray, fwhm: FloatArray, fwhm_err: float) -> FloatArray:
+def _width_at_err(width: FloatArray, area: FloatArray, sigma: FloatArray, gamma: FloatArray,
+                  cov: FloatArray) -> FloatArray:
+    """Error of a width at a fixed depth: the depth's error there over the profile's slope, both sides moving alike."""
+    value, by_centre, by_sigma, by_gamma = voigt(0.5 * width, np.zeros_like(width), sigma, gamma)
+    gradient = np.stack([value, np.zeros_like(width), area * by_sigma, area * by_gamma], axis=1)
+    with np.errstate(divide="ignore", invalid="ignore"):
+        error = 2.0 * np.sqrt(_quadratic(gradient, cov)) / np.abs(area * by_centre)
+    return np.where(width > 0, error, np.nan)
+
+
+def _lsf_variance(sigma: FloatArray, gamma: FloatArray, fwhm: FloatArray, fwhm_err: float) -> FloatArray:
     if fwhm_err <= 0:
         return np.zeros_like(sigma)
     by_lsf = (intrinsic_fwhm(sigma, gamma, fwhm * 1.001) - intrinsic_fwhm(sigma, gamma, fwhm * 0.999)) / (0.002 * fwhm)
