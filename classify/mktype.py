@@ -32,9 +32,9 @@ _METALLIC = re.compile(rf"(?:[khm]{_TYPE}(?:[-/]{_TYPE})?:?){{2,3}}")
 _METAL_SUFFIX = re.compile(rf"\s?m{_TYPE}(?:[-/](?:{_TYPE}|\d(?:\.\d)?))?:?")
 _CLASS = re.compile(
     r"0-Ia|Ia-0|Ia\s?0|Ia\+(?!\s*[OBAFGKMWDCSLT](?:\d|$|\s|[A-Z-]))|Iab|Ia|Ib|III|II|IV|VII|VI|V|I|0(?![.\d])")
-_CLASS_LETTERS = re.compile(r"(?:ab|a|b)[+-]?(?![a-z])|(?:ab|a|b)[+-]?(?=[enpms(]|var)")
+_CLASS_LETTERS = re.compile(r"(?:ab|a|b)[+-]?(?=[enpms(]|var)|(?:ab|a|b)[+-]?(?![a-z])")
 _COMPANION = re.compile(
-    r"\+\s*(?=(?:sd|esd|usd|sg|[dgckh])?[OBAFGKM](?:\d|\(|[IV/:?+-]|[emp]?(?:$|[\s+)]))|W[NCOR]\d?|WD|D[ABCOQZX]|C[-\d]|S\d|[LTY]\d|sd[OB])")
+    r"\+\s*(?=(?:sd|esd|usd|sg|[dgckh])?[OBAFGKM](?:\d|\(|[IV/:?+-]|[NC]\d|[emp]?(?:$|[\s+)]))|W[NCOR]\d?|WD|D[ABCOQZX]|C[-\d]|S\d|[LTY]\d|sd[OB])")
 _WHITE_DWARF = re.compile(r"(?:D[ABCOQZX][ABCOQZXPHVEe]{0,5}|WD)(?![a-df-z])\s?(\d{0,2}(?:\.\d{1,2})?)")
 _WOLF_RAYET = re.compile(r"(WN/WC|WN/C|WNL|WNE|WCL|WCE|WN|WC|WO|WR)(?![a-gi-z])\s?(\d{1,2}(?:\.\d)?(?:[-/]\d{1,2}(?:\.\d)?)?)?")
 _CARBON = re.compile(r"C-?(?:Hd|[NRJH])(?![a-z])\s?(\d(?:\.\d)?(?:[-/]\d(?:\.\d)?)?)?|C\s?(\d(?:\.\d)?)(?:[-,/](?:\d(?:\.\d)?))?(?:J|e|ch)?|[RN](\d)(?![\d.])|C$")
@@ -43,7 +43,7 @@ _ULTRACOOL = re.compile(r"(?:esd|usd|sd|d)?([LTY])(\d(?:\.\d)?)(?:[-/][LTY]?\d(?
 _HOT_SUBDWARF = re.compile(r"(?:He-?)?sd(OBA?|OA|O|B)(\d(?:\.\d)?)?(?![A-Z])")
 
 _ABUNDANCE = (r"(?:HgMn|SrCrEu|SiSrCr|CrEuSr|EuCrSr|SrEuCr|CN|CH|C2|Ca|Fe|Si|Sr|Cr|Eu|Mn|Hg|Ba|Ti|Mg|He|Li|Zr|La|Ce|Nd|Na|Ni|OB|SB[12]?"
-              r"|[CNOPYGH](?=[-+]?\d|wk|str|-rich|weak|$|\s))(?:[-+]?\d(?:\.\d{1,2})?|[-+](?!\S))?"
+              r"|[CNOPYH](?=[-+]?\d|wk|str|-rich|weak|$|\s))(?:[-+]?\d(?:\.\d{1,2})?|[-+](?!\S))?"
               r"(?:-?(?:strong|weak|str|wk|st|rich|r|s|w|p|n))?")
 _TOKEN = re.compile(
     r"\(\([^()]{1,20}\)\)|\([^()]{1,30}\)|\[[^\[\]]{1,12}\]"
@@ -350,6 +350,8 @@ def _ordinary(piece: str, whole: str) -> MKType | None:
         found = MKType(prefix + "OB" + step, "O", NAN, "B", NAN, lum, piece[end:].strip(), prefix)
         return None if found.rest else found
     text, at = prefix + letter, at + 1
+    if letter in "OB" and piece[at : at + 1] in ("N", "C") and piece[at + 1 : at + 2].isdigit():
+        text, at = text + piece[at], at + 1   # nitrogen and carbon sequences: ON9.7, BC1.5
     digits = _SUBTYPE.match(piece, at + (piece[at : at + 1] == " " and piece[at + 1 : at + 2].isdigit()))
     subtype = NAN
     letter_hi, subtype_hi = letter, NAN

@@ -9,9 +9,10 @@ import numpy as np
 from starfathom.classify.errors import SpectrumError
 from starfathom.classify.reading import dispersion, fitsio, hints
 from starfathom.classify.reading.fitsio import FitsBeyond, FitsError, Hdu
-from starfathom.classify.reading.names import log_of, role_of, split_unit
+from starfathom.classify.reading.names import is_companion, log_of, role_of, split_unit
 from starfathom.classify.reading.raw import ErrorKind, RawSpectrum
 from starfathom.classify.reading.request import Request
+from starfathom.classify.reading.text import in_reach, is_steady
 from starfathom.classify.spectrum import FloatArray
 
 #: Most rows an image may have and still count as one spectrum with its companions (error, sky ...).
@@ -276,6 +277,8 @@ def _from_table(hdu: Hdu, units: list[Hdu], request: Request) -> RawSpectrum | t
     all_columns = [c for c in fitsio.columns(hdu)]
     usable = [c for c in all_columns if c.code not in "AXCM"]
     picked = _pick(usable, request, hdu)
+    if "wave" not in picked or "flux" not in picked:
+        _pick_by_values(picked, usable, hdu)
     wave, flux = picked.get("wave"), picked.get("flux")
     names = ", ".join(c.name for c in all_columns[:12])
     axis: dispersion.Axis | None = None
@@ -351,6 +354,27 @@ def _pick(columns: list[fitsio.Column], request: Request, hdu: Hdu) -> dict[str,
                 out.pop(other, None)
         out[role] = match[0]
     return out
+
+
+def _pick_by_values(picked: dict[str, fitsio.Column], columns: list[fitsio.Column], hdu: Hdu) -> None:
+    """Where names tell nothing: the first steady column in reach is the wavelength, the next of its size the flux."""
+    if not hdu.complete or hdu.header.whole("NAXIS2") > 5_000_000:
+        return
+    if "wave" not in picked and "COEFF0" not in hdu.header and "CRVAL1" not in hdu.header:
+        for column in columns[:8]:
+            if column in picked.values() or column.pointer:
+                continue
+            values = fitsio.column_values(hdu, column)
+            if min(values.shape) == 1 and values.size >= 10 and is_steady(values.ravel()) and in_reach(values.ravel()):
+                picked["wave"] = column
+                break
+    if "wave" in picked and "flux" not in picked:
+        wave = picked["wave"]
+        for column in columns[columns.index(wave) + 1 :] + columns[: columns.index(wave)]:
+            if column not in picked.values() and column.repeat == wave.repeat and role_of(column.name)[0] == "other" \
+                    and not is_companion(column.name):
+                picked["flux"] = column
+                break
 
 
 def _cells(hdu: Hdu, column: fitsio.Column, request: Request) -> Any:

@@ -109,7 +109,7 @@ def text_medium(text: str) -> Medium:
             continue
         vac, air = bool(_VACUUM.search(line)), bool(_AIR.search(line))
         if vac and air:
-            turned = re.search(r"(converted|corrected|transformed|shifted|changed)?\s*(from)?\s*\b(air|vac(?:uum)?)\b[\w ]{0,20}\b(?:to|into|->|2)\s+(?:the\s+)?(air|vac(?:uum)?)\b", line, re.I)
+            turned = re.search(r"(converted|corrected|transformed|shifted|changed)?\s*(from)?\s*\b(air|vac(?:uum)?)\b[\w ]{0,40}\b(?:to|into|->|2)\s+(?:the\s+)?(air|vac(?:uum)?)\b", line, re.I)
             negated = re.search(r"\b(not|no|non)[ -]+(in )?(vac(?:uum)?|air)\b", line, re.I)
             if turned:
                 found.add("vacuum" if turned.group(4).lower().startswith("vac") else "air")

@@ -71,7 +71,7 @@ def role_of(name: str) -> tuple[Role, int]:
         return "var", 9
     wave = glued in _WAVE or glued in _LOG_WAVE or bool(set(words) & (_WAVE - {"w", "l", "x"}))
     if wave and not (set(words) & (_STD_WORDS | set(_FLUX) - {"data", "int", "i", "s", "y", "object", "spec", "f", "f"})):
-        return "wave", 10 if glued in _WAVE or glued in _LOG_WAVE else 6
+        return "wave", 3 if len(glued) == 1 else 10 if glued in _WAVE or glued in _LOG_WAVE else 6
     if wave and words[0] in ("log", "ln") and len(words) == 2 and words[1] in _WAVE:
         return "wave", 8
     if kinds & _OTHER_WORDS:
@@ -90,6 +90,11 @@ def role_of(name: str) -> tuple[Role, int]:
     if kinds & _INDEX_WORDS:
         return "index", 5
     return "other", 0
+
+
+def is_companion(name: str) -> bool:
+    """Whether a name says sky, model, response or the like: something beside the flux, never the flux itself."""
+    return bool(set(_words(split_unit(name)[0])) & _OTHER_WORDS)
 
 
 def log_of(name: str) -> str:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import io
 import re
 from collections import Counter
 from dataclasses import dataclass, field
@@ -11,6 +12,7 @@ import numpy as np
 
 from starfathom.classify.errors import SpectrumError
 from starfathom.classify.reading import hints
+from starfathom.classify.reading.finish import guess_spectral_unit
 from starfathom.classify.reading.names import log_of, role_of, split_unit
 from starfathom.classify.reading.raw import ErrorKind, RawSpectrum
 from starfathom.classify.reading.request import Request
@@ -50,7 +52,25 @@ def read_text(data: bytes, path: str, request: Request) -> RawSpectrum:
     table = _quick(data)
     if table is None:
         table = _slow(decode(data, path), path)
-    return _assign(table, path, request)
+    return assign_columns(table, path, request)
+
+
+def read_array(data: bytes, path: str, request: Request) -> RawSpectrum:
+    """A saved numpy array of shape (n, 2 or more) or (2 or more, n), or with named fields."""
+    try:
+        array = np.load(io.BytesIO(data), allow_pickle=False)
+    except Exception:
+        raise SpectrumError(f"{path}: the numpy array is damaged or holds objects; save plain numbers.") from None
+    if array.dtype.names:
+        names = [n for n in array.dtype.names if array.dtype[n].kind in "iufb" and array.ndim == 1 and not array.dtype[n].shape]
+        table = Table(np.column_stack([array[n].astype(np.float64) for n in names]) if names else np.empty((0, 0)), names, [""] * len(names))
+    elif array.ndim == 2 and array.dtype.kind in "iuf":
+        table = Table((array.T if array.shape[0] < array.shape[1] else array).astype(np.float64))
+    else:
+        table = Table(np.empty((0, 0)))
+    if not 2 <= table.values.shape[1] <= 50:
+        raise SpectrumError(f"{path}: a numpy array of shape {array.shape} is not a table of wavelength and flux; save two columns.")
+    return assign_columns(table, path, request)
 
 
 def decode(data: bytes, path: str) -> str:
@@ -72,12 +92,13 @@ def decode(data: bytes, path: str) -> str:
 
 def _quick(data: bytes) -> Table | None:
     """Plain numbers in even columns, the common case; None when anything is out of the ordinary."""
+    data = data.removeprefix(b"\xef\xbb\xbf")
     match = _FIRST_ROW.search(data)
     if match is None or b"ECSV" in data[:40]:
         return None
     start = match.start()
     head, body = data[:start], data[start:]
-    if len(head) > 200_000:
+    if len(head) > 200_000 or (b"\r" in body and b"\n" not in body):
         return None
     line_end = body.find(b"\n")
     first = body[:line_end] if line_end >= 0 else body
@@ -177,7 +198,10 @@ def _slow(text: str, path: str) -> Table:
     if width < 2:
         raise SpectrumError(f"{path}: holds one column of numbers only, so no wavelengths; give wavelength and flux in columns.")
     kept = [r[:width] for r in rows if len(r) >= width]
-    table = Table(np.array(kept, dtype=np.float64), remarks="\n".join(remarks[:2000]))
+    values = np.array(kept, dtype=np.float64)
+    while values.shape[1] > 2 and np.isnan(values[:, -1]).all():
+        values = values[:, :-1]   # a separator at the end of each row
+    table = Table(values, remarks="\n".join(remarks[:2000]))
     if len(kept) < len(rows):
         table.notes.append(f"{len(rows) - len(kept)} short rows left out")
     if odd:
@@ -203,10 +227,7 @@ def _split(line: str, separator: str) -> list[str]:
         line = line.strip("|")
     if separator == "":
         return line.split()
-    cells = [c.strip() for c in line.split(separator)]
-    while len(cells) > 2 and cells[-1] == "":
-        cells.pop()
-    return cells
+    return [c.strip() for c in line.split(separator)]
 
 
 def _decimal(text: str, decimal: str) -> str:
@@ -311,6 +332,8 @@ def _headings(table: Table, lines: list[str], columns: int, separator: str = "")
 
 def _tells(names: list[str]) -> bool:
     """A row of headings rather than a sentence that happens to have as many words."""
+    if any(len(split_unit(n)[0].split()) > 3 for n in names):
+        return False
     roles = [role_of(n)[0] for n in names]
     return roles.count("wave") == 1 or (roles.count("flux") >= 1 and roles.count("other") < len(names) - 1)
 
@@ -398,7 +421,7 @@ def _ecsv(lines: list[str], path: str) -> Table:
 # --- which column is what -------------------------------------------------------------------------------------------
 
 
-def _assign(table: Table, path: str, request: Request) -> RawSpectrum:
+def assign_columns(table: Table, path: str, request: Request) -> RawSpectrum:
     values, names, units = table.values, table.names, table.units
     n_columns = values.shape[1]
     picked: dict[str, int] = {}
@@ -454,8 +477,8 @@ def _assign(table: Table, path: str, request: Request) -> RawSpectrum:
         log = log or ("ln" if wave_unit.lower().startswith("ln") else "log10")
         wave_unit = split_unit(wave_unit)[1]
     flux_unit = request.flux_unit or (units[picked["flux"]] if units else "") or flux_name
-    if flux_kind(flux_unit) == "unknown" and flux_kind(flux_name) != "unknown":
-        flux_unit = flux_name
+    if flux_kind(flux_unit) == "unknown":
+        flux_unit = next((x for x in (f"{flux_name} [{flux_unit}]", flux_name) if flux_kind(x) != "unknown"), flux_unit)
     if flux_kind(flux_unit) == "unknown":
         flux_unit = _flux_in_words(table.remarks) or flux_unit
     raw = RawSpectrum(values[:, picked["wave"]], values[:, picked["flux"]], wave_unit, flux_unit, log, error, error_kind,
@@ -471,17 +494,33 @@ def _assign(table: Table, path: str, request: Request) -> RawSpectrum:
 def _find_wave(values: FloatArray, taken: set[int]) -> int:
     """The wavelength column by its values: the first steady one in a likely range, not a running number."""
     free = [i for i in range(values.shape[1]) if i not in taken]
-    for i in free[:6]:
-        column = values[:, i]
-        finite = column[np.isfinite(column)]
-        if finite.size < 2:
-            continue
-        step = np.diff(finite)
-        steady = np.mean(step > 0) > 0.98 or np.mean(step < 0) > 0.98
-        counter = np.all(step == 1.0) and finite[0] in (0.0, 1.0)
-        if steady and not counter:
+    steady = [i for i in free[:8] if is_steady(values[:, i])]
+    for i in steady:
+        if in_reach(values[:, i]):
             return i
-    return free[0] if free else 0
+    return steady[0] if steady else free[0] if free else 0
+
+
+def is_steady(column: FloatArray) -> bool:
+    """Whether values run one way throughout, a few slips apart, and are not just 0, 1, 2 ..."""
+    finite = column[np.isfinite(column)]
+    if finite.size < 2:
+        return False
+    step = np.diff(finite)
+    counter = bool(np.all(step == 1.0)) and finite[0] in (0.0, 1.0)
+    return bool(np.mean(step > 0) > 0.98 or np.mean(step < 0) > 0.98) and not counter
+
+
+def in_reach(column: FloatArray) -> bool:
+    """Whether values without a unit can be wavelengths of an optical spectrum."""
+    finite = column[np.isfinite(column)]
+    if finite.size == 0:
+        return False
+    try:
+        guess_spectral_unit(finite, "")
+    except SpectrumError:
+        return False
+    return True
 
 
 def _third(flux: FloatArray, other: FloatArray, number: int, notes: list[str]) -> tuple[FloatArray | None, ErrorKind]:

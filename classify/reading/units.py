@@ -70,9 +70,9 @@ def flux_kind(text: str) -> FluxKind:
     t = text.strip().lower().replace("ångström", "angstrom").replace("å", "a").replace("**", "^").replace("{", "").replace("}", "")
     if not t:
         return "unknown"
-    if re.search(r"\bst[ _]?mag|\bmag(nitude)?s?[ _]?\(?st\b", t):
+    if re.search(r"\bst[ _]?mag|\bmag(nitude)?s?[ _(\[]*st\b", t):
         return "mag_st"
-    if re.search(r"\bab[ _]?mag|\bmag(nitude)?s?[ _]?\(?ab\b|\bab[ _]?nu\b|^ab$", t):
+    if re.search(r"\bab[ _]?mag|\bmag(nitude)?s?[ _(\[]*ab\b|\bab[ _]?nu\b|^ab$", t):
         return "mag_ab"
     if re.search(r"\bm?mag(nitude)?s?\b", t):
         return "mag"
