@@ -29,10 +29,10 @@ def serve(paths: Sequence[str], port: int | None = None, open_browser: bool = Tr
     from starfathom.desk.gather import gather
 
     night = gather(paths)
-    from starfathom.desk.server import Desk, first_batch
+    from starfathom.desk.server import Desk
     from starfathom.desk.windows import known_marks
 
-    first_batch(night)
+    night.type_some()
     desk = Desk(night, known_marks(), port or 0)
     count = len(night.stars)
     print(f"{count} star{'s' if count != 1 else ''} on the desk: {desk.address}", flush=True)

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 from pathlib import Path
+from typing import Any
 
 from starfathom.classify.errors import RequestError
 from starfathom.decisions import FILE_NAME, DecisionLog, log_path
@@ -39,18 +40,32 @@ def beside(paths: Sequence[str]) -> Path:
 
 
 def of_run(run_dir: Path) -> Night:
-    """The stars of a finished (or stopped) run, settings as they were in it."""
-    import csv
+    """The stars of a run, with the settings and the answers of the run where its record keeps them.
 
+    Raises
+    ------
+    RequestError : the folder holds no run, or none of its stars has a spectrum
+    """
+    from starfathom.chain import assignment_of
     from starfathom.classify import Classifier, Settings
     from starfathom.classify.reading import read_plain
+    from starfathom.record import open_record
 
-    table = run_dir / "results.ecsv"
-    if not table.is_file():
-        raise RequestError(f"{run_dir} is not a run folder: it has no results.ecsv")
-    with open(table, encoding="utf-8", newline="") as f:
-        rows = list(csv.DictReader(line for line in f if not line.startswith("#")))
-    stars = [Star(r["name"], r["file"], Settings(), row=dict(r)) for r in rows if r.get("file")]
-    if not stars:
-        raise RequestError(f"no star of {run_dir} has a spectrum to check")
-    return Night(stars, Classifier.load(), DecisionLog(log_path(run_dir)), read_plain)
+    with open_record(run_dir) as record:
+        asked: dict[str, Any] = record.facts().get("settings", {})
+        rows = [row for row in record.rows() if row.get("file")]
+        details = record.details()
+    if not rows:
+        raise RequestError(f"{run_dir}: no star of this run has a spectrum to check")
+    medium = asked.get("medium")
+    stars = []
+    for row in rows:
+        detail = details.get(row["name"])
+        target = {} if detail is None else detail["target"]
+        settings = Settings(medium=medium, fwhm_angstrom=target.get("fwhm_angstrom"),
+                            velocity_kms=target.get("velocity_kms"))
+        said = None if detail is None else assignment_of(row, detail)
+        stars.append(Star(row["name"], row["file"], settings, said, row=row, target=target))
+    classifier = Classifier.load(without_libraries=tuple(asked.get("without_libraries", ())),
+                                 without_stars=tuple(asked.get("without_stars", ())))
+    return Night(stars, classifier, DecisionLog(log_path(run_dir)), lambda path: read_plain(path, medium=medium))

@@ -21,21 +21,24 @@ BATCH = 12
 
 @dataclass
 class Star:
-    """One star of the night. ``assignment`` is None until the machine has had its say."""
+    """One star of the night.
+
+    ``assignment`` is None until the machine has had its say; ``row`` and ``target`` are what a run knows of the star
+    (columns of its results; magnitudes, parallax and the like), empty for a loose file.
+    """
 
     name: str
     file: str
     settings: Any
-    spectrum: PlainSpectrum | None = None
     assignment: Assignment | None = None
     need: Need = field(default_factory=lambda: Need(0.0, ""))
     row: dict[str, Any] = field(default_factory=dict)
-    digest: str = ""
+    target: dict[str, Any] = field(default_factory=dict)
 
     @property
     def shown(self) -> bool:
-        """True when there is a spectrum to look at."""
-        return self.spectrum is not None
+        """True when there is a spectrum to look at, as far as is known."""
+        return self.assignment is None or self.assignment.status != "failed"
 
 
 class Night:
@@ -57,61 +60,71 @@ class Night:
         self.log = log
         self.magnitudes = magnitudes
         self._read = read
-        self.queue: list[int] = list(range(len(self.stars)))
-        self.typed = 0
         self._lock = threading.Lock()
         self._prepared: dict[tuple[int, float, float], Prepared] = {}
+        self._order()
 
     # ---- the machine's say ----------------------------------------------------------------------------------------
 
+    def _order(self) -> None:
+        """Put the queue in order: typed stars by need, then those not typed yet, as given."""
+        for star in self.stars:
+            if star.assignment is not None and not star.need.why:
+                star.need = need(star.assignment, self.magnitudes)
+        typed = [k for k, star in enumerate(self.stars) if star.assignment is not None]
+        waiting = [k for k, star in enumerate(self.stars) if star.assignment is None]
+        self.queue = [*sorted(typed, key=lambda k: (-self.stars[k].need.score, k)), *waiting]
+
     def type_all(self, told: Callable[[], None] = lambda: None) -> None:
-        """Read and type every star, batch by batch, calling ``told`` after each."""
-        for start in range(self.typed, len(self.stars), BATCH):
-            self.type_batch(start, min(start + BATCH, len(self.stars)))
+        """Read and type every star that has not been, batch by batch, calling ``told`` after each."""
+        while not self.ready:
+            self.type_some()
             told()
 
-    def type_batch(self, start: int, stop: int) -> None:
-        """Read and type the stars from ``start`` up to ``stop``."""
-        batch = self.stars[start:stop]
+    def type_some(self, most: int = BATCH) -> None:
+        """Read and type the next few stars."""
+        batch = [star for star in self.stars if star.assignment is None][:most]
         spectra: list[PlainSpectrum | SpectrumError] = []
         for star in batch:
             try:
                 spectra.append(self._read(star.file))
             except SpectrumError as error:
                 spectra.append(error)
-            star.digest = file_digest(star.file)
         with self._lock:
             said = self.classifier.classify_many(spectra, [s.settings for s in batch])
-        for star, spectrum, assignment in zip(batch, spectra, said):
-            star.spectrum = spectrum if isinstance(spectrum, PlainSpectrum) else None
+        for star, assignment in zip(batch, said):
             star.assignment = assignment
-            star.need = need(assignment, self.magnitudes)
-        self.typed = stop
-        typed = sorted(range(stop), key=lambda k: (-self.stars[k].need.score, k))
-        self.queue = [*typed, *range(stop, len(self.stars))]
+        self._order()
+
+    @property
+    def typed(self) -> int:
+        """Number of stars the machine has had its say on."""
+        return sum(star.assignment is not None for star in self.stars)
 
     @property
     def ready(self) -> bool:
         """True when the machine has had its say on every star."""
-        return self.typed >= len(self.stars)
+        return self.typed == len(self.stars)
 
     def prepared(self, index: int, blur_angstrom: float = 0.0, nudge_kms: float = 0.0) -> Prepared:
         """A star made ready to compare, its line spread and velocity nudged by the given amounts.
 
         Raises
         ------
-        SpectrumError : the spectrum has too little to compare
+        SpectrumError : the file cannot be read any more, or has too little to compare
         """
         key = (index, blur_angstrom, nudge_kms)
         if key not in self._prepared:
             star = self.stars[index]
-            if star.spectrum is None:
-                raise SpectrumError(f"{star.file} could not be read")
             settings = star.settings
             if nudge_kms:
                 settings = replace(settings, velocity_kms=self.prepared(index).velocity_kms + nudge_kms)
-            with self._lock:
-                ready = self.classifier.prepare(star.spectrum, settings)
+            elif blur_angstrom:
+                ready = self.prepared(index)
+            if nudge_kms or not blur_angstrom:
+                spectrum = self._read(star.file)
+                with self._lock:
+                    ready = self.classifier.prepare(spectrum, settings)
             if blur_angstrom:
                 ready = replace(ready, fwhm_angstrom=max(0.2, ready.fwhm_angstrom + blur_angstrom))
             if len(self._prepared) > 24:
@@ -143,7 +156,7 @@ class Night:
             machine |= {k: _finite(getattr(said, k)) for k in ("t_code", "t_code_err", "lum_code", "lum_code_err")}
             machine |= {"type_set_90": list(said.type_set_90), "flags": list(said.flags), "probability": probability}
         return self.log.append(Decision(star.name, action, mk_type, flags, remark, who,
-                                        machine=machine, file=star.file, digest=star.digest))
+                                        machine=machine, file=star.file, digest=file_digest(star.file)))
 
 
 def _finite(x: float) -> float | None:

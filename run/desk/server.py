@@ -24,7 +24,7 @@ from bokeh.models import ColumnDataSource, CustomJS
 from bokeh.server.server import Server
 
 from starfathom.classify.errors import RequestError
-from starfathom.desk.night import BATCH, Night
+from starfathom.desk.night import Night
 from starfathom.desk.palette import DARK, LIGHT
 from starfathom.desk.session import Session
 from starfathom.desk.view import View
@@ -160,7 +160,3 @@ class Handler:
         finally:
             self.doc.unhold()
 
-
-def first_batch(night: Night) -> None:
-    """Type the first few stars at once, so that the page opens on something."""
-    night.type_batch(0, min(BATCH, len(night.stars)))

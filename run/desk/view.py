@@ -351,7 +351,7 @@ class View:
         self._put("size_pin", _labels([b - 1 for _, b in edges], -1.3,
                                       [_sigma(v) for v in pinned.by_window] if pinned else []))
         sizes = np.array([v if np.isfinite(v) else 0.0 for v in here.by_window])
-        worst = [(*edges[int(sizes.argmax())], bottom + 0.05, top)] if len(sizes) and sizes.max() > 1.5 else []
+        worst = [(*edges[int(sizes.argmax())], bottom + 0.05, top - 0.03)] if len(sizes) and sizes.max() > 1.5 else []
         self._put("worst", _boxes(worst))
         if self._sent.get("strip_ticks") != ticks:
             self._sent["strip_ticks"] = ticks
