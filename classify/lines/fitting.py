@@ -211,7 +211,7 @@ def fit_jobs(jobs: Jobs, start: FloatArray, base: FloatArray, ties: Ties, low: F
         if attempt >= _PATIENCE:
             # centre or width still pressed against its bound: no line of this kind in the window, give up
             pressed = (fitted[live] <= low[live]) | (fitted[live] >= high[live])
-            finished |= (pressed & ~_may_rest(fitted[live], low[live], high[live])).any(axis=1)
+            finished |= (pressed & ~_may_rest(fitted[live], low[live], high[live], ties)).any(axis=1)
         keep = ~finished
         if not keep.all():
             live, hessian, gradient = live[keep], hessian[keep], gradient[keep]
@@ -219,9 +219,17 @@ def fit_jobs(jobs: Jobs, start: FloatArray, base: FloatArray, ties: Ties, low: F
     return _finish(jobs, fitted, base, ties, low, high, converged, correlation)
 
 
-def _may_rest(fitted: FloatArray, low: FloatArray, high: FloatArray) -> BoolArray:
-    """Bounds that are an answer, not a failure: zero (no Lorentzian part, no such component), or a held number."""
-    return (fitted == 0.0) | (low >= high)
+def _may_rest(fitted: FloatArray, low: FloatArray, high: FloatArray, ties: Ties) -> BoolArray:
+    """Bounds that are an answer, not a failure.
+
+    Zero (no Lorentzian part, no such component), a number held from the start, and the Gaussian part of a Voigt
+    profile at its least: the line spread, below which no line can be.
+    """
+    rest = (fitted == 0.0) | (low >= high)
+    if ties.is_voigt:
+        sigmas = np.asarray(ties.matrix[:, 2::4].any(axis=1))
+        rest |= sigmas & (fitted <= low)
+    return rest
 
 
 def _finish(jobs: Jobs, fitted: FloatArray, base: FloatArray, ties: Ties, low: FloatArray, high: FloatArray,
@@ -231,7 +239,7 @@ def _finish(jobs: Jobs, fitted: FloatArray, base: FloatArray, ties: Ties, low: F
     size = hessian.shape[1]
     on_bound = (fitted <= low) | (fitted >= high)
     index = np.arange(size)
-    stuck = (on_bound & ~_may_rest(fitted, low, high)).any(axis=1)
+    stuck = (on_bound & ~_may_rest(fitted, low, high, ties)).any(axis=1)
     # an area resting at zero keeps its own error
     on_bound &= ~(ties.areas & (low < high))
     masked = np.where(on_bound[:, :, None] | on_bound[:, None, :], 0.0, hessian)

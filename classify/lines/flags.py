@@ -69,11 +69,12 @@ def _emission(wave: FloatArray, lines: BulkLines, fits: BulkFits, i: int, k: int
     for c in detected:
         if fits.ew[i, c] >= -3.0 * fits.ew_err[i, c] or fits.fwhm[i, c] < 0.6 * spread:
             continue
-        if abs(fits.center[i, c] - fits.wavelength[c]) > max(spread, 1.5):
+        centre = fits.center[i, c] if np.isfinite(fits.center[i, c]) else fits.wavelength[c]
+        if abs(centre - fits.wavelength[c]) > max(spread, 1.5):
             continue
         x, y, noise = _normalised(wave, lines, i, k, feature.wavelength - 50.0, feature.wavelength + 50.0)
-        core = np.abs(x - fits.center[i, c]) <= 0.35 * fits.fwhm[i, c]
-        around = (np.abs(x - fits.center[i, c]) > 1.3 * fits.fwhm[i, c]) & (x > feature.window[0] - 35.0) \
+        core = np.abs(x - centre) <= 0.35 * fits.fwhm[i, c]
+        around = (np.abs(x - centre) > 1.3 * fits.fwhm[i, c]) & (x > feature.window[0] - 35.0) \
             & (x < feature.window[1] + 35.0)
         if not core.any() or around.sum() < 5:
             continue

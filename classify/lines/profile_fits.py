@@ -38,6 +38,8 @@ _PARTED = 0.7
 _VOIGT_SIGMA = 5.0
 #: A profile with more numbers must win by this much in the criterion: strong evidence (Kass & Raftery 1995).
 _STRONG_EVIDENCE = 6.0
+#: Up to this difference the evidence hardly tells two profiles apart, and the error counts both.
+_OPEN_QUESTION = 2.0
 _BUCKETS = (8, 12, 16, 20, 26, 34, 44, 60, 80, 110, 150, 210, 300, 500, 1000, 4000)
 
 
@@ -48,8 +50,9 @@ class BulkFits:
     Attributes
     ----------
     labels, wavelength, feature : (c,) name for people, rest wavelength, column number in the feature table
-    ew, ew_err : area of the profile, angstrom, wings outside the window included
-    center, center_err : rest-frame wavelength of the centre, angstrom
+    ew, ew_err : area of the profile, angstrom, wings outside the window included; the error counts in the losing
+        profile's answer by its share of the evidence
+    center, center_err : rest-frame wavelength of the centre, angstrom; NaN where it was held at rest
     fwhm, fwhm_err : full width at half depth of the profile
     intrinsic, intrinsic_err : the same with the instrument taken out; the 3-sigma upper limit where ``unresolved``
     depth, depth_err : central depth of the profile
@@ -256,7 +259,8 @@ def _fit_batch(wave: FloatArray, lines: BulkLines, slots: list[_Slot], profiles:
             return
         ties = tie(k, is_voigt, shared)
         start, low, high, base = _setup(ties, jobs.offsets[rows], areas[rows], width[rows], drift[rows], window[rows],
-                                        step[rows], merged[rows], shared, best.full[rows] if is_voigt else None)
+                                        step[rows], spread[rows], merged[rows], shared,
+                                        best.full[rows] if is_voigt else None)
         if held:
             for i, value in ((k, np.zeros(rows.size)), (k + 1, spread[rows])):
                 start[:, i] = low[:, i] = high[:, i] = value
@@ -281,6 +285,15 @@ def _fit_batch(wave: FloatArray, lines: BulkLines, slots: list[_Slot], profiles:
         strong &= (jobs.weight > 0).sum(axis=1) >= 3 * k + 3
         attempt(True, True, everyone[strong])
         attempt(True, False, apart[strong[apart]])
+    if k > 1:
+        # weak components in noise wander and trade with each other: they too stay at rest
+        weak = (best.significance().min(axis=1) < _VOIGT_SIGMA) & trace & ~merged
+        still = _Best(j, k)
+        drift[weak] = 0.0
+        strong_one, best = best, still
+        attempt(False, True, everyone[weak])
+        best = strong_one
+        best.take(everyone[weak & still.converged], still)
     # components that cannot be parted are each uncertain while their sum is not
     seen = (best.significance().max(axis=1) >= DETECTION_SIGMA) | (best.total_significance() >= DETECTION_SIGMA)
     lost = ~(seen & best.converged)
@@ -290,7 +303,7 @@ def _fit_batch(wave: FloatArray, lines: BulkLines, slots: list[_Slot], profiles:
 
 
 def _setup(ties: Ties, offsets: FloatArray, areas: FloatArray, width: FloatArray, drift: FloatArray,
-           window: FloatArray, step: FloatArray, merged: BoolArray, shared: bool,
+           window: FloatArray, step: FloatArray, spread: FloatArray, merged: BoolArray, shared: bool,
            known: FloatArray | None) -> tuple[FloatArray, FloatArray, FloatArray, FloatArray]:
     """Start, bounds and base of the fitted numbers; ``known`` (j, k, 4) are the Gaussian results to start from."""
     j, k = offsets.shape
@@ -314,7 +327,7 @@ def _setup(ties: Ties, offsets: FloatArray, areas: FloatArray, width: FloatArray
     low[:, :, 1], high[:, :, 1] = -drift[:, None], drift[:, None]
     low[:, :, 2], high[:, :, 2] = 0.3 * step[:, None], np.maximum(window / 3.0, 2.0 * width)[:, None]
     if size == 4:
-        high[:, :, 3] = window[:, None]
+        low[:, :, 2], high[:, :, 3] = spread[:, None], window[:, None]
 
     def pack(values: FloatArray) -> FloatArray:
         if not shared:
@@ -335,6 +348,24 @@ class _Best:
         self.pixels = np.ones(jobs)
         self.voigt = np.zeros(jobs, bool)
         self.converged = np.zeros(jobs, bool)
+        # the best Gaussian (0) and the best Voigt (1), whichever won: areas, chi2, free parameters
+        self.rival_area = np.full((jobs, 2, components), np.nan)
+        self.rival_chi2 = np.full((jobs, 2), np.inf)
+        self.rival_free = np.zeros((jobs, 2))
+
+    def model_variance(self) -> FloatArray:
+        """(j, k) variance of an area from not knowing which profile is right: the loser's weight times the difference
+        squared, the weight being exp(-BIC / 2) shared between the two."""
+        with np.errstate(invalid="ignore", over="ignore"):
+            scale = np.maximum(self.chi2 / self.dof, 1.0)
+            bic = self.rival_chi2 / scale[:, None] + self.rival_free * np.log(np.maximum(self.pixels, 1.0))[:, None]
+            winner = self.voigt.astype(int)
+            rows = np.arange(winner.size)
+            ahead = bic[rows, 1 - winner] - bic[rows, winner]
+            weight = 1.0 / (1.0 + np.exp(np.clip(ahead, -60.0, 60.0) / 2.0))
+            weight = np.where(ahead < _OPEN_QUESTION, weight, 0.0)
+            apart = self.rival_area[rows, 1 - winner] - self.full[:, :, 0]
+            return np.nan_to_num(weight[:, None] * apart**2)
 
     def significance(self) -> FloatArray:
         with np.errstate(invalid="ignore", divide="ignore"):
@@ -351,8 +382,14 @@ class _Best:
         down alike, so that an extra parameter has to explain part of the misfit and not only outrun the noise.
         """
         k, size = ties.components, ties.per_component
-        scale = np.maximum(np.fmin(fits.chi2 / fits.dof, self.chi2[rows] / self.dof[rows]), 1.0)
+        family = int(ties.is_voigt)
         log_n = np.log(np.maximum(fits.pixels, 1.0))
+        leads = self.rival_chi2[rows, family] + self.rival_free[rows, family] * log_n
+        leads = fits.converged & (fits.chi2 + fits.free * log_n < leads)
+        self.rival_area[rows[leads], family] = fits.full[leads, :, 0]
+        self.rival_chi2[rows[leads], family] = fits.chi2[leads]
+        self.rival_free[rows[leads], family] = fits.free
+        scale = np.maximum(np.fmin(fits.chi2 / fits.dof, self.chi2[rows] / self.dof[rows]), 1.0)
         mine = fits.chi2 / scale + fits.free * log_n
         known = self.chi2[rows] / scale + self.free[rows] * log_n
         wins = np.isnan(known) | (fits.converged & ~self.converged[rows])
@@ -381,6 +418,7 @@ class _Best:
         """Turn parameters into what is tabulated and write them to rows and columns of ``out`` and ``flags``."""
         significance = self.significance()
         loss_blue, loss_red, rms = self._residuals(jobs)
+        between = self.model_variance()
         for i in range(self.full.shape[1]):
             at = (row, column + i)
             area, centre, sigma, gamma = (self.full[:, i, q] for q in range(4))
@@ -396,24 +434,28 @@ class _Best:
             inner_var = _quadratic(grad_inner, cov) + _lsf_variance(sigma, gamma, fwhm, fwhm_err)
             # an unresolved width is known through its square: w^2 - I^2 with error 2 w s(w)
             width_err = np.sqrt(_quadratic(grad_width, cov))
+            placed = detected & ~(cov[:, 1, 1] == 0.0)
             detected &= width + 2.0 * width_err >= _NARROWEST * fwhm
             square = np.maximum(width**2 - fwhm**2, 0.0)
             square_err = 2.0 * np.hypot(width * width_err, fwhm * fwhm_err)
             narrow = square < 3.0 * square_err
             limit = np.sqrt(square + 3.0 * square_err)
             shown = {
-                "ew": area, "ew_err": np.sqrt(cov[:, 0, 0]), "center": rest + centre, "center_err": np.sqrt(cov[:, 1, 1]),
+                "ew": area, "ew_err": np.sqrt(cov[:, 0, 0] + between[:, i]),
+                "center": rest + centre, "center_err": np.sqrt(cov[:, 1, 1]),
                 "fwhm": width, "fwhm_err": width_err, "depth": area * peak,
                 "depth_err": np.sqrt(_quadratic(grad_depth, cov)),
                 "intrinsic": np.where(narrow, limit, inner),
                 "intrinsic_err": np.where(narrow, np.nan, np.sqrt(inner_var)), "sigma": sigma, "gamma": gamma,
                 "chi2": self.chi2, "dof": self.dof, "residual_rms": rms, "blue_loss": loss_blue, "red_loss": loss_red}
-            only_seen = ("center", "center_err", "fwhm", "fwhm_err", "depth", "depth_err", "intrinsic", "intrinsic_err",
+            only_placed = ("center", "center_err")
+            only_seen = ("fwhm", "fwhm_err", "depth", "depth_err", "intrinsic", "intrinsic_err",
                          "sigma", "gamma")
             # a held profile that does not explain its window says nothing of the line
             usable = self.converged & ~(lost & (self.chi2 > _HELD_MISFIT * self.dof))
             for name, value in shown.items():
-                out[name][at] = np.where(detected if name in only_seen else usable, value, np.nan)
+                mask = detected if name in only_seen else placed & detected if name in only_placed else usable
+                out[name][at] = np.where(mask, value, np.nan)
             flags["detected"][at], flags["voigt"][at] = detected, self.voigt & detected
             flags["unresolved"][at], flags["held"][at] = narrow & detected, lost & usable
             if fixed_depths and detected.any():

@@ -23,6 +23,8 @@ if TYPE_CHECKING:
 
 FloatArray = NDArray[np.float64]
 NAN = float("nan")
+#: A fit is preferred to the direct sum only where the line is this significant.
+_FIT_SIGMA = 10.0
 
 #: Columns in order: (name, unit or "", decimals or None for text and flags, what it means).
 COLUMNS: tuple[tuple[str, str, int | None, str], ...] = (
@@ -280,10 +282,11 @@ def _fitted(fits: BulkFits, c: int, rest_angstrom: float, velocity_kms: float) -
         "center_angstrom": float(fits.center[0, c]), "center_err_angstrom": float(fits.center_err[0, c]),
         "profile": ("voigt" if fits.voigt[0, c] else "gaussian") if found else "",
         "chi2": float(fits.chi2[0, c]), "dof": float(fits.dof[0, c])}
-    if found:
+    if found and np.isfinite(out["center_angstrom"]):
         shift = out["center_angstrom"] / rest_angstrom
         out["velocity_kms"] = (shift * (1.0 + velocity_kms / LIGHT_KMS) - 1.0) * LIGHT_KMS
         out["velocity_err_kms"] = out["center_err_angstrom"] / rest_angstrom * LIGHT_KMS
+    if found:
         out |= {"depth": float(fits.depth[0, c]), "depth_err": float(fits.depth_err[0, c])}
     for d, percent in enumerate((10, 20, 30)):
         out[f"width_{percent}_angstrom"] = float(fits.width_at[0, c, d])
@@ -292,8 +295,12 @@ def _fitted(fits: BulkFits, c: int, rest_angstrom: float, velocity_kms: float) -
 
 
 def _prefer(row: dict[str, Any], fits: BulkFits, c: int) -> None:
-    """Take the fit where its profile explains the window: residuals like the noise, or small beside the depth."""
-    if not fits.detected[0, c]:
+    """Take the fit where the line is strong and its profile explains the window.
+
+    Explained means residuals like the noise, or small beside the depth. A weak line's fit picks its own width and
+    place out of the noise and is biased high; its direct sum is not.
+    """
+    if not fits.detected[0, c] or abs(fits.ew[0, c]) < _FIT_SIGMA * fits.ew_err[0, c]:
         return
     like_noise = fits.chi2[0, c] <= 2.0 * fits.dof[0, c]
     small = fits.residual_rms[0, c] <= 0.1 * abs(fits.depth[0, c])
