@@ -5,9 +5,9 @@ spread of the invented spectrograph, put on its pixels, given a sensitivity curv
 observatory or other writes its files. The same recipe and library give the same files.
 
 What is simulated, in order: emission (one Be star), rest to observed wavelengths, reddening by the mean law of Gordon
-et al. 2023 (ApJ 950, 86) with R_V = 3.1, Gaussian line spread, sampling at 2.5 pixels a FWHM, counts with photon
-noise and a floor of 10 % of it, flux calibration good to a smooth 3 %. Magnitudes follow from the absolute magnitude, the
-distance and the reddening, each with an error of 0.015 mag (B 0.02).
+et al. 2023 (ApJ 950, 86) with R_V = 3.1, Gaussian line spread, sampling at 2.5 pixels a FWHM, counts with photon noise
+and a floor of 10 % of it, flux calibration good to a smooth 3 %. Magnitudes follow from the absolute magnitude, the
+distance and the reddening, with errors of 0.015 (V) and 0.02 mag (B, I).
 """
 
 from __future__ import annotations
@@ -140,6 +140,7 @@ def photometry(star: Any, rng: np.random.Generator) -> dict[str, float]:
 
 # Files --------------------------------------------------------------------------------------------------------------
 
+
 def write(path: Path, form: str, name: str, wave: FloatArray, flux: FloatArray, sigma: FloatArray) -> None:
     """Write one spectrum in the layout that ``form`` names."""
     if "image" in form:
@@ -190,12 +191,18 @@ def _table(form: str, name: str, wave: FloatArray, flux: FloatArray, sigma: Floa
 
         head.header["VACUUM"] = (True, "wavelengths are in vacuum")
         vacuum = air_to_vac(wave * u.AA).to_value(u.AA)
-        columns = [fits.Column("loglam", "E", array=np.log10(vacuum)), fits.Column("flux", "E", array=flux),
-                   fits.Column("ivar", "E", array=sigma**-2)]
+        columns = [
+            fits.Column("loglam", "E", array=np.log10(vacuum)),
+            fits.Column("flux", "E", array=flux),
+            fits.Column("ivar", "E", array=sigma**-2),
+        ]
         extension = "COADD"
     else:
-        columns = [fits.Column("WAVELENGTH", "D", unit="Angstrom", array=wave),
-                   fits.Column("FLUX", "E", array=flux), fits.Column("ERROR", "E", array=sigma)]
+        columns = [
+            fits.Column("WAVELENGTH", "D", unit="Angstrom", array=wave),
+            fits.Column("FLUX", "E", array=flux),
+            fits.Column("ERROR", "E", array=sigma),
+        ]
         extension = "SPECTRUM"
     return fits.HDUList([head, fits.BinTableHDU.from_columns(columns, name=extension)])
 
@@ -213,12 +220,17 @@ def _text(form: str, name: str, wave: FloatArray, flux: FloatArray, sigma: Float
         rows = "".join(f"{w:.3f};{f:.5f}\n".replace(".", ",") for w, f, _s in triples)
         return "lambda;intensity\n" + rows
     if form == "ecsv nm":
-        head = ("# %ECSV 1.0\n# ---\n# datatype:\n# - {name: wavelength, unit: nm, datatype: float64}\n"
-                "# - {name: flux, unit: erg / (s cm2 AA), datatype: float64}\n"
-                "# - {name: uncertainty, unit: erg / (s cm2 AA), datatype: float64}\n"
-                f"# meta: !!omap\n# - {{comments: [{name}]}}\n# schema: astropy-2.0\n")
-        return head + "wavelength flux uncertainty\n" + "".join(
-            f"{w / 10:.4f} {f * 1e-14:.5e} {s * 1e-14:.5e}\n" for w, f, s in triples)
+        head = (
+            "# %ECSV 1.0\n# ---\n# datatype:\n# - {name: wavelength, unit: nm, datatype: float64}\n"
+            "# - {name: flux, unit: erg / (s cm2 AA), datatype: float64}\n"
+            "# - {name: uncertainty, unit: erg / (s cm2 AA), datatype: float64}\n"
+            f"# meta: !!omap\n# - {{comments: [{name}]}}\n# schema: astropy-2.0\n"
+        )
+        return (
+            head
+            + "wavelength flux uncertainty\n"
+            + "".join(f"{w / 10:.4f} {f * 1e-14:.5e} {s * 1e-14:.5e}\n" for w, f, s in triples)
+        )
     raise ValueError(f"no layout called {form}")
 
 
@@ -263,10 +275,21 @@ def build(folder: Path = HERE) -> list[Path]:
         if star["file"]:
             write(folder / star["file"], star["form"], star["name"], *observed(star, rng))
             paths.append(folder / star["file"])
-        rows.append(",".join([
-            star["name"], star["file"], "" if star["file"] else star["true_type"], f"{ra:.5f}", f"{dec:.5f}",
-            *(_cell(mags[key], 3) for band in "VBI" for key in (band, f"e_{band}")),
-            _cell(parallax, 3), _cell(star["e_parallax"], 3)]) + "\n")
+        rows.append(
+            ",".join(
+                [
+                    star["name"],
+                    star["file"],
+                    "" if star["file"] else star["true_type"],
+                    f"{ra:.5f}",
+                    f"{dec:.5f}",
+                    *(_cell(mags[key], 3) for band in "VBI" for key in (band, f"e_{band}")),
+                    _cell(parallax, 3),
+                    _cell(star["e_parallax"], 3),
+                ]
+            )
+            + "\n"
+        )
     path = folder / "targets.ecsv"
     path.write_text(TARGETS_HEADER.replace("@", SIMULATED) + "".join(rows))
     return [*paths, path]
@@ -274,15 +297,18 @@ def build(folder: Path = HERE) -> list[Path]:
 
 def truth_table() -> str:
     """What is true of each star, as the Markdown table of ``README.md``."""
+
     def shown(value: float, form: str) -> str:
         return format(value, form) if np.isfinite(value) else ""
 
-    out = ["| star | file | layout | type | M_V | distance, pc | E(B-V) | velocity, km/s | FWHM, Å | S/N | what is special |",
-           "| --- | --- | --- | --- | --- | --- | --- | --- | --- | --- | --- |"]
+    titles = ("star", "file", "layout", "type", "M_V", "distance, pc", "E(B-V)", "velocity, km/s", "FWHM, Å", "S/N")
+    out = [f"| {' | '.join(titles)} | what is special |", "| --- " * (len(titles) + 1) + "|"]
     for s in Table.read(HERE / "stars.ecsv").filled(""):
-        out.append(f"| {s['name']} | {s['file']} | {s['form']} | {s['true_type']} | {shown(s['abs_mag_v'], '.2f')} "
-                   f"| {shown(s['distance_pc'], '.0f')} | {shown(s['ebv'], '.2f')} | {shown(s['velocity_kms'], '+.0f')} "
-                   f"| {shown(s['fwhm'], '.0f')} | {shown(s['snr'], '.0f')} | {s['story']} |")
+        out.append(
+            f"| {s['name']} | {s['file']} | {s['form']} | {s['true_type']} | {shown(s['abs_mag_v'], '.2f')} "
+            f"| {shown(s['distance_pc'], '.0f')} | {shown(s['ebv'], '.2f')} | {shown(s['velocity_kms'], '+.0f')} "
+            f"| {shown(s['fwhm'], '.0f')} | {shown(s['snr'], '.0f')} | {s['story']} |"
+        )
     return "\n".join(out) + "\n"
 
 

@@ -7,7 +7,7 @@ target list alone and every star has its own seed, so a batch gives the same res
 from __future__ import annotations
 
 import math
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, replace
 from typing import TYPE_CHECKING, Any
 
@@ -29,15 +29,20 @@ BUDGET_COLUMNS: tuple[Column, ...] = (
     ("step", "", None, "what contributed"),
     ("sigma_mag", "mag", 4, "its share of the error of the distance modulus, one standard deviation"),
     ("per_cent", "", 2, "the same as per cent of the distance"),
+    ("share", "", 4, "part of the variance of the total"),
 )
+
+#: Flags of a star whose type the target list, or a person at the desk, gave.
+TYPE_GIVEN = "type-given"
+BY_HAND = "typed-by-hand"
 
 
 @dataclass(frozen=True)
 class RunSettings:
     """What a run is asked to do, besides its targets. Small and plain: it travels to the workers.
 
-    ``seed`` is the run's; each star's own is derived from it and the star's place in the list. ``medium`` is "air",
-    "vacuum" or None (from the files). ``scale``, ``prior`` and ``rv`` go to the distance step, None for its defaults.
+    ``medium`` is "air", "vacuum" or None (from the files). ``scale``, ``prior`` and ``rv`` go to the distance step, None
+    for its defaults.
     """
 
     seed: int = 0
@@ -47,7 +52,7 @@ class RunSettings:
     without_libraries: tuple[str, ...] = ()
     without_stars: tuple[int, ...] = ()
     medium: str | None = None
-    n_samples: int = 4000
+    n_samples: int = 2000
     details: bool = True
 
 
@@ -59,11 +64,6 @@ def result_columns() -> tuple[Column, ...]:
     first: tuple[Column, ...] = (("name", "", None, "star, as the target list calls it"), *ASSIGNED)
     taken = {c[0] for c in first}
     return (*first, *(c for c in FATHOMED if c[0] not in taken))
-
-
-def star_seed(seed: int, index: int) -> int:
-    """The seed of the star at place ``index`` of the list, from the run's seed."""
-    return int(np.random.SeedSequence([seed, index]).generate_state(1, np.uint64)[0] >> np.uint64(1))
 
 
 def given_type(text: str) -> Assignment:
@@ -79,11 +79,23 @@ def given_type(text: str) -> Assignment:
 
     mk = MKType.parse(text)
     if mk.kind != "star" or not math.isfinite(mk.t_code):
-        return Assignment(status="refused", object_kind=mk.kind, other_type=text,
-                          reason=f"{text} is not a type on the MK sequence, so no luminosity follows from it.")
+        return Assignment(
+            status="refused",
+            object_kind=mk.kind,
+            other_type=text,
+            reason=f"{text} is not a type on the MK sequence, so no luminosity follows from it.",
+        )
     posterior = _even_posterior(mk)
-    return Assignment(status="typed", object_kind="star", mk_type=str(mk), t_code=mk.t_code, lum_code=mk.lum_code,
-                      posterior=posterior, flags=("type-given",), notes=("type as given in the target list",))
+    return Assignment(
+        status="typed",
+        object_kind="star",
+        mk_type=str(mk),
+        t_code=mk.t_code,
+        lum_code=mk.lum_code,
+        posterior=posterior,
+        flags=(TYPE_GIVEN,),
+        notes=("type as given in the target list",),
+    )
 
 
 def _even_posterior(mk: MKType) -> np.ndarray:
@@ -129,48 +141,75 @@ def _classify(targets: Sequence[Target], settings: RunSettings) -> list[Assignme
     from starfathom.classify.engine import Classifier, Settings
     from starfathom.classify.reading import read_plain
 
-    classifier = Classifier.load(without_libraries=settings.without_libraries,
-                                 without_stars=settings.without_stars)
+    classifier = Classifier.load(without_libraries=settings.without_libraries, without_stars=settings.without_stars)
     spectra, asked = [], []
     for target in targets:
         try:
             spectra.append(read_plain(target.spectrum, medium=settings.medium))
         except SpectrumError as fault:
             spectra.append(fault)
-        asked.append(Settings(medium=settings.medium, fwhm_angstrom=target.fwhm_angstrom,
-                              velocity_kms=target.velocity_kms))
+        asked.append(
+            Settings(medium=settings.medium, fwhm_angstrom=target.fwhm_angstrom, velocity_kms=target.velocity_kms)
+        )
     answers = classifier.classify_many(spectra, asked)
     return [replace(a, file=t.spectrum) for a, t in zip(answers, targets)]
 
 
-def fathom_targets(targets: Sequence[Target], assignments: Sequence[Assignment],
-                   settings: RunSettings) -> list[Fathoming | str | None]:
-    """Distance of every typed target with photometry; a sentence where it cannot be had, None where not typed."""
+def fathom_targets(
+    targets: Sequence[Target], assignments: Sequence[Assignment], settings: RunSettings, *, common_groups: bool = False
+) -> list[Fathoming | str | None]:
+    """Distance of every typed target with photometry; a sentence where it cannot be had, None where not typed.
+
+    A star's answer depends on its own data and the run's seed alone, unless ``common_groups`` gives the members of a
+    group a common distance and reddening: then all of them must be in the call.
+    """
+    from starfathom.classify.mktype import MKType
+    from starfathom.distance import Photometry, Request, fathom_many
+
     out: list[Fathoming | str | None] = [None] * len(targets)
+    places, requests = [], []
     for i, (target, assignment) in enumerate(zip(targets, assignments)):
         if assignment.status != "typed":
             continue
         if not target.magnitudes:
-            out[i] = "no photometry, so no distance"
+            out[i] = "No photometry, so no distance."
             continue
-        out[i] = _fathom_one(target, assignment, settings)
+        given = TYPE_GIVEN in assignment.flags or BY_HAND in assignment.flags
+        places.append(i)
+        requests.append(
+            Request(
+                MKType.parse(assignment.mk_type) if given else assignment,
+                Photometry(target.magnitudes),
+                parallax=target.parallax,
+                ra_deg=target.ra_deg,
+                dec_deg=target.dec_deg,
+                ebv=target.ebv,
+                rv=settings.rv,
+                group=target.group,
+                name=target.name,
+            )
+        )
+    if requests:
+        found = fathom_many(
+            requests,
+            scale=settings.scale,
+            prior=settings.prior,
+            n_samples=settings.n_samples,
+            seed=settings.seed,
+            keep_samples=settings.details,
+            workers=1,
+            common_groups=common_groups,
+        )
+        for i, answer in zip(places, found):
+            out[i] = str(answer) if isinstance(answer, StarfathomError) else answer
     return out
-
-
-def _fathom_one(target: Target, source: Assignment | MKType, settings: RunSettings) -> Fathoming | str:
-    from starfathom.distance import Photometry, fathom
-
-    try:
-        return fathom(source, Photometry(target.magnitudes), parallax=target.parallax, ra_deg=target.ra_deg,
-                      dec_deg=target.dec_deg, ebv=target.ebv, scale=settings.scale, prior=settings.prior,
-                      rv=settings.rv, n_samples=settings.n_samples, seed=star_seed(settings.seed, target.index))
-    except StarfathomError as fault:
-        return str(fault)
 
 
 def row_of(target: Target, assignment: Assignment, fathoming: Fathoming | str | None) -> dict[str, Any]:
     """One row of the results: every column of :func:`result_columns`, numbers NaN where there is no distance."""
-    row: dict[str, Any] = {name: math.nan if decimals is not None else "" for name, _u, decimals, _d in result_columns()}
+    row: dict[str, Any] = {
+        name: math.nan if decimals is not None else "" for name, _u, decimals, _d in result_columns()
+    }
     row |= {"name": target.name} | assignment.row()
     if isinstance(fathoming, str):
         row["cautions"] = fathoming
@@ -183,16 +222,23 @@ def budget_of(target: Target, fathoming: Fathoming | str | None) -> list[dict[st
     """The star's rows of the budget, keyed by :data:`BUDGET_COLUMNS`."""
     if fathoming is None or isinstance(fathoming, str):
         return []
-    return [{"name": target.name, **{k: entry[k] for k in ("step", "sigma_mag", "per_cent")}}
-            for entry in fathoming.budget]
+    return [
+        {
+            "name": target.name,
+            "step": part.step,
+            "sigma_mag": part.sigma_mag,
+            "per_cent": part.per_cent,
+            "share": part.share,
+        }
+        for part in fathoming.budget
+    ]
 
 
 def detail_of(target: Target, assignment: Assignment, fathoming: Fathoming | str | None) -> dict[str, Any]:
     """What the report and the desk show of a star beyond its row.
 
-    Keys: ``name``, ``index``, ``spectrum`` (path), ``mk_type_given``, ``magnitudes`` (band -> [value, error]),
-    ``fwhm_angstrom`` and ``velocity_kms`` (as the list gave them, or None), ``seed``, ``posterior`` (cells of at least
-    1e-6 as [subtype index, class index, probability]), ``evidence`` (the fields of each criterion), ``distance_samples_pc``
+    Keys: ``name``; ``target`` (the fields of :class:`starfathom.targets.Target`); ``posterior`` (cells of at least 1e-6
+    as [subtype index, class index, probability]); ``evidence`` (the fields of each criterion); ``distance_samples_pc``
     (101 quantiles, 0 to 100 %, or None).
     """
     from dataclasses import asdict
@@ -207,11 +253,33 @@ def detail_of(target: Target, assignment: Assignment, fathoming: Fathoming | str
         if samples is not None:
             quantiles = [float(f"{q:.5g}") for q in np.quantile(samples, np.linspace(0, 1, 101))]
     return {
-        "name": target.name, "index": target.index, "spectrum": target.spectrum, "mk_type_given": target.mk_type,
-        "magnitudes": {b: list(v) for b, v in target.magnitudes.items()}, "fwhm_angstrom": target.fwhm_angstrom,
-        "velocity_kms": target.velocity_kms, "posterior": cells,
-        "evidence": [asdict(c) for c in assignment.evidence], "distance_samples_pc": quantiles,
+        "name": target.name,
+        "target": asdict(target),
+        "posterior": cells,
+        "evidence": [asdict(c) for c in assignment.evidence],
+        "distance_samples_pc": quantiles,
     }
+
+
+def assignment_of(row: Mapping[str, Any], detail: Mapping[str, Any] | None) -> Assignment:
+    """The assignment again from a row of the record, rounded as there, and its detail (without: no posterior)."""
+    from starfathom.classify.assignment import Assignment, Criterion
+    from starfathom.templates.subtypes import CLASSES, SUBTYPES
+
+    posterior = None
+    if detail is not None and detail["posterior"]:
+        posterior = np.zeros((len(SUBTYPES), len(CLASSES)))
+        for i, j, p in detail["posterior"]:
+            posterior[i, j] = p
+        posterior /= posterior.sum()
+    names = Assignment.__dataclass_fields__
+    kept = {k: v for k, v in row.items() if k in names}
+    for name in ("type_set_90", "nearest", "flags"):
+        kept[name] = tuple(str(row[name]).split(",")) if row[name] else ()
+    kept["notes"] = tuple(str(row["notes"]).split("; ")) if row["notes"] else ()
+    told = detail["evidence"] if detail is not None else []
+    evidence = tuple(Criterion(**{**c, "features": tuple(c["features"])}) for c in told)
+    return Assignment(**kept, posterior=posterior, evidence=evidence)
 
 
 def work_batch(number: int, targets: Sequence[Target], settings: RunSettings) -> BatchResult:
@@ -223,5 +291,5 @@ def work_batch(number: int, targets: Sequence[Target], settings: RunSettings) ->
         number,
         rows=[row_of(*t) for t in triples],
         budget=[b for target, _a, f in triples for b in budget_of(target, f)],
-        details=[detail_of(*t) for t in triples] if settings.details else None,
+        details=[detail_of(*t) if settings.details or t[0].group else None for t in triples],
     )

@@ -22,13 +22,18 @@ if TYPE_CHECKING:
     from starfathom.classify.spectrum import PlainSpectrum
 
 app = typer.Typer(
-    name="starfathom", no_args_is_help=True, add_completion=False, rich_markup_mode=None,
-    pretty_exceptions_enable=False, context_settings={"help_option_names": ["-h", "--help"], "max_content_width": 110},
+    name="starfathom",
+    no_args_is_help=True,
+    add_completion=False,
+    rich_markup_mode=None,
+    pretty_exceptions_enable=False,
+    context_settings={"help_option_names": ["-h", "--help"], "max_content_width": 110},
     help="MK types, distances and radii of stars from low-resolution optical spectra.",
     epilog="Exit codes: 0 all done (a refusal is a result), 1 some inputs failed, 2 bad arguments.",
 )
-templates_app = typer.Typer(no_args_is_help=True, rich_markup_mode=None,
-                            help="The reference library and your own standards.")
+templates_app = typer.Typer(
+    no_args_is_help=True, rich_markup_mode=None, help="The reference library and your own standards."
+)
 app.add_typer(templates_app, name="templates")
 
 #: Files read and classified at a time.
@@ -42,9 +47,15 @@ BLOCKS = 40
 # mypy and typer read these as types, hence the capitals.
 Air = Annotated[bool, typer.Option("--air", help="Wavelengths are in air, whatever the file says.")]
 Vacuum = Annotated[bool, typer.Option("--vacuum", help="Wavelengths are in vacuum, whatever the file says.")]
-Fwhm = Annotated[float | None, typer.Option(metavar="ANGSTROM", help="Width of the line spread; measured if not given.")]
-Without = Annotated[str, typer.Option("--without", metavar="LIB,LIB", help="Leave source libraries out of everything learned.")]
-WithoutStar = Annotated[str, typer.Option("--without-star", metavar="HIP,...", help="Leave stars out of everything learned.")]
+Fwhm = Annotated[
+    float | None, typer.Option(metavar="ANGSTROM", help="Width of the line spread; measured if not given.")
+]
+Without = Annotated[
+    str, typer.Option("--without", metavar="LIB,LIB", help="Leave source libraries out of everything learned.")
+]
+WithoutStar = Annotated[
+    str, typer.Option("--without-star", metavar="HIP,...", help="Leave stars out of everything learned.")
+]
 AsJson = Annotated[bool, typer.Option("--json", help="Print JSON and nothing else.")]
 Scale = Annotated[str | None, typer.Option(metavar="NAME", help="Luminosity scale; an unknown name lists them.")]
 Prior = Annotated[str | None, typer.Option(metavar="NAME", help="Distance prior; an unknown name lists them.")]
@@ -76,8 +87,9 @@ def _positive(value: float | None, option: str, unit: str) -> None:
         raise RequestError(f"{option} {value:g}: must be above 0 ({unit}).")
 
 
-def _settings(air: bool, vacuum: bool, fwhm: float | None, resolution: float | None,
-              velocity: float | None) -> Settings:
+def _settings(
+    air: bool, vacuum: bool, fwhm: float | None, resolution: float | None, velocity: float | None
+) -> Settings:
     from starfathom.classify.engine import Settings
 
     _positive(fwhm, "--fwhm", "angstrom")
@@ -116,18 +128,29 @@ def _plain(value: Any) -> Any:
 
 # classify ------------------------------------------------------------------------------------------------------------
 
+
 @app.command()
 def classify(
     files: Annotated[list[str], typer.Argument(metavar="FILE...", help="Spectra in any usual format.")],
-    output: Annotated[str | None, typer.Option("-o", "--output", metavar="TABLE",
-                      help="Write a table: .ecsv, .csv, .fits, .vot or .parquet.")] = None,
+    output: Annotated[
+        str | None,
+        typer.Option("-o", "--output", metavar="TABLE", help="Write a table: .ecsv, .csv, .fits, .vot or .parquet."),
+    ] = None,
     air: Air = False,
     vacuum: Vacuum = False,
     fwhm: Fwhm = None,
     resolution: Annotated[float | None, typer.Option(metavar="R", help="Resolving power, in place of --fwhm.")] = None,
-    velocity: Annotated[float | None, typer.Option(metavar="KMS", help="Velocity of the star; measured if not given.")] = None,
-    read_as: Annotated[str | None, typer.Option("--read-as", metavar="KIND",
-                       help="Read the files as this kind when guessing fails; an unknown kind lists them.")] = None,
+    velocity: Annotated[
+        float | None, typer.Option(metavar="KMS", help="Velocity of the star; measured if not given.")
+    ] = None,
+    read_as: Annotated[
+        str | None,
+        typer.Option(
+            "--read-as",
+            metavar="KIND",
+            help="Read the files as this kind when guessing fails; an unknown kind lists them.",
+        ),
+    ] = None,
     without: Without = "",
     without_star: WithoutStar = "",
     as_json: AsJson = False,
@@ -144,7 +167,7 @@ def classify(
     told: list[dict[str, Any]] = []
     with Progress("spectra", len(files), wanted=not as_json) as bar:
         for start in range(0, len(files), BATCH):
-            paths = files[start:start + BATCH]
+            paths = files[start : start + BATCH]
             spectra = [_read(path, settings.medium, read_as) for path in paths]
             for path, answer in zip(paths, classifier.classify_many(spectra, settings)):
                 row = answer.row() | {"file": path}
@@ -206,22 +229,32 @@ def _say_stars(rows: Sequence[dict[str, Any]], budgets: dict[str, list[dict[str,
             _say(terminal.one_line(row, width=width, colour=colour))
     if len(rows) > 1:
         states = [row["status"] for row in rows]
-        _say(terminal.summary({"rows": len(rows), "refused": states.count("refused"),
-                               "failed": states.count("failed")}))
+        _say(
+            terminal.summary({"rows": len(rows), "refused": states.count("refused"), "failed": states.count("failed")})
+        )
 
 
 # lines, sheet, desk --------------------------------------------------------------------------------------------------
 
+
 @app.command()
 def lines(
     file: Annotated[str, typer.Argument(metavar="FILE", help="A spectrum in any usual format.")],
-    output: Annotated[str | None, typer.Option("-o", "--output", metavar="TABLE", help="Write a table, format by suffix.")] = None,
+    output: Annotated[
+        str | None, typer.Option("-o", "--output", metavar="TABLE", help="Write a table, format by suffix.")
+    ] = None,
     fwhm: Fwhm = None,
     air: Air = False,
     vacuum: Vacuum = False,
-    velocity: Annotated[float | None, typer.Option(metavar="KMS", help="Velocity of the star; measured if not given.")] = None,
-    read_as: Annotated[str | None, typer.Option("--read-as", metavar="KIND", help="Read the file as this kind.")] = None,
-    reference: Annotated[bool, typer.Option("--reference", help="Measure by the slow calls the quick ones are held to.")] = False,
+    velocity: Annotated[
+        float | None, typer.Option(metavar="KMS", help="Velocity of the star; measured if not given.")
+    ] = None,
+    read_as: Annotated[
+        str | None, typer.Option("--read-as", metavar="KIND", help="Read the file as this kind.")
+    ] = None,
+    reference: Annotated[
+        bool, typer.Option("--reference", help="Measure by the slow calls the quick ones are held to.")
+    ] = False,
     plot: Annotated[str | None, typer.Option("--plot", metavar="PICTURE", help="Draw the fits (.png, .pdf).")] = None,
     as_json: AsJson = False,
 ) -> None:
@@ -231,15 +264,28 @@ def lines(
     _positive(fwhm, "--fwhm", "angstrom")
     if output is not None:
         _check_output(output)
-    lines_command.run(file, output=output, fwhm_angstrom=fwhm, medium=_medium(air, vacuum), velocity_kms=velocity,
-                      read_as=read_as, reference=reference, plot=plot, as_json=as_json)
+    lines_command.run(
+        file,
+        output=output,
+        fwhm_angstrom=fwhm,
+        medium=_medium(air, vacuum),
+        velocity_kms=velocity,
+        read_as=read_as,
+        reference=reference,
+        plot=plot,
+        as_json=as_json,
+    )
 
 
 @app.command()
 def sheet(
     file: Annotated[str, typer.Argument(metavar="FILE", help="A spectrum in any usual format.")],
-    with_type: Annotated[str | None, typer.Option("--with", metavar="TYPE", help='Compare with this type, such as "G2 V".')] = None,
-    output: Annotated[str | None, typer.Option("-o", "--output", metavar="PICTURE", help="File to draw: .png or .pdf.")] = None,
+    with_type: Annotated[
+        str | None, typer.Option("--with", metavar="TYPE", help='Compare with this type, such as "G2 V".')
+    ] = None,
+    output: Annotated[
+        str | None, typer.Option("-o", "--output", metavar="PICTURE", help="File to draw: .png or .pdf.")
+    ] = None,
 ) -> None:
     """Draw the evidence as a page to print."""
     from starfathom import sheet as page
@@ -261,12 +307,19 @@ def desk(
 
 # distance ------------------------------------------------------------------------------------------------------------
 
+
 @app.command()
 def distance(
     mk_type: Annotated[str, typer.Option("--type", metavar="TYPE", help='MK type, such as "A2 V".')],
-    mag: Annotated[list[str] | None, typer.Option("--mag", metavar="BAND=MAG[,ERR]", help="A magnitude; repeat for more.")] = None,
-    parallax: Annotated[str | None, typer.Option(metavar="MAS,ERR", help="A measured parallax to compare with.")] = None,
-    ebv: Annotated[str | None, typer.Option(metavar="EBV,ERR", help="Reddening known from elsewhere, as a prior.")] = None,
+    mag: Annotated[
+        list[str] | None, typer.Option("--mag", metavar="BAND=MAG[,ERR]", help="A magnitude; repeat for more.")
+    ] = None,
+    parallax: Annotated[
+        str | None, typer.Option(metavar="MAS,ERR", help="A measured parallax to compare with.")
+    ] = None,
+    ebv: Annotated[
+        str | None, typer.Option(metavar="EBV,ERR", help="Reddening known from elsewhere, as a prior.")
+    ] = None,
     ra: Annotated[float | None, typer.Option(help="Right ascension, degrees.")] = None,
     dec: Annotated[float | None, typer.Option(help="Declination, degrees.")] = None,
     scale: Scale = None,
@@ -276,8 +329,10 @@ def distance(
     as_json: AsJson = False,
 ) -> None:
     """Distance and radius from type and magnitudes."""
+    from dataclasses import asdict
+
     from starfathom import terminal
-    from starfathom.chain import given_type
+    from starfathom.chain import TYPE_GIVEN, given_type
     from starfathom.classify.mktype import MKType
     from starfathom.distance import Photometry, fathom
 
@@ -290,16 +345,32 @@ def distance(
     assignment = given_type(mk_type)
     if assignment.status != "typed":
         raise RequestError(assignment.reason)
-    found = fathom(given, Photometry(magnitudes), parallax=_pair(parallax, "--parallax", "5.9,0.3"), ra_deg=ra, dec_deg=dec,
-                   ebv=_pair(ebv, "--ebv", "0.10,0.03"), scale=scale, prior=prior, rv=rv, seed=seed)
+    found = fathom(
+        given,
+        Photometry(magnitudes),
+        parallax=_pair(parallax, "--parallax", "5.9,0.3"),
+        ra_deg=ra,
+        dec_deg=dec,
+        ebv=_pair(ebv, "--ebv", "0.10,0.03"),
+        scale=scale,
+        prior=prior,
+        rv=rv,
+        seed=seed,
+    )
     row = {"mk_type": str(given)} | dict(found.row())
-    budget = [dict(entry) for entry in found.budget]
+    budget = [asdict(part) for part in found.budget]
     if as_json:
         _say_json(row | {"budget": budget, "cautions": list(found.cautions)})
         return
-    block = {"name": str(given), "type_given": True, "status": "typed"} | row
-    _say(terminal.star_block(block | {"cautions": list(found.cautions)}, budget, width=terminal.width_of(),
-                             colour=terminal.colour_wanted()))
+    block = {"name": "star", "flags": TYPE_GIVEN, "status": "typed"} | row
+    _say(
+        terminal.star_block(
+            block | {"cautions": list(found.cautions)},
+            budget,
+            width=terminal.width_of(),
+            colour=terminal.colour_wanted(),
+        )
+    )
 
 
 def _magnitude(text: str) -> tuple[str, tuple[float, float] | float]:
@@ -335,12 +406,17 @@ def _float(text: str, where: str) -> float:
 
 # run and demo --------------------------------------------------------------------------------------------------------
 
+
 @app.command()
 def run(
     targets: Annotated[str, typer.Argument(metavar="TARGETS", help="Target list: .ecsv, .csv, .fits or .parquet.")],
-    output: Annotated[str, typer.Option("-o", "--output", metavar="RUN_DIR", help="Folder of the run.")] = "starfathom_run",
+    output: Annotated[
+        str, typer.Option("-o", "--output", metavar="RUN_DIR", help="Folder of the run.")
+    ] = "starfathom_run",
     workers: Annotated[int | None, typer.Option(metavar="N", help="Processes; one a core if not given.")] = None,
-    scheduler: Annotated[str | None, typer.Option(metavar="tcp://...", help="Work on this Dask cluster instead.")] = None,
+    scheduler: Annotated[
+        str | None, typer.Option(metavar="tcp://...", help="Work on this Dask cluster instead.")
+    ] = None,
     resume: Annotated[bool, typer.Option("--resume", help="Finish the run in RUN_DIR, with its own settings.")] = False,
     seed: Annotated[int, typer.Option(metavar="N", help="Same seed, same result.")] = 0,
     scale: Scale = None,
@@ -350,8 +426,14 @@ def run(
     vacuum: Vacuum = False,
     without: Without = "",
     without_star: WithoutStar = "",
-    formats: Annotated[str, typer.Option("--formats", metavar="ecsv,csv,...",
-                       help="Tables wanted: ecsv, csv, fits, vot, parquet; all of them if not given.")] = "",
+    formats: Annotated[
+        str,
+        typer.Option(
+            "--formats",
+            metavar="ecsv,csv,...",
+            help="Tables wanted: ecsv, csv, fits, vot, parquet; all of them if not given.",
+        ),
+    ] = "",
     no_report: Annotated[bool, typer.Option("--no-report", help="Only the tables, no HTML report.")] = False,
     quiet: Annotated[bool, typer.Option("--quiet", "-q", help="No progress, no blocks.")] = False,
 ) -> None:
@@ -361,11 +443,27 @@ def run(
 
     if seed < 0:
         raise RequestError(f"--seed {seed}: give a whole number from 0 up.")
-    settings = RunSettings(seed=seed, scale=scale, prior=prior, rv=rv, medium=_medium(air, vacuum),
-                           without_libraries=_names(without), without_stars=_hips(without_star))
+    settings = RunSettings(
+        seed=seed,
+        scale=scale,
+        prior=prior,
+        rv=rv,
+        medium=_medium(air, vacuum),
+        without_libraries=_names(without),
+        without_stars=_hips(without_star),
+    )
     _check_names(scale, prior)
-    failed = _carry_out(TargetList(targets), output, settings, workers=workers, scheduler=scheduler, resume=resume,
-                        formats=_names(formats) or None, report=not no_report, quiet=quiet)
+    failed = _carry_out(
+        TargetList(targets),
+        output,
+        settings,
+        workers=workers,
+        scheduler=scheduler,
+        resume=resume,
+        formats=_names(formats) or None,
+        report=not no_report,
+        quiet=quiet,
+    )
     if failed:
         raise typer.Exit(1)
 
@@ -381,16 +479,34 @@ def _check_names(scale: str | None, prior: str | None) -> None:
             raise RequestError(f"{option} {value}: no such name; known are {', '.join(known)}.")
 
 
-def _carry_out(targets: Any, output: str, settings: Any, *, workers: int | None, scheduler: str | None, resume: bool,
-               formats: Sequence[str] | None, report: bool, quiet: bool) -> int:
+def _carry_out(
+    targets: Any,
+    output: str,
+    settings: Any,
+    *,
+    workers: int | None,
+    scheduler: str | None,
+    resume: bool,
+    formats: Sequence[str] | None,
+    report: bool,
+    quiet: bool,
+) -> int:
     from starfathom import terminal
     from starfathom.record import open_record
     from starfathom.survey import run_survey
 
     if targets.ignored_columns and not quiet:
         typer.echo(f"Columns not used: {', '.join(targets.ignored_columns)}", err=True)
-    outcome = run_survey(targets, output, settings, workers=workers, scheduler=scheduler, resume=resume,
-                         formats=formats, progress=not quiet)
+    outcome = run_survey(
+        targets,
+        output,
+        settings,
+        workers=workers,
+        scheduler=scheduler,
+        resume=resume,
+        formats=formats,
+        progress=not quiet,
+    )
     page = _write_report(outcome.run_dir) if report else None
     if not quiet:
         if outcome.rows <= BLOCKS:
@@ -415,7 +531,9 @@ def _write_report(run_dir: Path) -> Path | None:
 
 @app.command()
 def demo(
-    output: Annotated[str, typer.Option("-o", "--output", metavar="RUN_DIR", help="Folder of the report.")] = "demo_report",
+    output: Annotated[
+        str, typer.Option("-o", "--output", metavar="RUN_DIR", help="Folder of the report.")
+    ] = "demo_report",
 ) -> None:
     """The whole job on an invented observing run."""
     import shutil
@@ -431,19 +549,33 @@ def demo(
     elif folder.exists() and any(folder.iterdir()):
         raise RequestError(f"{folder}: is there already and holds no run; choose another folder with -o.")
     with as_file(files("starfathom.demo_spectra")) as spectra:
-        _say("The demonstration: one night at an observatory that does not exist. Every spectrum is simulated from a "
-             "real library star;\nthe story and the true answers are in demo_spectra/README.md.\n")
-        _carry_out(TargetList(spectra / "targets.ecsv"), output, RunSettings(), workers=None, scheduler=None,
-                   resume=False, formats=None, report=True, quiet=False)
+        _say(
+            "The demonstration: one night at an observatory that does not exist. Every spectrum is simulated from a "
+            "real library star;\nthe story and the true answers are in demo_spectra/README.md.\n"
+        )
+        _carry_out(
+            TargetList(spectra / "targets.ecsv"),
+            output,
+            RunSettings(),
+            workers=None,
+            scheduler=None,
+            resume=False,
+            formats=None,
+            report=True,
+            quiet=False,
+        )
 
 
 # plan and templates --------------------------------------------------------------------------------------------------
+
 
 @app.command()
 def plan(
     types: Annotated[str, typer.Option("--types", metavar="TYPE,TYPE", help='Rival types, such as "G8 III,G8 V".')],
     fwhm: Fwhm = None,
-    wave_range: Annotated[str | None, typer.Option("--range", metavar="LO-HI", help="Wavelengths observed, angstrom.")] = None,
+    wave_range: Annotated[
+        str | None, typer.Option("--range", metavar="LO-HI", help="Wavelengths observed, angstrom.")
+    ] = None,
     want: Annotated[str, typer.Option(metavar="GOAL", help='"class", or such as "distance 15%".')] = "class",
     as_json: AsJson = False,
 ) -> None:
@@ -493,6 +625,7 @@ def check() -> None:
 
 # The door ------------------------------------------------------------------------------------------------------------
 
+
 def version_text() -> str:
     """Name and version."""
     from starfathom import __version__
@@ -539,8 +672,11 @@ def _guarded(call: Callable[[], Any]) -> None:
     except Exception as fault:
         if os.environ.get("STARFATHOM_DEBUG"):
             raise
-        _stop(f"a fault of the program itself, not of your input: {type(fault).__name__}: {fault} "
-              "(set STARFATHOM_DEBUG=1 to see where).", 1)
+        _stop(
+            f"a fault of the program itself, not of your input: {type(fault).__name__}: {fault} "
+            "(set STARFATHOM_DEBUG=1 to see where).",
+            1,
+        )
 
 
 if __name__ == "__main__":

@@ -64,14 +64,22 @@ class Progress:
         from rich.progress import BarColumn, MofNCompleteColumn, TextColumn, TimeRemainingColumn
         from rich.progress import Progress as Bar
 
-        self._bar = Bar(BarColumn(bar_width=None), MofNCompleteColumn(), TextColumn(self.unit),
-                        TextColumn("{task.fields[rate]}"), TimeRemainingColumn(compact=True), TextColumn("left"),
-                        console=Console(stderr=True), transient=True)
+        self._bar = Bar(
+            BarColumn(bar_width=None),
+            MofNCompleteColumn(),
+            TextColumn(self.unit),
+            TextColumn("{task.fields[rate]}"),
+            TimeRemainingColumn(compact=True),
+            TextColumn("left"),
+            console=Console(stderr=True),
+            transient=True,
+        )
         self._bar.start()
         self._task = self._bar.add_task("", total=self.total, completed=self.done, rate="")
 
-    def __exit__(self, _kind: type[BaseException] | None, _fault: BaseException | None,
-                 _trace: TracebackType | None) -> None:
+    def __exit__(
+        self, _kind: type[BaseException] | None, _fault: BaseException | None, _trace: TracebackType | None
+    ) -> None:
         if self._bar is not None:
             self._bar.stop()
 

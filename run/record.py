@@ -76,8 +76,9 @@ class Record:
     def set_facts(self, facts: dict[str, Any]) -> None:
         """Keep ``facts`` (JSON values) under their keys, in one commit."""
         with _disk_faults(self.path), self._db:
-            self._db.executemany("INSERT OR REPLACE INTO facts VALUES (?, ?)",
-                                 [(k, json.dumps(v)) for k, v in facts.items()])
+            self._db.executemany(
+                "INSERT OR REPLACE INTO facts VALUES (?, ?)", [(k, json.dumps(v)) for k, v in facts.items()]
+            )
 
     def facts(self) -> dict[str, Any]:
         """Everything kept with :meth:`set_facts`."""
@@ -88,9 +89,15 @@ class Record:
     def add(self, result: BatchResult) -> bool:
         """Commit one batch; False when it was there already (then nothing changes, so no star can be doubled)."""
         states = [row.get("status") for row in result.rows]
-        values = (result.number, len(result.rows), states.count("refused"), states.count("failed"),
-                  _pack(result.rows), _pack(result.budget),
-                  None if result.details is None else _pack(result.details))
+        values = (
+            result.number,
+            len(result.rows),
+            states.count("refused"),
+            states.count("failed"),
+            _pack(result.rows),
+            _pack(result.budget),
+            _pack(result.details) if result.details and any(result.details) else None,
+        )
         with _disk_faults(self.path), self._db:
             done = self._db.execute("INSERT OR IGNORE INTO batches VALUES (?, ?, ?, ?, ?, ?, ?)", values)
         return done.rowcount == 1
@@ -121,7 +128,8 @@ class Record:
         return self._stream("budget")
 
     def details(self) -> dict[str, dict[str, Any]]:
-        """What was kept a star for the report and the desk, by name; empty above :data:`DETAIL_ROWS` stars."""
+        """What was kept a star for the report and the desk, by name; above :data:`DETAIL_ROWS` stars only for members
+        of groups. :mod:`starfathom.chain` says what is in it."""
         return {d["name"]: d for d in self._stream("details") if d}
 
     # life
@@ -143,8 +151,10 @@ class Record:
             fcntl.flock(handle, fcntl.LOCK_EX | fcntl.LOCK_NB)
         except OSError:
             os.close(handle)
-            raise RequestError(f"{self.path.parent}: another process is working on this run; wait for it to end, "
-                               "or choose another folder with -o.") from None
+            raise RequestError(
+                f"{self.path.parent}: another process is working on this run; wait for it to end, "
+                "or choose another folder with -o."
+            ) from None
         self._lock = handle
 
     def close(self) -> None:
@@ -172,8 +182,10 @@ class _disk_faults:
 
     def __exit__(self, _kind: object, fault: BaseException | None, _trace: object) -> None:
         if isinstance(fault, sqlite3.OperationalError | OSError):
-            raise StarfathomError(f"{self.path}: the record cannot be written ({fault}); every batch so far is safe: "
-                                  "free some space and run again with --resume.") from fault
+            raise StarfathomError(
+                f"{self.path}: the record cannot be written ({fault}); every batch so far is safe: "
+                "free some space and run again with --resume."
+            ) from fault
 
 
 def _connect(path: Path) -> sqlite3.Connection:
@@ -224,6 +236,7 @@ def open_record(run_dir: str | os.PathLike[str]) -> Record:
         # A run killed in its first instants may have left the file before its tables.
         connection.executescript(_SCHEMA)
     except sqlite3.DatabaseError as fault:
-        raise RequestError(f"{path}: is not a readable record ({fault}); start the run again in a new folder."
-                           ) from fault
+        raise RequestError(
+            f"{path}: is not a readable record ({fault}); start the run again in a new folder."
+        ) from fault
     return Record(path, connection)

@@ -1,7 +1,7 @@
 """A run over a target list: batches spread over processes or a Dask cluster, a record that survives anything.
 
-What decides the result is fixed before the work starts: which rows share a batch (their place in the list), each
-star's seed, the settings. Who does a batch, in which order, how often it had to be tried: none of it shows in the tables.
+What decides the result is fixed before the work starts: which rows share a batch (their place in the list), the seed,
+the settings. Who does a batch, in which order, how often it had to be tried: none of it shows in the tables.
 """
 
 from __future__ import annotations
@@ -9,7 +9,7 @@ from __future__ import annotations
 import os
 import threading
 from collections import deque
-from collections.abc import Callable, Iterable, Iterator, Sequence
+from collections.abc import Callable, Iterable, Iterator, Mapping, Sequence
 from contextlib import closing, contextmanager
 from dataclasses import asdict, dataclass, replace
 from pathlib import Path
@@ -37,6 +37,9 @@ PART_ROWS = 1_000_000
 ALL_FORMATS_ROWS = 100_000
 ALL_FORMATS = ("ecsv", "csv", "fits", "vot", "parquet")
 STREAMED_FORMATS = ("ecsv", "parquet")
+
+#: How long a Dask scheduler may take to answer.
+CONNECT_SECONDS = 15
 
 #: How often a batch whose worker died is tried before its stars are tried one by one.
 TRIES = 3
@@ -69,9 +72,18 @@ def usable_cores() -> int:
         return os.cpu_count() or 1
 
 
-def run_survey(targets: TargetList, run_dir: str | os.PathLike[str], settings: RunSettings, *,
-               workers: int | None = None, scheduler: str | None = None, resume: bool = False,
-               formats: Sequence[str] | None = None, work: Work | None = None, progress: bool = True) -> RunOutcome:
+def run_survey(
+    targets: TargetList,
+    run_dir: str | os.PathLike[str],
+    settings: RunSettings,
+    *,
+    workers: int | None = None,
+    scheduler: str | None = None,
+    resume: bool = False,
+    formats: Sequence[str] | None = None,
+    work: Work | None = None,
+    progress: bool = True,
+) -> RunOutcome:
     """Carry a target list through the chain and write the tables.
 
     Parameters
@@ -125,22 +137,36 @@ def _count_workers(asked: int | None, rows: int, size: int) -> int:
 
 # The record at start ------------------------------------------------------------------------------------------------
 
+
 @contextmanager
-def _started(targets: TargetList, run_dir: str | os.PathLike[str], settings: RunSettings, n_rows: int, size: int,
-             resume: bool) -> Iterator[Record]:
+def _started(
+    targets: TargetList, run_dir: str | os.PathLike[str], settings: RunSettings, n_rows: int, size: int, resume: bool
+) -> Iterator[Record]:
     with closing(open_record(run_dir) if resume else create_record(run_dir)) as record:
         record.lock()
         facts = record.facts()
         checksum = targets.checksum()
         if not facts:
-            record.set_facts({"settings": asdict(settings), "batch_size": size, "n_rows": n_rows,
-                              "targets": str(targets.path), "targets_sha256": checksum, "versions": versions()})
+            record.set_facts(
+                {
+                    "settings": asdict(settings),
+                    "batch_size": size,
+                    "n_rows": n_rows,
+                    "targets": str(targets.path),
+                    "targets_sha256": checksum,
+                    "versions": versions(),
+                }
+            )
         elif facts["targets_sha256"] != checksum:
-            raise RequestError(f"{targets.path}: is not the list that the run in {Path(run_dir)} was started with; "
-                               "give that list, or start anew in another folder.")
+            raise RequestError(
+                f"{targets.path}: is not the list that the run in {Path(run_dir)} was started with; "
+                "give that list, or start anew in another folder."
+            )
         elif facts["versions"]["starfathom"] != versions()["starfathom"]:
-            raise RequestError(f"{Path(run_dir)}: was started with version {facts['versions']['starfathom']}, this is "
-                               f"{versions()['starfathom']}; finish it with that one, or start anew.")
+            raise RequestError(
+                f"{Path(run_dir)}: was started with version {facts['versions']['starfathom']}, this is "
+                f"{versions()['starfathom']}; finish it with that one, or start anew."
+            )
         yield record
 
 
@@ -218,8 +244,9 @@ def _failed(number: int, batch: Sequence[Target], reason: str) -> BatchResult:
     return BatchResult(number, [row_of(t, Assignment(file=t.spectrum, reason=sentence), None) for t in batch])
 
 
-def _spread(jobs: Iterator[Job], work: Work, settings: RunSettings, workers: int,
-            scheduler: str | None) -> Iterator[BatchResult]:
+def _spread(
+    jobs: Iterator[Job], work: Work, settings: RunSettings, workers: int, scheduler: str | None
+) -> Iterator[BatchResult]:
     if scheduler:
         return on_dask(jobs, work, settings, scheduler)
     if workers == 1:
@@ -234,6 +261,7 @@ def _watch_parent() -> None:
 
     parent = parent_process()
     if parent is not None:
+
         def watch() -> None:
             wait([parent.sentinel])
             os._exit(1)
@@ -342,25 +370,34 @@ def on_dask(jobs: Iterator[Job], work: Work, settings: RunSettings, address: str
     try:
         from distributed import Client, KilledWorker, as_completed
     except ImportError as fault:
-        raise RequestError("--scheduler needs Dask, which is not installed; "
-                           "install it with: pip install 'starfathom[survey]'.") from fault
+        raise RequestError(
+            "--scheduler needs Dask, which is not installed; install it with: pip install 'starfathom[survey]'."
+        ) from fault
     try:
-        client = Client(address, timeout="15s", set_as_default=False)
+        client = Client(address, timeout=CONNECT_SECONDS, set_as_default=False)
     except (OSError, ValueError, TimeoutError) as fault:
-        raise StarfathomError(f"{address}: no Dask scheduler answers there ({fault}); "
-                              "start one, or leave out --scheduler.") from fault
+        raise StarfathomError(
+            f"{address}: no Dask scheduler answers there ({fault}); start one, or leave out --scheduler."
+        ) from fault
     jobs_of: dict[str, Job] = {}
     tries: dict[int, int] = {}
 
     def submit(job: Job) -> Any:
         tries[job[0]] = tries.get(job[0], 0) + 1
-        future = client.submit(do_batch, work, *job, settings, key=f"starfathom-{os.getpid()}-{job[0]}-{tries[job[0]]}",
-                               pure=False, retries=TRIES)
+        future = client.submit(
+            do_batch,
+            work,
+            *job,
+            settings,
+            key=f"starfathom-{os.getpid()}-{job[0]}-{tries[job[0]]}",
+            pure=False,
+            retries=TRIES,
+        )
         jobs_of[future.key] = job
         return future
 
     with client:
-        stream = as_completed(raise_errors=False)
+        stream = as_completed(loop=client.loop, raise_errors=False)
         finished = False
         while True:
             in_hand = 2 * max(1, sum(client.nthreads().values())) + 2
@@ -390,19 +427,34 @@ def on_dask(jobs: Iterator[Job], work: Work, settings: RunSettings, address: str
 
 # Tables -------------------------------------------------------------------------------------------------------------
 
-def finish(record: Record, targets: TargetList, settings: RunSettings,
-           formats: Sequence[str] | None = None) -> RunOutcome:
+
+def finish(
+    record: Record, targets: TargetList, settings: RunSettings, formats: Sequence[str] | None = None
+) -> RunOutcome:
     """Write the tables of a run whose batches are all in; doing it twice gives the same files."""
+    import json
+
     from starfathom import tables
     from starfathom.chain import BUDGET_COLUMNS, result_columns
+    from starfathom.overrides import budget_with, find_overrides, rows_with
 
     run_dir = record.path.parent
     counts = record.counts()
     n_rows = counts["rows"]
     facts = record.facts()
-    meta = {"made_by": f"starfathom {facts['versions']['starfathom']}", "targets_sha256": facts["targets_sha256"],
-            "seed": settings.seed}
-    rows, budget = record.rows, record.budget
+    meta = {
+        "made_by": f"starfathom {facts['versions']['starfathom']}",
+        "targets_sha256": facts["targets_sha256"],
+        "seed": settings.seed,
+    }
+    overrides = find_overrides(record, targets, settings)
+
+    def rows() -> Iterator[Mapping[str, Any]]:
+        return rows_with(record.rows(), overrides)
+
+    def budget() -> Iterator[Mapping[str, Any]]:
+        return budget_with(record.rows(), record.budget(), overrides)
+
     files: list[Path] = []
     for stem, source, columns in ((RESULTS, rows, result_columns()), (BUDGET, budget, BUDGET_COLUMNS)):
         if n_rows > PART_ROWS and formats is None:
@@ -413,7 +465,6 @@ def finish(record: Record, targets: TargetList, settings: RunSettings,
             path = run_dir / f"{stem}.{suffix}"
             tables.write_table(path, source, columns, meta)
             files.append(path)
-    import json
 
     told = {k: facts[k] for k in ("settings", "targets", "targets_sha256", "versions", "n_rows", "batch_size")}
     tables.write_text_aside(run_dir / "run.json", json.dumps(told | counts, indent=1, sort_keys=True) + "\n")

@@ -30,8 +30,17 @@ Row = Mapping[str, Any]
 #: A function that starts the rows from the beginning each time it is called (two passes are needed for FITS).
 RowSource = Callable[[], Iterable[Row]]
 
-SUFFIXES = {".ecsv": "ecsv", ".csv": "csv", ".fits": "fits", ".fit": "fits", ".vot": "votable", ".xml": "votable",
-            ".votable": "votable", ".parquet": "parquet", ".pq": "parquet"}
+SUFFIXES = {
+    ".ecsv": "ecsv",
+    ".csv": "csv",
+    ".fits": "fits",
+    ".fit": "fits",
+    ".vot": "votable",
+    ".xml": "votable",
+    ".votable": "votable",
+    ".parquet": "parquet",
+    ".pq": "parquet",
+}
 
 #: Rows held at a time when a format is streamed.
 CHUNK_ROWS = 4096
@@ -98,8 +107,10 @@ def format_of(path: str | os.PathLike[str]) -> str:
     """
     suffix = Path(path).suffix.lower()
     if suffix not in SUFFIXES:
-        raise RequestError(f"{os.fspath(path)}: the suffix {suffix or '(none)'} names no table format; "
-                           f"use one of {', '.join(SUFFIXES)}.")
+        raise RequestError(
+            f"{os.fspath(path)}: the suffix {suffix or '(none)'} names no table format; "
+            f"use one of {', '.join(SUFFIXES)}."
+        )
     return SUFFIXES[suffix]
 
 
@@ -125,8 +136,9 @@ def written_aside(path: str | os.PathLike[str]) -> Iterator[Path]:
         os.replace(scratch, path)
     except OSError as fault:
         _remove(scratch)
-        raise RequestError(f"{path}: cannot be written ({fault.strerror or fault}); "
-                           "free some space or choose another place with -o.") from fault
+        raise RequestError(
+            f"{path}: cannot be written ({fault.strerror or fault}); free some space or choose another place with -o."
+        ) from fault
     except BaseException:
         _remove(scratch)
         raise
@@ -145,8 +157,12 @@ def write_text_aside(path: str | os.PathLike[str], text: str) -> None:
         scratch.write_text(text, encoding="utf-8", newline="\n")
 
 
-def write_table(path: str | os.PathLike[str], rows: Sequence[Row] | RowSource, columns: Sequence[Column],
-                meta: Mapping[str, Any] | None = None) -> None:
+def write_table(
+    path: str | os.PathLike[str],
+    rows: Sequence[Row] | RowSource,
+    columns: Sequence[Column],
+    meta: Mapping[str, Any] | None = None,
+) -> None:
     """Write a table in the format that the suffix of ``path`` names.
 
     Parameters
@@ -178,8 +194,13 @@ def write_table(path: str | os.PathLike[str], rows: Sequence[Row] | RowSource, c
                 _write_votable(scratch, table)
 
 
-def write_parts(folder: str | os.PathLike[str], rows: Iterable[Row], columns: Sequence[Column],
-                part_rows: int, meta: Mapping[str, Any] | None = None) -> list[Path]:
+def write_parts(
+    folder: str | os.PathLike[str],
+    rows: Iterable[Row],
+    columns: Sequence[Column],
+    part_rows: int,
+    meta: Mapping[str, Any] | None = None,
+) -> list[Path]:
     """Write ``rows`` as numbered Parquet files of ``part_rows`` rows; returns their paths in order.
 
     Parts left there by an earlier, longer table are removed, so that the folder read as one data set is the table.
@@ -221,6 +242,7 @@ def _cell(value: Any, column: Column) -> Any:
 
 # ECSV and CSV ------------------------------------------------------------------------------------------------------
 
+
 def _yaml_text(text: str) -> str:
     """A double-quoted YAML scalar (JSON strings are valid YAML)."""
     import json
@@ -248,8 +270,9 @@ def ecsv_header(columns: Sequence[Column], meta: Mapping[str, Any]) -> str:
     return "".join(f"# {line}\n" for line in out)
 
 
-def _write_csv(stream: IO[str], rows: Iterable[Row], columns: Sequence[Column], meta: Mapping[str, Any], *,
-               header: bool) -> None:
+def _write_csv(
+    stream: IO[str], rows: Iterable[Row], columns: Sequence[Column], meta: Mapping[str, Any], *, header: bool
+) -> None:
     if header:
         stream.write(ecsv_header(columns, meta))
     writer = csv.writer(stream, lineterminator="\n")
@@ -273,6 +296,7 @@ def _csv_cell(value: Any, column: Column, ecsv: bool) -> str:
 
 # Parquet -----------------------------------------------------------------------------------------------------------
 
+
 def parquet_schema(columns: Sequence[Column], meta: Mapping[str, Any]) -> pa.Schema:
     """Arrow schema with unit, meaning and UCD of each column in the field's own metadata."""
     import pyarrow as pa
@@ -293,12 +317,14 @@ def _write_parquet(path: Path, rows: Iterable[Row], columns: Sequence[Column], m
     stream = iter(rows)
     with pq.ParquetWriter(path, schema, compression="zstd") as writer:
         while chunk := list(itertools.islice(stream, CHUNK_ROWS)):
-            arrays = [pa.array([_cell(row.get(c[0]), c) for row in chunk], type=schema.field(c[0]).type)
-                      for c in columns]
+            arrays = [
+                pa.array([_cell(row.get(c[0]), c) for row in chunk], type=schema.field(c[0]).type) for c in columns
+            ]
             writer.write_table(pa.Table.from_arrays(arrays, schema=schema))
 
 
 # FITS and VOTable, through astropy ---------------------------------------------------------------------------------
+
 
 def to_table(rows: Iterable[Row], columns: Sequence[Column], meta: Mapping[str, Any] | None = None) -> Table:
     """The rows as an ``astropy.table.Table`` with units, descriptions and UCDs (``column.meta['ucd']``)."""
@@ -314,8 +340,9 @@ def to_table(rows: Iterable[Row], columns: Sequence[Column], meta: Mapping[str, 
     for cells, (name, unit, decimals, doc) in zip(held, columns):
         dtype = float if decimals is not None else bool if is_truth(name) else str
         ucd = ucd_of(name)
-        table[name] = AstropyColumn(np.array(cells, dtype=dtype), unit=unit or None, description=doc,
-                                    meta={"ucd": ucd} if ucd else {})
+        table[name] = AstropyColumn(
+            np.array(cells, dtype=dtype), unit=unit or None, description=doc, meta={"ucd": ucd} if ucd else {}
+        )
     return table
 
 
@@ -329,7 +356,7 @@ def _write_fits(path: Path, table: Table) -> None:
     for name in plain.colnames:
         if plain[name].dtype.kind == "U":
             # FITS tables hold ASCII only; a text column also needs at least one character of width.
-            plain[name] = np.array([_ascii(v) for v in plain[name]] or [""], dtype="S")[:len(plain)]
+            plain[name] = np.array([_ascii(v) for v in plain[name]] or [""], dtype="S")[: len(plain)]
             plain[name] = plain[name].astype(f"S{max(1, plain[name].dtype.itemsize)}")
     hdu = fits.table_to_hdu(plain)
     hdu.header["EXTNAME"] = "RESULTS"
@@ -355,19 +382,18 @@ def _write_votable(path: Path, table: Table) -> None:
     from astropy.units import UnitsWarning
 
     facts, table.meta = dict(table.meta), {}
+    held = io.BytesIO()
     with warnings.catch_warnings():
         # VOUnit would rather have 0.1 nm; every VO tool reads Angstrom.
         warnings.simplefilter("ignore", UnitsWarning)
         tree = VOTableFile.from_table(table, table_id="results")
-    first = tree.get_first_table()
-    for field in first.fields:
-        ucd = ucd_of(field.name)
-        if ucd:
-            field.ucd = ucd
-    for key, value in facts.items():
-        tree.infos.append(Info(ID=_xml_id(key), name=str(key), value=str(value)))
-    held = io.BytesIO()
-    tree.to_xml(held)
+        for field in tree.get_first_table().fields:
+            ucd = ucd_of(field.name)
+            if ucd:
+                field.ucd = ucd
+        for key, value in facts.items():
+            tree.infos.append(Info(ID=_xml_id(key), name=str(key), value=str(value)))
+        tree.to_xml(held)
     path.write_bytes(held.getvalue())
 
 

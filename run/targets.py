@@ -1,8 +1,8 @@
 """The target list of a run: ECSV, CSV, FITS or Parquet, checked whole before any work, read in chunks.
 
-A target has a ``name``, a ``spectrum`` path (relative paths count from the list's own folder) or an ``mk_type``, and any of:
-magnitudes in columns named by band with ``e_`` errors, ``ra``, ``dec`` (degrees), ``parallax``, ``e_parallax`` (mas),
-``ebv``, ``e_ebv``, ``group``, ``fwhm`` (angstrom), ``velocity`` (km/s). Other columns are left alone.
+A target has a ``name``, a ``spectrum`` path (relative paths count from the list's own folder) or an ``mk_type``, and
+any of: magnitudes in columns named by band with ``e_`` errors, ``ra``, ``dec`` (degrees), ``parallax``, ``e_parallax``
+(mas), ``ebv``, ``e_ebv``, ``group``, ``fwhm`` (angstrom), ``velocity`` (km/s). Other columns are left alone.
 
 Lists of ten million rows are fine: one chunk is in memory at a time, besides eight bytes a row to find doubled names.
 """
@@ -139,11 +139,15 @@ class TargetList:
                 continue
             stem = column[2:] if column.startswith("e_") else column
             if column.startswith("e_") or f"e_{column}" in self.all_columns or _LIKE_A_BAND.match(column):
-                raise RequestError(f"{where}: column {column}: {stem} is no band known here; "
-                                   f"known are {', '.join(BANDS)} (as written: V, not v).")
+                raise RequestError(
+                    f"{where}: column {column}: {stem} is no band known here; "
+                    f"known are {', '.join(BANDS)} (as written: V, not v)."
+                )
         if "name" not in known:
-            raise RequestError(f"{where}: has no column called name (it has: {', '.join(self.all_columns[:12])}); "
-                               "every target needs a name.")
+            raise RequestError(
+                f"{where}: has no column called name (it has: {', '.join(self.all_columns[:12])}); "
+                "every target needs a name."
+            )
         if "spectrum" not in known and "mk_type" not in known:
             raise RequestError(f"{where}: has neither a spectrum nor an mk_type column, so there is nothing to go by.")
         for quantity in ("parallax", "ebv", *BANDS):
@@ -165,8 +169,10 @@ class TargetList:
             try:
                 factor = float(u.Unit(stated).to(u.Unit(NUMBER_COLUMNS[name][0])))
             except ValueError as fault:
-                raise RequestError(f"{self.path}: column {column} is in {stated}, which is not a unit for it; "
-                                   f"give it in {NUMBER_COLUMNS[name][0]}.") from fault
+                raise RequestError(
+                    f"{self.path}: column {column} is in {stated}, which is not a unit for it; "
+                    f"give it in {NUMBER_COLUMNS[name][0]}."
+                ) from fault
             if not math.isclose(factor, 1.0, rel_tol=1e-12):
                 factors[name] = factor
         return factors
@@ -175,6 +181,11 @@ class TargetList:
     def has_spectra(self) -> bool:
         """Whether any row may name a spectrum."""
         return "spectrum" in self._columns
+
+    @property
+    def has_groups(self) -> bool:
+        """Whether any row may belong to a group."""
+        return "group" in self._columns
 
     @property
     def ignored_columns(self) -> tuple[str, ...]:
@@ -190,15 +201,17 @@ class TargetList:
             for raw in self._reader.chunks(wanted):
                 size = len(next(iter(raw.values())))
                 text = {k: [_text(v) for v in raw[c]] for k, c in self._columns.items() if k in TEXT_COLUMNS}
-                numbers = {k: self._numbers(k, raw[c], start, text["name"])
-                           for k, c in self._columns.items() if k not in TEXT_COLUMNS}
+                numbers = {
+                    k: self._numbers(k, raw[c], start, text["name"])
+                    for k, c in self._columns.items()
+                    if k not in TEXT_COLUMNS
+                }
                 yield _Chunk(start, size, text, numbers)
                 start += size
         except RequestError:
             raise
         except Exception as fault:
-            raise RequestError(f"{self.path}: cannot be read beyond row {start} ({_first_line(fault)})."
-                               ) from fault
+            raise RequestError(f"{self.path}: cannot be read beyond row {start} ({_first_line(fault)}).") from fault
 
     def _numbers(self, name: str, cells: Any, start: int, names: list[str]) -> FloatArray:
         try:
@@ -210,8 +223,9 @@ class TargetList:
                 try:
                     out[i] = math.nan if shown.lower() in _ABSENT else float(shown)
                 except ValueError:
-                    raise RequestError(f"{self._place(start + i, names[i])}: {name} is {shown!r}, "
-                                       "which is not a number.") from None
+                    raise RequestError(
+                        f"{self._place(start + i, names[i])}: {name} is {shown!r}, which is not a number."
+                    ) from None
         return out * self._factors[name] if name in self._factors else out
 
     def _place(self, index: int, name: str) -> str:
@@ -269,8 +283,10 @@ class TargetList:
             bad = np.isfinite(value) & ~(error > 0)
             if bad.any():
                 i = int(np.argmax(bad))
-                raise RequestError(f"{self._place(chunk.start + i, chunk.text['name'][i])}: the parallax "
-                                   "has no error; give e_parallax above 0, or leave both cells empty.")
+                raise RequestError(
+                    f"{self._place(chunk.start + i, chunk.text['name'][i])}: the parallax "
+                    "has no error; give e_parallax above 0, or leave both cells empty."
+                )
 
     @staticmethod
     def _check_type(text: str, place: str) -> None:
@@ -294,8 +310,10 @@ class TargetList:
                     continue
                 row = chunk.start + i
                 if name in seen:
-                    raise RequestError(f"{self.path}: the name {name} is in rows {seen[name] + 1} and {row + 1}; "
-                                       "every target needs a name of its own.")
+                    raise RequestError(
+                        f"{self.path}: the name {name} is in rows {seen[name] + 1} and {row + 1}; "
+                        "every target needs a name of its own."
+                    )
                 seen[name] = row
 
     def targets(self) -> Iterator[Target]:
@@ -382,6 +400,7 @@ def _first_line(fault: BaseException) -> str:
 
 # Readers: ``head()`` gives (column names, unit of each that states one); ``chunks(columns)`` gives dicts of cells.
 
+
 class _CsvReader:
     """CSV, TSV, blank-separated text and ECSV, with or without gzip."""
 
@@ -454,8 +473,10 @@ class _CsvReader:
             while chunk := list(itertools.islice(rows, CHUNK_ROWS)):
                 for i, row in enumerate(chunk):
                     if len(row) != len(names):
-                        raise RequestError(f"{self.path}: row {row_number + i + 1} has {len(row)} cells where the header "
-                                           f"names {len(names)} columns; quote cells that hold the separator.")
+                        raise RequestError(
+                            f"{self.path}: row {row_number + i + 1} has {len(row)} cells where the "
+                            f"header names {len(names)} columns; quote cells that hold the separator."
+                        )
                 row_number += len(chunk)
                 yield {c: [row[p] for row in chunk] for c, p in places.items()}
 
@@ -485,9 +506,11 @@ class _FitsReader:
         with fits.open(self.path, memmap=True) as hdus:
             table = self._table(hdus)
             for start in range(0, len(table.data), CHUNK_ROWS):
-                part = table.data[start:start + CHUNK_ROWS]
-                yield {c: part[c].tolist() if part[c].dtype.kind in "SUO" else np.asarray(part[c], dtype=np.float64)
-                       for c in columns}
+                part = table.data[start : start + CHUNK_ROWS]
+                yield {
+                    c: part[c].tolist() if part[c].dtype.kind in "SUO" else np.asarray(part[c], dtype=np.float64)
+                    for c in columns
+                }
 
 
 class _ParquetReader:
@@ -526,15 +549,28 @@ class _VOTableReader:
 
     def chunks(self, columns: list[str]) -> Iterator[dict[str, Any]]:
         for start in range(0, len(self._table), CHUNK_ROWS):
-            part = self._table[start:start + CHUNK_ROWS]
-            yield {c: list(part[c]) if part[c].dtype.kind in "SUO" else
-                   np.ma.filled(np.ma.asarray(part[c], dtype=np.float64), np.nan) for c in columns}
+            part = self._table[start : start + CHUNK_ROWS]
+            yield {
+                c: list(part[c])
+                if part[c].dtype.kind in "SUO"
+                else np.ma.filled(np.ma.asarray(part[c], dtype=np.float64), np.nan)
+                for c in columns
+            }
 
 
 _READERS: dict[str, type[_CsvReader] | type[_FitsReader] | type[_ParquetReader] | type[_VOTableReader]] = {
-    ".ecsv": _CsvReader, ".csv": _CsvReader, ".tsv": _CsvReader, ".txt": _CsvReader, ".dat": _CsvReader,
-    ".fits": _FitsReader, ".fit": _FitsReader, ".parquet": _ParquetReader, ".pq": _ParquetReader,
-    ".vot": _VOTableReader, ".xml": _VOTableReader, ".votable": _VOTableReader,
+    ".ecsv": _CsvReader,
+    ".csv": _CsvReader,
+    ".tsv": _CsvReader,
+    ".txt": _CsvReader,
+    ".dat": _CsvReader,
+    ".fits": _FitsReader,
+    ".fit": _FitsReader,
+    ".parquet": _ParquetReader,
+    ".pq": _ParquetReader,
+    ".vot": _VOTableReader,
+    ".xml": _VOTableReader,
+    ".votable": _VOTableReader,
 }
 
 
@@ -546,6 +582,8 @@ def _reader_of(path: Path) -> _CsvReader | _FitsReader | _ParquetReader | _VOTab
         if _READERS.get(suffix) is _ParquetReader:
             suffix = ""
     if suffix not in _READERS:
-        raise RequestError(f"{path}: the suffix {suffix or '(none)'} names no kind of table; "
-                           "a target list is .ecsv, .csv, .fits or .parquet.")
+        raise RequestError(
+            f"{path}: the suffix {suffix or '(none)'} names no kind of table; "
+            "a target list is .ecsv, .csv, .fits or .parquet."
+        )
     return _READERS[suffix](path)

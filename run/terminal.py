@@ -19,6 +19,9 @@ Row = Mapping[str, Any]
 MIN_WIDTH, MAX_WIDTH = 50, 110
 LABEL_WIDTH = 10
 
+#: Flag of a row whose type was not found but given (``chain.TYPE_GIVEN``).
+GIVEN_FLAG = "type-given"
+
 _STYLES = {"bold": "1", "dim": "2", "good": "1;32", "fair": "1;33", "poor": "1;31", "warn": "33"}
 
 #: Least probability for each word.
@@ -33,8 +36,11 @@ def width_of(stream: IO[str] | None = None) -> int:
 def colour_wanted(stream: IO[str] | None = None) -> bool:
     """Colour only on a terminal, and not when NO_COLOR is set or the terminal is dumb."""
     stream = stream or sys.stdout
-    return bool(getattr(stream, "isatty", lambda: False)()) and "NO_COLOR" not in os.environ \
+    return (
+        bool(getattr(stream, "isatty", lambda: False)())
+        and "NO_COLOR" not in os.environ
         and os.environ.get("TERM") != "dumb"
+    )
 
 
 def _styled(text: str, style: str, colour: bool) -> str:
@@ -61,23 +67,24 @@ def per_cent(probability: float) -> str:
 
 def class_sentence(row: Row) -> str:
     """Luminosity-class probabilities in words: "very likely V (88 %), possibly IV (11 %)"."""
-    probabilities = sorted(((float(v), k[2:]) for k, v in row.items() if k.startswith("p_") and _is_number(v)),
-                           reverse=True)
+    probabilities = sorted(
+        ((float(v), k[2:]) for k, v in row.items() if k.startswith("p_") and _is_number(v)), reverse=True
+    )
     told = [(p, name) for p, name in probabilities if p >= 0.03][:3]
     return ", ".join(f"{in_words(p)} {name} ({per_cent(p)})" for p, name in told)
 
 
 def significant(value: float, error: float | None = None, digits: int = 2) -> str:
-    """``value`` with as many decimals as ``error`` has to ``digits`` figures (or three figures of its own)."""
+    """``value`` to the decimal where ``error`` has its last of ``digits`` figures (three figures without an error)."""
     if not _is_number(value):
         return "?"
-    scale = error if error is not None and _is_number(error) and error > 0 else abs(value)
+    scale = error
+    if scale is None or not _is_number(scale) or scale <= 0:
+        scale, digits = abs(value), 3
     if scale == 0:
         return "0"
-    if scale is not error:
-        digits = 3
-    decimals = max(0, digits - 1 - math.floor(math.log10(scale)))
-    return f"{round(value, decimals):.{min(decimals, 4)}f}"
+    decimals = min(4, digits - 1 - math.floor(math.log10(scale)))
+    return f"{round(value, decimals):.{max(0, decimals)}f}"
 
 
 def distance_text(parsec: float, step: float) -> str:
@@ -117,6 +124,10 @@ def _joined(label: str, pieces: Iterable[str], width: int) -> list[str]:
     return lines
 
 
+def _type_given(row: Row) -> bool:
+    return GIVEN_FLAG in str(row.get("flags") or "").split(",")
+
+
 def _headline(row: Row, width: int, colour: bool) -> str:
     name = str(row.get("name") or row.get("file") or "")
     status = row.get("status")
@@ -124,7 +135,7 @@ def _headline(row: Row, width: int, colour: bool) -> str:
         best = max((float(v) for k, v in row.items() if k.startswith("p_") and _is_number(v)), default=0.0)
         style = "good" if best >= 0.8 else "fair" if best >= 0.5 else "poor"
         shown = str(row.get("mk_type"))
-        given = " (type as given)" if row.get("type_given") else ""
+        given = "   (type as given)" if _type_given(row) else ""
         return f"{_styled(name, 'bold', colour)}   {_styled(shown, style, colour)}{given}"
     kind = str(row.get("object_kind") or "")
     what = "not typed" if status == "refused" else "failed"
@@ -159,8 +170,11 @@ def _distance_lines(row: Row, width: int) -> list[str]:
     def span(a: Any, b: Any) -> str:
         return f"{distance_text(a, step).removesuffix(' pc').removesuffix(' kpc')} to {distance_text(b, step)}"
 
-    return _joined("distance", [f"{distance_text(row['distance_pc'], step)}", f"68 % {span(low, high)}",
-                                f"95 % {span(low95, high95)}"], width)
+    return _joined(
+        "distance",
+        [f"{distance_text(row['distance_pc'], step)}", f"68 % {span(low, high)}", f"95 % {span(low95, high95)}"],
+        width,
+    )
 
 
 def _parallax_line(row: Row, width: int) -> list[str]:
@@ -174,15 +188,21 @@ def _parallax_line(row: Row, width: int) -> list[str]:
 
 def budget_sentence(budget: Sequence[Row], limit: int = 5) -> str:
     """The largest contributions to the error of the distance, such as "scale scatter 14 %, class 6 %"."""
-    told = sorted(((float(b["per_cent"]), str(b["step"])) for b in budget
-                   if b.get("step") != "total" and _is_number(b.get("per_cent"))), reverse=True)
+    told = sorted(
+        (
+            (float(b["per_cent"]), str(b["step"]))
+            for b in budget
+            if b.get("step") != "total" and _is_number(b.get("per_cent"))
+        ),
+        reverse=True,
+    )
     named = [f"{step} {value:.0f} %" for value, step in told[:limit] if value >= 0.5]
     return ", ".join(named) + (", the rest under 1 %" if named and len(told) > len(named) else "")
 
 
 def _caution_lines(row: Row, width: int, colour: bool) -> list[str]:
     cautions = row.get("cautions") or ""
-    sentences = cautions.split("; ") if isinstance(cautions, str) else list(cautions)
+    sentences = [cautions] if isinstance(cautions, str) else list(cautions)
     out = []
     for sentence in (s.strip() for s in sentences):
         if sentence:
@@ -205,7 +225,7 @@ def star_block(row: Row, budget: Sequence[Row] = (), *, width: int = 80, colour:
     if row.get("reason"):
         lines += _wrapped("because", str(row["reason"]), width)
     if row.get("status") == "typed":
-        if not row.get("type_given"):
+        if not _type_given(row):
             error = row.get("t_code_err")
             subtype = f"subtype ± {significant(error, error)}" if _is_number(error) else ""  # type: ignore[arg-type]
             lines += _joined("class", [class_sentence(row), subtype], width)
@@ -214,27 +234,40 @@ def star_block(row: Row, budget: Sequence[Row] = (), *, width: int = 80, colour:
         if row.get("nearest"):
             lines += _wrapped("like", str(row["nearest"]).replace(",", ", ").replace(",  ", ", "), width)
     lines += _spectrum_lines(row, width)
-    if row.get("flags"):
-        lines += _wrapped("flags", str(row["flags"]).replace(",", ", ").replace(",  ", ", "), width)
+    flags = [flag for flag in str(row.get("flags") or "").split(",") if flag.strip() and flag != GIVEN_FLAG]
+    if flags:
+        lines += _wrapped("flags", ", ".join(flag.strip() for flag in flags), width)
     if row.get("status") == "typed":
         absolute = _with_error(row, "abs_mag_v", sign=True)
         doubt = "" if row.get("abs_mag_v_ok", True) else " (beyond where parallaxes check it)"
         reddening = _with_error(row, "ebv")
-        extinction = _with_error(row, "a_v") if not _is_number(row.get("a_v_err")) else significant(
-            row["a_v"], row["a_v_err"]) if _is_number(row.get("a_v")) else ""
-        lines += _joined("reddening", [f"E(B-V) {reddening}" if reddening else "",
-                                       f"A_V {extinction}" if extinction else ""], width)
+        extinction = (
+            _with_error(row, "a_v")
+            if not _is_number(row.get("a_v_err"))
+            else significant(row["a_v"], row["a_v_err"])
+            if _is_number(row.get("a_v"))
+            else ""
+        )
+        lines += _joined(
+            "reddening", [f"E(B-V) {reddening}" if reddening else "", f"A_V {extinction}" if extinction else ""], width
+        )
         lines += _joined("M_V", [f"{absolute} from the spectrum{doubt}" if absolute else ""], width)
         lines += _distance_lines(row, width)
         temperature, luminosity = _with_error(row, "teff_k"), _with_error(row, "log_lum_lsun", sign=True)
         radius = _with_error(row, "radius_rsun")
-        lines += _joined("star", [f"Teff {temperature} K" if temperature else "",
-                                  f"log L {luminosity}" if luminosity else "",
-                                  f"R {radius} Rsun" if radius else ""], width)
+        lines += _joined(
+            "star",
+            [
+                f"Teff {temperature} K" if temperature else "",
+                f"log L {luminosity}" if luminosity else "",
+                f"R {radius} Rsun" if radius else "",
+            ],
+            width,
+        )
         lines += _parallax_line(row, width)
         shares = budget_sentence(budget)
         if shares:
-            lines += _wrapped("error from", shares, width)
+            lines += _wrapped("errors", shares, width)
         lines += _caution_lines(row, width, colour)
     return "\n".join(lines)
 
@@ -250,7 +283,7 @@ def one_line(row: Row, *, width: int = 80, colour: bool = False) -> str:
     else:
         what, style, far = f"{row.get('status')}: {row.get('reason')}", "warn", ""
     room = max(12, width // 3)
-    return f"{name[-room:]:<{room}} {_styled(f'{what[:width - room - 14]:<12}', style, colour)} {far}".rstrip()
+    return f"{name[-room:]:<{room}} {_styled(f'{what[: width - room - 14]:<12}', style, colour)} {far}".rstrip()
 
 
 def summary(counts: Mapping[str, int]) -> str:
