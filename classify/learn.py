@@ -1,0 +1,324 @@
+"""Train the classifier from a library: alignment, then one :class:`Model` a rung.
+
+    python -m starfathom.classify.learn          retrain on the whole library and write classify/data/model/
+
+Training on part of the library (``--without`` on the command line) goes through the same :func:`learn_rung`.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from pathlib import Path
+
+import numpy as np
+from numpy.typing import NDArray
+from scipy.interpolate import CubicSpline
+from scipy.optimize import minimize
+
+from starfathom.classify import alignment
+from starfathom.classify.alignment import Nodes
+from starfathom.classify.gaussian_process import Regressor, fit
+from starfathom.classify.grid import WAVE, blur, rectify
+from starfathom.classify.model import RUNGS, Blend, Loci, Model
+from starfathom.classify.posterior import GROUPS, cell_of, log_posterior, normalise, set_score, student, widen
+from starfathom.classify.surface import CLASS_AT, CORE, PIXELS, Surface, fit_surface, local_linear, match
+from starfathom.classify.training import Lessons, fill_gaps, lessons_from
+from starfathom.templates.library import GRID_KMS, Library
+from starfathom.templates.subtypes import STEPS, t_code_from_step
+
+FloatArray = NDArray[np.float64]
+BoolArray = NDArray[np.bool_]
+MODEL_DIR = Path(__file__).parent / "data" / "model"
+_FOLDS = 5
+_NOISE = 0.005      # white noise given to library spectra in training, a 60 km/s pixel
+#: (components, weight) of the regressors that are averaged.
+_SIZES = (20, 40)
+_MIN_COVERAGE = 0.9
+
+
+@dataclass(frozen=True)
+class Aligned:
+    """A library at rest with straightened wavelength scales, at its own resolution, (n, m)."""
+
+    flux: FloatArray
+    valid: BoolArray
+    fwhm_angstrom: FloatArray
+    lessons: Lessons
+    nodes: Nodes
+
+
+def _blur_each(flux: FloatArray, valid: BoolArray, fwhm: FloatArray, target: float) -> tuple[FloatArray, BoolArray]:
+    out, ok = np.empty_like(flux), np.empty_like(valid)
+    for width in np.unique(fwhm):
+        rows = fwhm == width
+        out[rows], ok[rows] = blur(flux[rows], valid[rows], float(np.sqrt(max(target ** 2 - width ** 2, 0.0))))
+    return out, ok
+
+
+def make_nodes(flat: FloatArray, valid: BoolArray, lessons: Lessons) -> Nodes:
+    """Alignment nodes: weighted means of like stars, at the finest width of the ladder."""
+    plan = [(s, 5.0) for s in np.arange(8.0, 63.0, 1.5)] + [(s, 3.0) for s in np.arange(10.0, 67.0, 2.0)] \
+        + [(s, 1.4) for s in np.arange(8.0, 60.0, 2.5)]
+    spectra, kept = [], []
+    lum = np.where(np.isfinite(lessons.lum_code), lessons.lum_code, 99.0)
+    step = np.where(lessons.trust > 0, lessons.step, 999.0)
+    weighted = np.where(valid, flat, 0.0)
+    for at_step, at_class in plan:
+        w = lessons.trust * np.exp(-0.5 * ((step - at_step) / 1.2) ** 2 - 0.5 * ((lum - at_class) / 0.5) ** 2)
+        if w.sum() < 1.5:
+            continue
+        total = w @ valid.astype(float)
+        spectra.append(np.where(total > 0.3 * w.sum(), (w @ weighted) / np.maximum(total, 1e-9), 1.0))
+        kept.append((at_step, at_class))
+    reach = valid[lessons.trust > 0].mean(axis=0) > 0.5
+    steps, classes = np.array(kept).T
+    return Nodes.from_fine(np.array(spectra), reach & (WAVE < 7400), steps, classes)
+
+
+def align_library(library: Library, passes: int = 2) -> Aligned:
+    """Bring every library star to the rest frame of the library as a whole, wander taken out."""
+    flux, valid = library.flux.astype(float), library.valid
+    fwhm = library.catalogue["fwhm_angstrom"].astype(float)
+    lessons = lessons_from(library)
+    pixel = np.arange(flux.shape[1], dtype=float)
+    splines, bad = [], []
+    for row, ok in zip(flux, valid):
+        good = np.flatnonzero(ok)
+        splines.append(CubicSpline(pixel, np.interp(pixel, good, row[good])))
+        bad.append((~ok).astype(float))
+    velocity = np.zeros_like(flux)
+    moved, ok_moved = flux, valid
+    for _ in range(passes):
+        fine, ok = _blur_each(moved, ok_moved, fwhm, alignment.LADDER[0])
+        flat, _ = rectify(fine, ok)
+        nodes = make_nodes(flat, ok, lessons)
+        coarse, ok_c = blur(moved, ok_moved, 5.0)
+        level, _ = rectify(coarse, ok_c)
+        first, _, best, _ = alignment.first_velocity(level, ok_c, nodes)
+        first = np.where(np.abs(first) < 400, first, 0.0)
+        trial, trial_ok = _shift(splines, bad, velocity + first[:, None])
+        fine, ok = _blur_each(trial, trial_ok, fwhm, alignment.LADDER[0])
+        flat, _ = rectify(fine, ok)
+        curve, _ = alignment.wander(flat, ok, best, np.full(len(flat), alignment.LADDER[0]), nodes)
+        velocity = velocity + first[:, None] + curve
+        moved, ok_moved = _shift(splines, bad, velocity)
+    fine, ok = _blur_each(moved, ok_moved, fwhm, alignment.LADDER[0])
+    flat, _ = rectify(fine, ok)
+    return Aligned(moved, ok_moved, fwhm, lessons, make_nodes(flat, ok, lessons))
+
+
+def _shift(splines: list[CubicSpline], bad: list[FloatArray], velocity: FloatArray) -> tuple[FloatArray, BoolArray]:
+    pixel = np.arange(velocity.shape[1], dtype=float)
+    flux, valid = np.empty_like(velocity), np.empty(velocity.shape, bool)
+    for i, spline in enumerate(splines):
+        at = pixel + velocity[i] / GRID_KMS
+        valid[i] = (np.interp(at, pixel, bad[i], left=1, right=1) < 1e-3)
+        flux[i] = np.where(valid[i], spline(np.clip(at, 0, pixel[-1])), 0.0)
+    return flux, valid
+
+
+def perturb(flux: FloatArray, valid: BoolArray, rng: np.random.Generator) -> tuple[FloatArray, BoolArray]:
+    """Spectra as another instrument might give them: wavelength error, wander, blur, calibration ripple, noise."""
+    n, m = flux.shape
+    pixel = np.arange(m, dtype=float)
+    ln = np.log(WAVE)
+    out = np.empty_like(flux)
+    for i in range(n):
+        knots = np.linspace(ln[0], ln[-1], 9)
+        wander = np.interp(ln, knots, rng.normal(0, 10.0, 9)) + rng.normal(0, 8.0)
+        good = np.flatnonzero(valid[i])
+        row = np.interp(pixel + wander / GRID_KMS, good, flux[i, good])
+        fine = np.linspace(ln[0], ln[-1], 120)                     # ripple of some 30 A
+        ripple = 1 + np.interp(ln, fine, rng.normal(0, 0.008, 120))
+        out[i] = row * ripple * (1 + rng.normal(0, 0.012, m))
+    return np.where(valid, out, 0.0), valid
+
+
+def _regressors(z: FloatArray, target: FloatArray, error: FloatArray, rows: NDArray[np.int64]) -> tuple[Regressor, ...]:
+    return tuple(fit(z[rows], target[rows], error[rows], components=k) for k in _SIZES)
+
+
+def average(regressors: tuple[Regressor, ...], z: FloatArray, spread: FloatArray | None = None
+            ) -> tuple[FloatArray, FloatArray]:
+    """Mean prediction of several regressors and the standard deviation that ``spread`` alone brings."""
+    values = [r.predict(z, spread) for r in regressors]
+    extra = [np.maximum(sd ** 2 - r.amplitude - r.jitter ** 2, 0) for (_, sd), r in zip(values, regressors)]
+    return np.mean([v for v, _ in values], axis=0), np.sqrt(np.mean(extra, axis=0))
+
+
+def class_loci(step: FloatArray, lum_code: FloatArray, value: FloatArray, least_sd: float
+               ) -> tuple[FloatArray, FloatArray]:
+    """Robust local mean and scatter of ``value`` along the subtypes for each class, (n_subtypes, 8) each."""
+    have = np.isfinite(value)
+    step, lum_code, value = step[have], lum_code[have], value[have]
+    mean, sd = np.empty((len(STEPS), 8)), np.empty((len(STEPS), 8))
+    for j, code in enumerate(CLASS_AT):
+        close = np.exp(-0.5 * ((lum_code - code) / (0.3 if code < 2.4 else 0.25)) ** 2)
+        for i, at in enumerate(STEPS):
+            widen_by = 1.0
+            for _ in range(8):
+                w = close * np.exp(-0.5 * ((step - at) / (3 * widen_by)) ** 2)
+                if w.sum() > 5:
+                    break
+                widen_by *= 1.4
+            design = np.column_stack([np.ones(len(step)), (step - at) / 3])
+            robust = w.copy()
+            for _ in range(3):
+                normal = design.T @ (design * robust[:, None]) + np.diag([1e-6, 2.0])
+                line = np.linalg.solve(normal, design.T @ (robust * value))
+                r = value - design @ line
+                spread = float(np.sqrt((w * np.minimum(r ** 2, 4.5)).sum() / w.sum()))
+                robust = w / (1 + (r / (3 * spread + 0.05)) ** 2)
+            mean[i, j], sd[i, j] = line[0], np.hypot(spread, least_sd)
+    return mean, sd
+
+
+@dataclass(frozen=True)
+class _Held:
+    """Cross-validated pieces for the calibration spectra."""
+
+    rows: NDArray[np.int64]
+    log_like: FloatArray
+    abs_mag: FloatArray
+    abs_mag_extra: FloatArray
+    log_g: FloatArray
+    log_g_extra: FloatArray
+
+
+def _fit_blend(held: _Held, lessons: Lessons, surface: Surface, loci: Loci) -> Blend:
+    """Weights by log loss of the true class and of the (steady) subtype."""
+    rows = held.rows
+    group_of = {j: g for g, members in enumerate(GROUPS) for j in members}
+    truth = np.array([group_of[cell_of(20.0, lessons.lum_code[i])[1]] for i in rows])
+    target = lessons.label_step[rows]
+    # rare classes count as much as the square root of their number
+    crowd = np.bincount(truth, minlength=len(GROUPS)).astype(float)
+    weight = 1 / np.sqrt(crowd[truth])
+    weight /= weight.mean()
+
+    def unpack(x: FloatArray) -> Blend:
+        prior = np.array([-1.2, 0, 0, 0, x[3], 0, x[4], 0])
+        return Blend(float(np.exp(x[0])), float(np.exp(x[1])), float(np.exp(x[2])), prior, 0.0)
+
+    def loss(x: FloatArray) -> float:
+        p = normalise(log_posterior(held.log_like, held.abs_mag, held.abs_mag_extra, held.log_g, held.log_g_extra,
+                                    surface, loci, unpack(x)))
+        by_group = np.stack([p[:, :, list(g)].sum(axis=(1, 2)) for g in GROUPS], axis=1)
+        chosen = np.maximum(by_group[np.arange(len(rows)), truth], 1e-3)
+        pt = p.sum(axis=2)
+        mean = pt @ STEPS
+        sd2 = np.maximum(pt @ STEPS ** 2 - mean ** 2, 0.01) + 0.8 ** 2
+        off = student((target - mean) / np.sqrt(sd2)) - 0.5 * np.log(sd2)
+        return float(-(weight * np.log(chosen)).mean() - 0.4 * (weight * off).mean()) + 0.01 * float(((x - start) ** 2).sum())
+
+    start = np.array([np.log(0.15), np.log(0.5), np.log(0.5), np.log(0.4), np.log(0.4)])
+    found = minimize(loss, start, method="Nelder-Mead", options={"maxfev": 160, "xatol": 0.05, "fatol": 1e-4})
+    blend = unpack(found.x)
+    # what the labels scatter beyond the posterior's own spread
+    p = normalise(log_posterior(held.log_like, held.abs_mag, held.abs_mag_extra, held.log_g, held.log_g_extra,
+                                surface, loci, blend))
+    pt = p.sum(axis=2)
+    mean = pt @ STEPS
+    own = np.maximum(pt @ STEPS ** 2 - mean ** 2, 0)
+    excess = np.percentile(np.abs(target - mean), 68) ** 2 - np.median(own)
+    return Blend(blend.temper, blend.abs_mag_weight, blend.log_g_weight, blend.log_prior_class,
+                 float(np.sqrt(max(excess, 0.04))))
+
+
+def features(aligned: Aligned, fwhm: float, flux: FloatArray | None = None) -> tuple[FloatArray, BoolArray]:
+    """Rectified spectra over PIXELS at a rung, (n, p), and their validity."""
+    blurred, ok = _blur_each(aligned.flux if flux is None else flux, aligned.valid, aligned.fwhm_angstrom, fwhm)
+    flat, _ = rectify(blurred, ok)
+    return flat[:, PIXELS], ok[:, PIXELS]
+
+
+def learn_rung(aligned: Aligned, names: NDArray[np.str_], labels: NDArray[np.str_], fwhm: float, seed: int = 0) -> Model:
+    """Train one rung: surface, regressors, loci, blend and conformal scores."""
+    lessons = aligned.lessons
+    flat, valid = features(aligned, fwhm)
+    covered = valid[:, CORE].mean(axis=1) >= _MIN_COVERAGE
+    typed = np.flatnonzero((lessons.trust > 0) & covered)
+    filled = fill_gaps(flat, valid, lessons.step, lessons.lum_code)
+    surface, z_typed = fit_surface(filled[typed], lessons.step[typed], lessons.lum_code[typed], lessons.trust[typed])
+    z = (filled - 1.0 - surface.mean)[:, CORE] @ surface.loadings[CORE]
+    bright = np.flatnonzero(np.isfinite(lessons.abs_mag_v) & covered)
+    heavy = np.flatnonzero(np.isfinite(lessons.log_g) & covered)
+    metal = np.flatnonzero(np.isfinite(lessons.fe_h) & covered & (lessons.step > 25))
+    unit = np.ones(len(z))
+
+    rng = np.random.default_rng(seed)
+    moved, _ = perturb(aligned.flux[typed], aligned.valid[typed], rng)
+    sub = Aligned(moved, aligned.valid[typed], aligned.fwhm_angstrom[typed], lessons, aligned.nodes)
+    flat_p, valid_p = features(sub, fwhm)
+    groups, inverse = np.unique(lessons.group[typed], return_inverse=True)
+    fold = rng.integers(0, _FOLDS, len(groups))[inverse]
+    fold_of_group = dict(zip(lessons.group[typed], fold))
+    held_parts = []
+    sigma = np.full(flat_p.shape, 0.012)
+    for f in range(_FOLDS):
+        test = np.flatnonzero(fold == f)
+        train = np.flatnonzero(fold != f)
+        out_groups = {g for g, q in fold_of_group.items() if q == f}
+        nodes, support = local_linear(z_typed[train], lessons.step[typed][train], lessons.lum_code[typed][train],
+                                      _weights(lessons, typed[train]))
+        part = Surface(surface.mean, surface.loadings, surface.floor, nodes, support, surface.scatter)
+        found = match(part, flat_p[test], valid_p[test], sigma[test])
+        keep = np.array([g not in out_groups for g in lessons.group])
+        mag = _regressors(z, lessons.abs_mag_v, lessons.abs_mag_v_err, bright[keep[bright]])
+        grav = _regressors(z, lessons.log_g, 0.15 * unit, heavy[keep[heavy]])
+        m, me = average(mag, found.components, found.spread)
+        g, ge = average(grav, found.components, found.spread)
+        held_parts.append(_Held(typed[test], found.log_like, m, me, g, ge))
+    held = _Held(*(np.concatenate([getattr(h, name) for h in held_parts]) for name in
+                   ("rows", "log_like", "abs_mag", "abs_mag_extra", "log_g", "log_g_extra")))
+    loci = Loci(*class_loci(lessons.step[held.rows], lessons.lum_code[held.rows], held.abs_mag, 0.3),
+                *class_loci(lessons.step[held.rows], lessons.lum_code[held.rows], held.log_g, 0.15))
+    blend = _fit_blend(held, lessons, surface, loci)
+    p = widen(normalise(log_posterior(held.log_like, held.abs_mag, held.abs_mag_extra, held.log_g, held.log_g_extra,
+                                      surface, loci, blend)), blend.step_sd_floor)
+    scores = np.sort([set_score(p[i], *cell_of(float(t_code_from_step(lessons.label_step[r])), lessons.lum_code[r]))
+                      for i, r in enumerate(held.rows)])
+    off = held.abs_mag - lessons.abs_mag_v[held.rows]
+    have = np.isfinite(off)
+    residuals = np.column_stack([lessons.step[held.rows], held.abs_mag,
+                                 off ** 2 - lessons.abs_mag_v_err[held.rows] ** 2])[have]
+    return Model(fwhm, surface, _regressors(z, lessons.abs_mag_v, lessons.abs_mag_v_err, bright),
+                 _regressors(z, lessons.log_g, 0.15 * unit, heavy), fit(z[metal], lessons.fe_h[metal], 0.12 * unit[metal],
+                                                                       components=40),
+                 loci, blend, residuals, scores, names[typed], labels[typed], z_typed.astype(np.float32))
+
+
+def _weights(lessons: Lessons, rows: NDArray[np.int64]) -> FloatArray:
+    step, lum = lessons.step[rows], lessons.lum_code[rows]
+    crowd = np.exp(-0.5 * ((step[:, None] - step) / 2) ** 2 - 0.5 * ((lum[:, None] - lum) / 0.6) ** 2).sum(axis=1)
+    weight = lessons.trust[rows] / np.sqrt(crowd)
+    return weight / weight.mean()
+
+
+def main() -> None:
+    from starfathom.templates.library import load_library
+
+    library = load_library()
+    aligned = align_library(library)
+    MODEL_DIR.mkdir(parents=True, exist_ok=True)
+    save_nodes(aligned.nodes, MODEL_DIR / "nodes.npz")
+    for fwhm in RUNGS:
+        model = learn_rung(aligned, library.catalogue["star"], library.catalogue["label"], fwhm)
+        model.save(MODEL_DIR / f"rung_{fwhm:g}.npz")
+        print(f"rung {fwhm:g} A: {len(model.names)} typed stars, blend {model.blend}")
+
+
+def save_nodes(nodes: Nodes, path: Path) -> None:
+    """Only the finest rung is stored; the ladder is rebuilt on opening."""
+    np.savez_compressed(path, rect=nodes.rect[0].astype(np.float16), valid=nodes.valid, step=nodes.step,
+                        lum_code=nodes.lum_code)
+
+
+def load_nodes(path: Path) -> Nodes:
+    """Inverse of :func:`save_nodes`."""
+    with np.load(path) as z:
+        return Nodes.from_fine(z["rect"].astype(float) + 1.0, z["valid"], z["step"], z["lum_code"])
+
+
+if __name__ == "__main__":
+    main()
