@@ -38,8 +38,8 @@ _PARTED = 0.7
 _VOIGT_SIGMA = 5.0
 #: A profile with more numbers must win by this much in the criterion: strong evidence (Kass & Raftery 1995).
 _STRONG_EVIDENCE = 6.0
-#: Up to this difference the evidence hardly tells two profiles apart, and the error counts both.
-_OPEN_QUESTION = 2.0
+#: Evidence that counts as positive on the same scale.
+_POSITIVE_EVIDENCE = 2.0
 _BUCKETS = (8, 12, 16, 20, 26, 34, 44, 60, 80, 110, 150, 210, 300, 500, 1000, 4000)
 
 
@@ -50,8 +50,8 @@ class BulkFits:
     Attributes
     ----------
     labels, wavelength, feature : (c,) name for people, rest wavelength, column number in the feature table
-    ew, ew_err : area of the profile, angstrom, wings outside the window included; the error counts in the losing
-        profile's answer by its share of the evidence
+    ew, ew_err : area of the profile, angstrom, wings outside the window included; the error counts in the other
+        profile's answer where the evidence leaves the choice open
     center, center_err : rest-frame wavelength of the centre, angstrom; NaN where it was held at rest
     fwhm, fwhm_err : full width at half depth of the profile
     intrinsic, intrinsic_err : the same with the instrument taken out; the 3-sigma upper limit where ``unresolved``
@@ -354,8 +354,11 @@ class _Best:
         self.rival_free = np.zeros((jobs, 2))
 
     def model_variance(self) -> FloatArray:
-        """(j, k) variance of an area from not knowing which profile is right: the loser's weight times the difference
-        squared, the weight being exp(-BIC / 2) shared between the two."""
+        """(j, k) variance of an area from not knowing which profile is right.
+
+        Where the Voigt profile is ahead, but not by enough to be taken: its weight, exp(-BIC / 2) shared between the
+        two, times the difference squared.
+        """
         with np.errstate(invalid="ignore", over="ignore"):
             scale = np.maximum(self.chi2 / self.dof, 1.0)
             bic = self.rival_chi2 / scale[:, None] + self.rival_free * np.log(np.maximum(self.pixels, 1.0))[:, None]
@@ -363,7 +366,7 @@ class _Best:
             rows = np.arange(winner.size)
             ahead = bic[rows, 1 - winner] - bic[rows, winner]
             weight = 1.0 / (1.0 + np.exp(np.clip(ahead, -60.0, 60.0) / 2.0))
-            weight = np.where(ahead < _OPEN_QUESTION, weight, 0.0)
+            weight = np.where(ahead < -_POSITIVE_EVIDENCE, weight, 0.0)
             apart = self.rival_area[rows, 1 - winner] - self.full[:, :, 0]
             return np.nan_to_num(weight[:, None] * apart**2)
 
