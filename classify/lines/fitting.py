@@ -3,9 +3,10 @@
 A job is one window of one spectrum: the normalised flux F/Fc over P pixels and K components. All jobs of a batch
 share K, the profile and the way parameters are tied, and go through every step together; finished jobs drop out.
 
-A Voigt line's wings reach the side bands and lower the pseudo-continuum by which the flux was divided. The model is
-therefore (1 - d) / (1 - d_bands), with d the summed profiles and d_bands the same straight line through the
-profiles' means in the side bands that made the pseudo-continuum, so that the area of a broad line is not lost.
+A Voigt line's wings reach the side bands and lower the pseudo-continuum by which the flux was divided. The fit
+therefore goes round: the mean depths of the fitted profiles in the side bands are put back into the continuum (the
+same straight line through both), and the line is fitted again, until nothing changes. The area of a broad line is
+then not lost, and any other fitter given that continuum finds the same profile.
 """
 
 from __future__ import annotations
@@ -22,9 +23,11 @@ BoolArray = NDArray[np.bool_]
 
 _MAX_STEPS = 50
 # stop when a step gains less than this times chi2 per degree of freedom: no parameter then moves by more than
-# a hundredth of the error that the residuals allow it
-_GAIN = 1e-4
+# 0.3 per cent of the error that the residuals allow it
+_GAIN = 1e-5
 _PATIENCE = 5
+_MAX_ROUNDS = 15
+_LOSS_TOLERANCE = 3e-5
 
 
 @dataclass(frozen=True)
@@ -96,6 +99,7 @@ def tie(components: int, is_voigt: bool, shared: bool) -> Ties:
 class Fits:
     """Result of a batch: ``full`` (j, k, s) parameters, ``covariance`` (j, k s, k s), ``chi2``, ``dof``, ``free``.
 
+    ``loss`` (j, 2) is the mean depth of the profiles in the blue and the red side band.
     ``converged`` is False where the steps ran out or a free parameter ended on its bound (zero excepted).
     """
 
@@ -105,6 +109,7 @@ class Fits:
     dof: FloatArray
     free: int
     pixels: FloatArray
+    loss: FloatArray
     converged: BoolArray
 
     @property
@@ -113,43 +118,70 @@ class Fits:
         return self.chi2 + self.free * np.log(np.maximum(self.pixels, 1.0))
 
 
-def _evaluate(jobs: Jobs, fitted: FloatArray, base: FloatArray, ties: Ties) -> tuple[FloatArray, FloatArray]:
-    """Model (j, p) and its derivatives by the fitted numbers (j, q, p)."""
-    j, p = jobs.x.shape
+def _depth(x: FloatArray, fitted: FloatArray, base: FloatArray, ties: Ties) -> tuple[FloatArray, FloatArray]:
+    """Summed depth (j, p) of the profiles at ``x`` and its derivatives by the fitted numbers (j, q, p)."""
+    j, p = x.shape
     size = ties.per_component
     full = (base + fitted @ ties.matrix).reshape(j, ties.components, size)
-    x = np.concatenate([jobs.x, jobs.nodes.reshape(j, 6)], axis=1)
     depth = np.zeros(x.shape)
-    parts = np.empty((j, ties.components * size, p + 6))
+    parts = np.empty((j, ties.components * size, p))
     for k in range(ties.components):
         area, centre, sigma = (full[:, k, i, None] for i in range(3))
         if ties.is_voigt:
             value, by_centre, by_sigma, by_gamma = voigt(x, centre, sigma, full[:, k, 3, None])
-            parts[:, k * size + 3] = area * by_gamma
+            np.multiply(area, by_gamma, out=parts[:, k * size + 3])
         else:
             value, by_centre, by_sigma = gaussian(x, centre, sigma)
         depth += area * value
         parts[:, k * size] = value
-        parts[:, k * size + 1] = area * by_centre
-        parts[:, k * size + 2] = area * by_sigma
+        np.multiply(area, by_centre, out=parts[:, k * size + 1])
+        np.multiply(area, by_sigma, out=parts[:, k * size + 2])
     if ties.matrix.shape[0] != ties.matrix.shape[1]:
         parts = np.matmul(ties.matrix, parts)
-    blue, red = depth[:, p:p + 3] @ NODE_WEIGHTS, depth[:, p + 3:] @ NODE_WEIGHTS
-    blue_parts, red_parts = parts[:, :, p:p + 3] @ NODE_WEIGHTS, parts[:, :, p + 3:] @ NODE_WEIGHTS
-    continuum = 1.0 - (blue[:, None] + (red - blue)[:, None] * jobs.share_red)
-    continuum = np.maximum(continuum, 0.05)
-    model = (1.0 - depth[:, :p]) / continuum
-    lowered = blue_parts[:, :, None] + (red_parts - blue_parts)[:, :, None] * jobs.share_red[:, None, :]
-    jacobian = (model[:, None, :] * lowered - parts[:, :, :p]) / continuum[:, None, :]
-    return model, jacobian
+    return depth, parts
 
 
-def _normal(jobs: Jobs, model: FloatArray, jacobian: FloatArray) -> tuple[FloatArray, FloatArray, FloatArray]:
-    residual = jobs.y - model
-    weighted = jacobian * jobs.weight[:, None, :]
-    hessian = np.matmul(weighted, jacobian.transpose(0, 2, 1))
-    gradient = np.matmul(weighted, residual[:, :, None])[:, :, 0]
-    return hessian, gradient, (jobs.weight * residual**2).sum(axis=1)
+def _band_depths(jobs: Jobs, fitted: FloatArray, base: FloatArray, ties: Ties) -> tuple[FloatArray, FloatArray]:
+    """Mean depth of the profiles in each side band (j, 2) and its derivatives (j, q, 2)."""
+    depth, parts = _depth(jobs.nodes.reshape(-1, 6), fitted, base, ties)
+    j, q = parts.shape[:2]
+    return depth.reshape(j, 2, 3) @ NODE_WEIGHTS, parts.reshape(j, q, 2, 3) @ NODE_WEIGHTS
+
+
+def _line(at_blue: FloatArray, at_red: FloatArray, share_red: FloatArray) -> FloatArray:
+    return at_blue + (at_red - at_blue) * share_red
+
+
+@dataclass
+class _Problem:
+    """Least squares in depth: ``target`` and ``weight`` already on the raised continuum."""
+
+    x: FloatArray
+    target: FloatArray
+    weight: FloatArray
+    base: FloatArray
+    low: FloatArray
+    high: FloatArray
+    ties: Ties
+
+    def take(self, rows: NDArray[np.intp] | BoolArray) -> _Problem:
+        return _Problem(self.x[rows], self.target[rows], self.weight[rows], self.base[rows], self.low[rows],
+                        self.high[rows], self.ties)
+
+    def normal(self, fitted: FloatArray) -> tuple[FloatArray, FloatArray, FloatArray]:
+        """Hessian (j, q, q), gradient (j, q) and chi2 (j,)."""
+        depth, parts = _depth(self.x, fitted, self.base, self.ties)
+        residual = self.target - depth
+        weighted = parts * self.weight[:, None, :]
+        hessian = np.matmul(weighted, parts.transpose(0, 2, 1))
+        gradient = np.matmul(weighted, residual[:, :, None])[:, :, 0]
+        return hessian, gradient, np.einsum("jp,jp,jp->j", self.weight, residual, residual)
+
+
+def _problem(jobs: Jobs, loss: FloatArray, base: FloatArray, low: FloatArray, high: FloatArray, ties: Ties) -> _Problem:
+    """``loss`` (j, 2) is what the profiles take from the side bands: the continuum is 1 / (1 - loss) of the given."""
+    kept = 1.0 - _line(loss[:, :1], loss[:, 1:], jobs.share_red)
+    return _Problem(jobs.x, 1.0 - jobs.y * kept, jobs.weight / kept**2, base, low, high, ties)
 
 
 def _solve(matrix: FloatArray, vector: FloatArray) -> FloatArray:
@@ -157,8 +189,61 @@ def _solve(matrix: FloatArray, vector: FloatArray) -> FloatArray:
     size = matrix.shape[-1]
     scale = np.maximum(np.einsum("jii->ji", matrix), 1e-300)
     root = 1.0 / np.sqrt(scale)
-    unit = matrix * root[:, :, None] * root[:, None, :] + 1e-12 * np.eye(size)
+    unit = matrix * root[:, :, None] * root[:, None, :]
+    index = np.arange(size)
+    unit[:, index, index] += 1e-12
     return np.linalg.solve(unit, (vector * root)[:, :, None])[:, :, 0] * root
+
+
+def _descend(problem: _Problem, start: FloatArray) -> tuple[FloatArray, BoolArray]:
+    """Levenberg-Marquardt from ``start`` (j, q) within the bounds: fitted numbers and whether each job converged."""
+    fitted = start.copy()
+    hessian, gradient, chi2 = problem.normal(fitted)
+    count, size = fitted.shape
+    damping = np.full(count, 1e-3)
+    freedom = np.maximum((problem.weight > 0).sum(axis=1) - size, 1.0)
+    converged = np.zeros(count, bool)
+    index = np.arange(size)
+    live = np.flatnonzero(np.isfinite(chi2))
+    part = problem
+    if live.size < count:
+        part, hessian, gradient = problem.take(live), hessian[live], gradient[live]
+    for attempt in range(_MAX_STEPS):
+        if live.size == 0:
+            break
+        now, old, damp = fitted[live], chi2[live], damping[live]
+        damped = hessian.copy()
+        damped[:, index, index] *= 1.0 + damp[:, None]
+        damped[:, index, index] += 1e-12
+        # a number resting on its bound and pushed outward is held
+        held = ((now <= part.low) & (gradient < 0)) | ((now >= part.high) & (gradient > 0))
+        push = gradient
+        if held.any():
+            push = np.where(held, 0.0, gradient)
+            damped[held[:, :, None] | held[:, None, :]] = 0.0
+            damped[:, index, index] += held
+        trial = np.clip(now + _solve(damped, push), part.low, part.high)
+        new_hessian, new_gradient, new_chi2 = part.normal(trial)
+        better = new_chi2 <= old
+        gain = old - new_chi2
+        small = (np.abs(gain) <= _GAIN * old / freedom[live]) & (damp <= 0.01)
+        accepted = np.flatnonzero(better)
+        at = live[accepted]
+        fitted[at], chi2[at] = trial[accepted], new_chi2[accepted]
+        hessian[accepted], gradient[accepted] = new_hessian[accepted], new_gradient[accepted]
+        damping[live] = np.where(better, np.maximum(damp * 0.1, 1e-9), damp * 8.0)
+        finished = (better & small) | (damp > 1e7)
+        converged[live[finished]] = True
+        if attempt >= _PATIENCE:
+            # centre or width still pressed against its bound: no line of this kind in the window, give up
+            now = fitted[live]
+            pressed = (now <= part.low) | (now >= part.high)
+            finished |= (pressed & ~_may_rest(now, part.low, part.high, part.ties)).any(axis=1)
+        if finished.any():
+            keep = ~finished
+            live, hessian, gradient = live[keep], hessian[keep], gradient[keep]
+            part = part.take(keep)
+    return fitted, converged
 
 
 def fit_jobs(jobs: Jobs, start: FloatArray, base: FloatArray, ties: Ties, low: FloatArray, high: FloatArray,
@@ -169,54 +254,21 @@ def fit_jobs(jobs: Jobs, start: FloatArray, base: FloatArray, ties: Ties, low: F
     (j, lags) widens the errors for resampled pixels; the side bands' own errors are always carried.
     """
     fitted = np.clip(start, low, high)
-    count = fitted.shape[0]
-    model, jacobian = _evaluate(jobs, fitted, base, ties)
-    hessian, gradient, chi2 = _normal(jobs, model, jacobian)
-    damping = np.full(count, 1e-3)
-    freedom = np.maximum((jobs.weight > 0).sum(axis=1) - fitted.shape[1], 1.0)
-    done = ~np.isfinite(chi2)
-    converged = np.zeros(count, bool)
-    live = np.flatnonzero(~done)
-    part = jobs
-    if live.size < count:
-        part, hessian, gradient = jobs.take(live), hessian[live], gradient[live]
-    for attempt in range(_MAX_STEPS):
-        if live.size == 0:
+    loss = np.zeros((fitted.shape[0], 2))
+    converged = np.zeros(fitted.shape[0], bool)
+    rows = np.arange(fitted.shape[0])
+    for _ in range(_MAX_ROUNDS):
+        part = jobs if rows.size == loss.shape[0] else jobs.take(rows)
+        fitted[rows], converged[rows] = _descend(
+            _problem(part, loss[rows], base[rows], low[rows], high[rows], ties), fitted[rows])
+        now = np.clip(_band_depths(part, fitted[rows], base[rows], ties)[0], -1.0, 0.7)
+        moved = np.abs(now - loss[rows]).max(axis=1) > _LOSS_TOLERANCE
+        loss[rows] = now
+        rows = rows[moved & converged[rows]]
+        if rows.size == 0:
             break
-        diagonal = np.einsum("jii->ji", hessian)
-        damped = hessian.copy()
-        index = np.arange(hessian.shape[1])
-        damped[:, index, index] += damping[live, None] * np.maximum(diagonal, 1e-12)
-        # a number resting on its bound and pushed outward is held
-        now = fitted[live]
-        held = ((now <= low[live]) & (gradient < 0)) | ((now >= high[live]) & (gradient > 0))
-        push = np.where(held, 0.0, gradient)
-        if held.any():
-            damped = np.where(held[:, :, None] | held[:, None, :], 0.0, damped)
-            damped[:, index, index] += np.where(held, 1.0, 0.0)
-        step = _solve(damped, push)
-        trial = np.clip(now + step, low[live], high[live])
-        new_model, new_jacobian = _evaluate(part, trial, base[live], ties)
-        new_hessian, new_gradient, new_chi2 = _normal(part, new_model, new_jacobian)
-        old = chi2[live]
-        better = new_chi2 <= old
-        small = np.abs(old - new_chi2) <= _GAIN * old / freedom[live]
-        fitted[live] = np.where(better[:, None], trial, now)
-        chi2[live] = np.where(better, new_chi2, old)
-        hessian = np.where(better[:, None, None], new_hessian, hessian)
-        gradient = np.where(better[:, None], new_gradient, gradient)
-        damping[live] = np.where(better, np.maximum(damping[live] * 0.2, 1e-9), damping[live] * 8.0)
-        finished = (better & small) | (damping[live] > 1e9)
-        converged[live[finished]] = True
-        if attempt >= _PATIENCE:
-            # centre or width still pressed against its bound: no line of this kind in the window, give up
-            pressed = (fitted[live] <= low[live]) | (fitted[live] >= high[live])
-            finished |= (pressed & ~_may_rest(fitted[live], low[live], high[live], ties)).any(axis=1)
-        keep = ~finished
-        if not keep.all():
-            live, hessian, gradient = live[keep], hessian[keep], gradient[keep]
-            part = part.take(np.flatnonzero(keep))
-    return _finish(jobs, fitted, base, ties, low, high, converged, correlation)
+    converged[rows] = False
+    return _finish(jobs, fitted, loss, base, ties, low, high, converged, correlation)
 
 
 def _may_rest(fitted: FloatArray, low: FloatArray, high: FloatArray, ties: Ties) -> BoolArray:
@@ -232,40 +284,49 @@ def _may_rest(fitted: FloatArray, low: FloatArray, high: FloatArray, ties: Ties)
     return rest
 
 
-def _finish(jobs: Jobs, fitted: FloatArray, base: FloatArray, ties: Ties, low: FloatArray, high: FloatArray,
-            converged: BoolArray, correlation: FloatArray | None) -> Fits:
-    model, jacobian = _evaluate(jobs, fitted, base, ties)
-    hessian, _, chi2 = _normal(jobs, model, jacobian)
-    size = hessian.shape[1]
-    on_bound = (fitted <= low) | (fitted >= high)
+def _finish(jobs: Jobs, fitted: FloatArray, loss: FloatArray, base: FloatArray, ties: Ties, low: FloatArray,
+            high: FloatArray, converged: BoolArray, correlation: FloatArray | None) -> Fits:
+    """Covariance, with what the round by the continuum adds to it.
+
+    The fit solves J^T W r = 0, where r depends on the parameters p through the depth and through the raised continuum:
+    dr/dp = -(J - y dloss/dp). Errors e of the pixels then move p by (J^T W (J - y dloss/dp))^-1 J^T W e.
+    """
+    problem = _problem(jobs, loss, base, low, high, ties)
+    depth, jacobian = _depth(jobs.x, fitted, base, ties)
+    _, band_parts = _band_depths(jobs, fitted, base, ties)
+    size = fitted.shape[1]
     index = np.arange(size)
+    on_bound = (fitted <= low) | (fitted >= high)
     stuck = (on_bound & ~_may_rest(fitted, low, high, ties)).any(axis=1)
     # an area resting at zero keeps its own error
     on_bound &= ~(ties.areas & (low < high))
-    masked = np.where(on_bound[:, :, None] | on_bound[:, None, :], 0.0, hessian)
-    masked[:, index, index] += np.where(on_bound, 1.0, 0.0)
-    scale = 1.0 / np.sqrt(np.maximum(np.einsum("jii->ji", masked), 1e-300))
-    unit = masked * scale[:, :, None] * scale[:, None, :] + 1e-12 * np.eye(size)
+    lowered = _line(band_parts[:, :, :1], band_parts[:, :, 1:], jobs.share_red[:, None, :])
+    weighted = jacobian * problem.weight[:, None, :]
+    meat = np.matmul(weighted, jacobian.transpose(0, 2, 1))
+    response = np.matmul(weighted, (jacobian - jobs.y[:, None, :] * lowered).transpose(0, 2, 1))
+    outside = on_bound[:, :, None] | on_bound[:, None, :]
+    response = np.where(outside, 0.0, response)
+    response[:, index, index] += on_bound
+    scale = 1.0 / np.sqrt(np.maximum(np.abs(np.einsum("jii->ji", response)), 1e-300))
+    unit = response * scale[:, :, None] * scale[:, None, :] + 1e-12 * np.eye(size)
     unit = np.where(np.isfinite(unit), unit, np.eye(size))
-    inverse = np.linalg.inv(unit) * scale[:, :, None] * scale[:, None, :]
-    inverse = np.where(on_bound[:, :, None] | on_bound[:, None, :], 0.0, inverse)
-    weighted = jacobian * jobs.weight[:, None, :]
-    covariance = inverse
+    inverse = np.where(outside, 0.0, np.linalg.inv(unit) * scale[:, :, None] * scale[:, None, :])
     if correlation is not None and np.any(correlation):
         rho = np.broadcast_to(np.atleast_2d(correlation), (fitted.shape[0], np.atleast_2d(correlation).shape[1]))
-        noisy = jacobian * np.sqrt(jobs.weight)[:, None, :]
-        meat = hessian.copy()
+        noisy = jacobian * np.sqrt(problem.weight)[:, None, :]
         for k in range(1, rho.shape[1] + 1):
             cross = np.matmul(noisy[:, :, k:], noisy[:, :, :-k].transpose(0, 2, 1)) * rho[:, k - 1, None, None]
-            meat += cross + cross.transpose(0, 2, 1)
-        covariance = inverse @ meat @ inverse
-    # the side bands' own errors move all pixels together: d(F/Fc)/dFband = -(F/Fc) share
+            meat = meat + cross + cross.transpose(0, 2, 1)
+    covariance = inverse @ meat @ inverse.transpose(0, 2, 1)
+    # the side bands' own errors move all pixels together
+    seen = 1.0 - problem.target
     for band, share in ((0, 1.0 - jobs.share_red), (1, jobs.share_red)):
-        push = np.matmul(weighted, (jobs.y * share)[:, :, None])[:, :, 0]
+        push = np.matmul(weighted, (seen * share)[:, :, None])[:, :, 0]
         shift = np.einsum("jab,jb->ja", inverse, push)
         covariance = covariance + jobs.band_var[:, band, None, None] * shift[:, :, None] * shift[:, None, :]
     full = (base + fitted @ ties.matrix).reshape(-1, ties.components, ties.per_component)
     pixels = (jobs.weight > 0).sum(axis=1).astype(float)
+    chi2 = (problem.weight * (problem.target - depth) ** 2).sum(axis=1)
     return Fits(full=full, covariance=np.einsum("qa,jqr,rb->jab", ties.matrix, covariance, ties.matrix), chi2=chi2,
-                dof=np.maximum(pixels - size, 1.0), free=size, pixels=pixels,
+                dof=np.maximum(pixels - size, 1.0), free=size, pixels=pixels, loss=loss,
                 converged=converged & ~stuck & np.isfinite(chi2))

@@ -438,7 +438,8 @@ class _Best:
             # an unresolved width is known through its square: w^2 - I^2 with error 2 w s(w)
             width_err = np.sqrt(_quadratic(grad_width, cov))
             placed = detected & ~(cov[:, 1, 1] == 0.0)
-            detected &= width + 2.0 * width_err >= _NARROWEST * fwhm
+            slack = np.where(self.chi2 <= 2.0 * self.dof, 2.0 * width_err, 0.0)
+            detected &= width + slack >= _NARROWEST * fwhm
             square = np.maximum(width**2 - fwhm**2, 0.0)
             square_err = 2.0 * np.hypot(width * width_err, fwhm * fwhm_err)
             narrow = square < 3.0 * square_err
