@@ -85,7 +85,7 @@ def gather(path: str, with_type: str | None = None, *, medium: str | None = None
     asked = None if with_type is None else MKType.parse(with_type)
     if asked is not None and not math.isfinite(asked.t_code):
         raise RequestError(f"--with {with_type}: there is no template of that; give a type such as G2 V")
-    spectrum = read_plain(path, medium=medium)  # type: ignore[arg-type]
+    spectrum = read_plain(path, medium=medium)
     classifier = Classifier.load()
     settings = Settings(medium=medium, fwhm_angstrom=fwhm_angstrom, velocity_kms=velocity_kms)
     said = classifier.classify_one(spectrum, settings)
@@ -164,7 +164,8 @@ def _footnote(p: Prepared) -> str:
     from starfathom import __version__
 
     return (f"S/N {p.snr:.0f} per angstrom at {p.snr_window} Å; "
-            f"velocity {p.velocity_kms:+.0f} km/s ({p.velocity_source}); line spread {p.fwhm_angstrom:.1f} Å ({p.fwhm_source}); wavelengths in {p.wave_medium}. "
+            f"velocity {p.velocity_kms:+.0f} km/s ({p.velocity_source}); "
+            f"line spread {p.fwhm_angstrom:.1f} Å ({p.fwhm_source}); wavelengths in {p.wave_medium}. "
             f"Black: the star. Orange: the template. Bars: star less template in sigmas. starfathom {__version__}")
 
 

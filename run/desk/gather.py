@@ -50,9 +50,11 @@ def of_run(run_dir: Path) -> Night:
     from starfathom.classify import Classifier, Settings
     from starfathom.classify.reading import read_plain
     from starfathom.record import open_record
+    from starfathom.report.gather import spectrum_path
 
     with open_record(run_dir) as record:
-        asked: dict[str, Any] = record.facts().get("settings", {})
+        facts = record.facts()
+        asked: dict[str, Any] = facts.get("settings", {})
         rows = [row for row in record.rows() if row.get("file")]
         details = record.details()
     if not rows:
@@ -65,7 +67,7 @@ def of_run(run_dir: Path) -> Night:
         settings = Settings(medium=medium, fwhm_angstrom=target.get("fwhm_angstrom"),
                             velocity_kms=target.get("velocity_kms"))
         said = None if detail is None else assignment_of(row, detail)
-        stars.append(Star(row["name"], row["file"], settings, said, row=row, target=target))
+        stars.append(Star(row["name"], spectrum_path(facts, row["file"]), settings, said, row=row, target=target))
     classifier = Classifier.load(without_libraries=tuple(asked.get("without_libraries", ())),
                                  without_stars=tuple(asked.get("without_stars", ())))
     return Night(stars, classifier, DecisionLog(log_path(run_dir)), lambda path: read_plain(path, medium=medium))

@@ -2,14 +2,15 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable
 from dataclasses import dataclass
+from functools import cache
 
 import numpy as np
 from numpy.typing import NDArray
 
 from starfathom.classify.assignment import Assignment
-from starfathom.desk.plane import N_CLASSES, N_TYPES, inner_set
+from starfathom.desk.plane import inner_set
+from starfathom.templates.subtypes import LUM_CODES, T_CODES
 
 FloatArray = NDArray[np.float64]
 
@@ -55,7 +56,7 @@ def need(assignment: Assignment, magnitudes: MagnitudeGrid | None = None) -> Nee
 
 def distance_scatter(posterior: FloatArray, magnitudes: MagnitudeGrid | None = None) -> float:
     """Scatter of the distance, per cent, from the spread of the posterior over types alone."""
-    grid = rough_magnitudes() if magnitudes is None else magnitudes
+    grid = scale_magnitudes() if magnitudes is None else magnitudes
     use = inner_set(posterior, 0.99) & np.isfinite(grid)
     if not use.any():
         return 0.0
@@ -64,20 +65,10 @@ def distance_scatter(posterior: FloatArray, magnitudes: MagnitudeGrid | None = N
     return 46.05 * float(np.sqrt(np.sum(p * (grid[use] - mean) ** 2)))
 
 
-def rough_magnitudes() -> MagnitudeGrid:
-    """A stand-in scale for the ordering alone: straight lines in subtype for each class, good to a magnitude or so.
+@cache
+def scale_magnitudes() -> MagnitudeGrid:
+    """Absolute V magnitude of every cell of the plane on the distance scale in use."""
+    from starfathom.distance.grid import cell_of
+    from starfathom.distance.scale import load_scale
 
-    Common practice: dwarfs fall from -5.5 at O5 to +9 at M0, giants stay near 0, supergiants between -5 and -8.
-    """
-    t = np.linspace(2.0, 69.0, N_TYPES)
-    dwarf = np.interp(t, [3, 10, 20, 40, 60, 69], [-5.6, -4.0, 0.8, 4.4, 8.8, 17.0])
-    giant = np.interp(t, [3, 10, 20, 40, 60, 69], [-6.0, -5.0, 0.0, 0.8, -0.5, -0.3])
-    classes = [np.full(N_TYPES, -8.5), np.full(N_TYPES, -7.0), np.full(N_TYPES, -6.3), np.full(N_TYPES, -5.2),
-               np.full(N_TYPES, -2.6), giant, (dwarf + 2 * np.minimum(giant, dwarf)) / 3, dwarf]
-    assert len(classes) == N_CLASSES
-    return np.stack(classes, axis=1)
-
-
-def order_by_need(assignments: list[Assignment], scorer: Callable[[Assignment], Need]) -> list[int]:
-    """Indices of the stars, the neediest first; equals keep their order."""
-    return sorted(range(len(assignments)), key=lambda k: -scorer(assignments[k]).score)
+    return load_scale().mean[cell_of(T_CODES[:, None], np.asarray(LUM_CODES)[None, :])]

@@ -15,7 +15,7 @@ from starfathom.decisions import Action
 from starfathom.desk import plane
 from starfathom.desk.night import Night, Star
 from starfathom.desk.plane import Cell
-from starfathom.desk.windows import Mark, Window, misfit, rms, windows_for, within
+from starfathom.desk.windows import Mark, Window, misfit, rms, windows_for, windows_on, within
 
 FloatArray = NDArray[np.float64]
 
@@ -136,9 +136,17 @@ class Session:
     def windows(self) -> list[Window]:
         said, ready = self.star.assignment, self.prepared()
         wave = ready.wave_angstrom[ready.valid]
-        if said is None or len(wave) == 0:
+        if len(wave) == 0:
             return []
-        return windows_for(said.evidence, self.marks, float(wave[0]), float(wave[-1]))
+        lo, hi = float(wave[0]), float(wave[-1])
+        found = [] if said is None else windows_for(said.evidence, self.marks, lo, hi)
+        return found or self._plain_windows(ready, lo, hi)
+
+    def _plain_windows(self, ready: Prepared, lo: float, hi: float) -> list[Window]:
+        """Without evidence (a star that is not normal, say): round the strongest features of the type compared."""
+        cell = self.best_cell() or self.look.place.cell
+        template = np.asarray(self.night.classifier.template(*plane.cell_codes(cell), ready), float)
+        return windows_on(self.marks, ready, template, lo, hi, plane.cell_name(cell)[0])
 
     def compare(self, place: Place) -> Comparison:
         """The template of a place beside the star as it is being looked at."""

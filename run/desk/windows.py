@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Iterable, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 from numpy.typing import NDArray
@@ -100,6 +100,14 @@ def windows_for(evidence: Iterable[Criterion], marks: Sequence[Mark], lo: float,
         names = dict.fromkeys([*(c for w in touching for c in w.criteria), criterion_name])
         windows.append(Window(a, b, tuple(sorted(all_marks, key=lambda m: m.wave_angstrom)), tuple(names)))
     return sorted(windows, key=lambda w: w.lo_angstrom)
+
+
+def windows_on(marks: Sequence[Mark], ready: Prepared, template: FloatArray, lo: float, hi: float,
+               letter: str) -> list[Window]:
+    """Windows on the strongest features of a template, for stars that no criterion speaks of."""
+    strongest = choose_marks([m for m in marks if m.line], ready.wave_angstrom, template, lo, hi, letter, 8)
+    stand_in = [Criterion("", float("nan"), float("nan"), "", features=(m.key,)) for m in strongest]
+    return [replace(w, criteria=()) for w in windows_for(stand_in, marks, lo, hi)]
 
 
 def misfit(prepared: Prepared, template: FloatArray, scatter: FloatArray | float = TEMPLATE_SCATTER) -> FloatArray:
