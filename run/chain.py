@@ -41,8 +41,8 @@ BY_HAND = "typed-by-hand"
 class RunSettings:
     """What a run is asked to do, besides its targets. Small and plain: it travels to the workers.
 
-    ``medium`` is "air", "vacuum" or None (from the files). ``scale``, ``prior`` and ``rv`` go to the distance step, None
-    for its defaults.
+    ``medium`` is "air", "vacuum" or None (from the files). ``scale``, ``prior`` and ``rv`` go to the distance step,
+    None for its defaults.
     """
 
     seed: int = 0

@@ -344,21 +344,29 @@ def on_processes(jobs: Iterator[Job], work: Work, settings: RunSettings, workers
             losses[job[0]] = losses.get(job[0], 0) + 1
             if losses[job[0]] >= TRIES:
                 again.remove(job)
-                yield _merged(job[0], [_alone(work, job[0], target, settings) for target in job[1]])
+                yield _one_by_one_apart(work, job, settings)
 
 
-def _alone(work: Work, number: int, target: Target, settings: RunSettings) -> BatchResult:
-    """One star in a process of its own, which it may kill."""
+def _one_by_one_apart(work: Work, job: Job, settings: RunSettings) -> BatchResult:
+    """The stars of a batch one by one, in a process that each may kill."""
     import multiprocessing
     from concurrent.futures import ProcessPoolExecutor
     from concurrent.futures.process import BrokenProcessPool
 
+    number, batch = job
     context = multiprocessing.get_context("spawn")
-    with _single_threaded(), ProcessPoolExecutor(1, mp_context=context, initializer=_start_worker) as pool:
-        try:
-            return pool.submit(do_batch, work, number, [target], settings).result()
-        except BrokenProcessPool:
-            return _failed(number, [target], "The process that worked on it was killed (out of memory?).")
+    parts: list[BatchResult] = []
+    with _single_threaded():
+        while len(parts) < len(batch):
+            with ProcessPoolExecutor(1, mp_context=context, initializer=_start_worker) as pool:
+                for target in batch[len(parts) :]:
+                    try:
+                        parts.append(pool.submit(do_batch, work, number, [target], settings).result())
+                    except BrokenProcessPool:
+                        reason = "The process that worked on it was killed (out of memory?)."
+                        parts.append(_failed(number, [target], reason))
+                        break
+    return _merged(number, parts)
 
 
 def on_dask(jobs: Iterator[Job], work: Work, settings: RunSettings, address: str) -> Iterator[BatchResult]:

@@ -48,7 +48,7 @@ CHUNK_ROWS = 4096
 #: IVOA UCD1+ words of the columns that have one (Preite Martinez et al. 2018, IVOA Recommendation).
 UCDS = {
     "name": "meta.id;meta.main",
-    "file": "meta.file",
+    "file": "meta.id;meta.file",
     "mk_type": "src.spType",
     "object_kind": "src.class",
     "other_type": "src.spType",

@@ -49,7 +49,7 @@ NUMBER_COLUMNS = {
     "e_parallax": ("mas", 0.0, 1000.0),
     "ebv": ("mag", -1.0, 20.0),
     "e_ebv": ("mag", 0.0, 20.0),
-    "fwhm": ("Angstrom", 0.05, 200.0),
+    "fwhm": ("Angstrom", 0.05, 60.0),
     "velocity": ("km / s", -20000.0, 20000.0),
 }
 

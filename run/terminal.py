@@ -119,8 +119,7 @@ def _joined(label: str, pieces: Iterable[str], width: int) -> list[str]:
         if lines and len(lines[-1]) + 3 + len(piece) <= width:
             lines[-1] += f"   {piece}"
         else:
-            head = f"  {label if not lines else '':<{LABEL_WIDTH}}"
-            lines.append(head + piece)
+            lines += _wrapped(label if not lines else "", piece, width)
     return lines
 
 

@@ -65,7 +65,9 @@ def test_two_workers_give_the_same_bytes_as_one(listed: Path, expected: dict[str
 
 
 def test_another_seed_gives_other_numbers(listed: Path, expected: dict[str, bytes], tmp_path: Path) -> None:
-    run_survey(TargetList(listed), tmp_path / "run", RunSettings(seed=6), workers=1, work=run_fakes.quick, progress=False)
+    run_survey(
+        TargetList(listed), tmp_path / "run", RunSettings(seed=6), workers=1, work=run_fakes.quick, progress=False
+    )
     assert tables_of(tmp_path / "run")["results.csv"] != expected["results.csv"]
 
 
@@ -81,7 +83,9 @@ def _batches_in(run_dir: Path) -> int:
 
 def _start(listed: Path, run_dir: Path, work: str, workers: int, resume: bool) -> subprocess.Popen[bytes]:
     command = [sys.executable, str(HERE / "run_fakes.py"), str(listed), str(run_dir), work, str(workers)]
-    return subprocess.Popen(command + ["resume"] * resume, stderr=subprocess.PIPE, env=os.environ | {"PYTHONPATH": str(HERE)})
+    return subprocess.Popen(
+        command + ["resume"] * resume, stderr=subprocess.PIPE, env=os.environ | {"PYTHONPATH": str(HERE)}
+    )
 
 
 @pytest.mark.slow
@@ -173,12 +177,14 @@ def test_one_bad_star_never_stops_the_rest(tmp_path: Path, workers: int) -> None
     assert all(rows[n]["status"] == "typed" for n in NAMES[:90])
 
 
-def test_a_full_disk_is_one_sentence_and_can_be_resumed(listed: Path, expected: dict[str, bytes], tmp_path: Path) -> None:
+def test_a_full_disk_is_one_sentence_and_can_be_resumed(
+    listed: Path, expected: dict[str, bytes], tmp_path: Path
+) -> None:
     def small_files() -> None:
         signal.signal(signal.SIGXFSZ, signal.SIG_IGN)
         resource.setrlimit(resource.RLIMIT_FSIZE, (24_000, 24_000))
 
-    code = ("import sys, run_fakes\nfrom starfathom.cli import _guarded\n_guarded(run_fakes.main)")
+    code = "import sys, run_fakes\nfrom starfathom.cli import _guarded\n_guarded(run_fakes.main)"
     command = [sys.executable, "-c", code, str(listed), str(tmp_path / "run"), "quick", "1"]
     done = subprocess.run(command, capture_output=True, text=True, preexec_fn=small_files,
                           env=os.environ | {"PYTHONPATH": str(HERE)})  # fmt: skip
