@@ -32,19 +32,20 @@ def load_bytes(path: str | os.PathLike[str]) -> bytes:
         :data:`MAX_BYTES` (or would unpack to more), or its compression is damaged.
     """
     name = os.fspath(path)
+    said = shown(path)
     try:
         status = os.stat(name)
     except FileNotFoundError:
-        raise SpectrumError(f"{name}: there is no such file; check the path.") from None
+        raise SpectrumError(f"{said}: there is no such file; check the path.") from None
     except (OSError, ValueError) as error:
-        raise SpectrumError(f"{name!r}: cannot be looked at ({_why(error)}); check the path.") from None
+        raise SpectrumError(f"{said}: cannot be looked at ({_why(error)}); check the path.") from None
     if stat.S_ISDIR(status.st_mode):
-        raise SpectrumError(f"{name}: is a folder, not a spectrum; name the files in it.")
+        raise SpectrumError(f"{said}: is a folder, not a spectrum; name the files in it.")
     if not stat.S_ISREG(status.st_mode):
-        raise SpectrumError(f"{name}: is a device, pipe or socket, not a file; save the spectrum to a file first.")
+        raise SpectrumError(f"{said}: is a device, pipe or socket, not a file; save the spectrum to a file first.")
     if status.st_size > MAX_BYTES:
         raise SpectrumError(
-            f"{name}: {status.st_size / 2**20:.0f} MB is too large for one spectrum (limit {MAX_BYTES >> 20} MB); "
+            f"{said}: {status.st_size / 2**20:.0f} MB is too large for one spectrum (limit {MAX_BYTES >> 20} MB); "
             "extract the spectrum to a file of its own."
         )
     try:
@@ -56,17 +57,17 @@ def load_bytes(path: str | os.PathLike[str]) -> bytes:
                     break
                 data += more
     except PermissionError:
-        raise SpectrumError(f"{name}: no permission to read it; change its mode or copy it.") from None
+        raise SpectrumError(f"{said}: no permission to read it; change its mode or copy it.") from None
     except OSError as error:
-        raise SpectrumError(f"{name}: cannot be read ({_why(error)}); check the disk and copy the file again.") from None
+        raise SpectrumError(f"{said}: cannot be read ({_why(error)}); check the disk and copy the file again.") from None
     for _ in range(2):   # a gzip inside a gzip happens; deeper nesting does not
-        unpacked = unpack(data, name)
+        unpacked = unpack(data, said)
         if unpacked is data:
             break
         data = unpacked
     if not data.strip(b"\x00 \t\r\n"):
         what = "is empty" if not data else "holds nothing but blanks or zeros"
-        raise SpectrumError(f"{name}: the file {what}; get it again from its source.")
+        raise SpectrumError(f"{said}: the file {what}; get it again from its source.")
     return data
 
 

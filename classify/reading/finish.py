@@ -153,9 +153,9 @@ def guess_spectral_unit(wave: FloatArray, path: str) -> tuple[SpectralUnit, str]
 
     if lo >= 850 and (optical(1.0) or (lo >= WAVE_MIN_ANGSTROM and hi <= WAVE_MAX_ANGSTROM)):
         return SpectralUnit("wavelength", 1.0), ""
-    if 85 <= lo <= 700 and optical(10.0):
+    if 150 <= lo <= 700 and optical(10.0):
         return SpectralUnit("wavelength", 10.0), ""
-    if 0.085 <= lo <= 0.7 and optical(1e4):
+    if 0.15 <= lo <= 0.7 and optical(1e4):
         return SpectralUnit("wavelength", 1e4), ""
     if lo >= 3.3 and hi <= 4.4:
         return SpectralUnit("wavelength", 1.0), "log10"

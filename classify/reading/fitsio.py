@@ -283,16 +283,15 @@ def columns(hdu: Hdu) -> list[Column]:
     at = 0
     for i in range(1, min(header.whole("TFIELDS"), 999) + 1):
         form = header.word(f"TFORM{i}").upper()
-        match = re.fullmatch(r"(\d*)([LXBIJKAEDCMPQ])(.*)", form)
+        match = re.fullmatch(r"(\d{0,18})(?:([LXBIJKAEDCM]).*|([PQ])([LXBIJKAEDCM]?)(?:\(.*)?)", form)
         if match is None:
             raise FitsError(f"TFORM{i} = {form!r} in {hdu} is not allowed")
-        repeat = int(match.group(1)[:12]) if match.group(1) else 1
-        code, pointer = match.group(2), ""
-        if code == "X":
+        repeat = int(match.group(1)) if match.group(1) else 1
+        code, pointer = match.group(2) or "", match.group(3) or ""
+        if pointer:
+            code, width = match.group(4) or "E", (8 if pointer == "P" else 16) * repeat
+        elif code == "X":
             width = (repeat + 7) // 8
-        elif code in "PQ":
-            pointer, width = code, (8 if code == "P" else 16) * repeat
-            code = match.group(3)[:1] or "E"
         elif code == "A":
             width = repeat
         else:
@@ -313,6 +312,8 @@ def column_values(hdu: Hdu, column: Column) -> NDArray[np.float64]:
     if column.code not in _TABLE_TYPES or column.code in "ACM":
         raise FitsError(f"column {column.name} of {hdu} is not numeric")
     kind = np.dtype(_TABLE_TYPES[column.code])
+    if rows < 1:
+        raise FitsError(f"{hdu} is a table with no rows")
     hdu.need(row_bytes * rows)
     if column.pointer:
         values = _from_heap(hdu, column, kind, row_bytes, rows)

@@ -110,7 +110,7 @@ def _from_image(hdu: Hdu, units: list[Hdu], request: Request) -> RawSpectrum | t
         return 1, f"{hdu} holds no flux"
     sizes = [shape[i] for i in long]
     if len(long) > 2 or (len(long) == 2 and min(sizes) > MAX_COMPANIONS and request.row is None):
-        text = " x ".join(str(s) for s in shape)
+        text = " x ".join(str(s) for s in shape[:4]) + (" x ..." if len(shape) > 4 else "")
         return 4, f"{hdu} is a {text} image, not a one-dimensional spectrum"
     if max(sizes) > 5_000_000:
         hdu.need()
@@ -282,6 +282,8 @@ def _from_table(hdu: Hdu, units: list[Hdu], request: Request) -> RawSpectrum | t
     wave, flux = picked.get("wave"), picked.get("flux")
     names = ", ".join(c.name for c in all_columns[:12])
     axis: dispersion.Axis | None = None
+    if flux is None and header.whole("NAXIS2") < 1:
+        return 2, f"{hdu} is a table with no rows"
     if flux is None:
         return 2, f"{hdu} is a table without a flux column (it has {names})"
     if header.whole("NAXIS2") > 20_000_000:
@@ -358,7 +360,7 @@ def _pick(columns: list[fitsio.Column], request: Request, hdu: Hdu) -> dict[str,
 
 def _pick_by_values(picked: dict[str, fitsio.Column], columns: list[fitsio.Column], hdu: Hdu) -> None:
     """Where names tell nothing: the first steady column in reach is the wavelength, the next of its size the flux."""
-    if not hdu.complete or hdu.header.whole("NAXIS2") > 5_000_000:
+    if not hdu.complete or not 1 <= hdu.header.whole("NAXIS2") <= 5_000_000:
         return
     if "wave" not in picked and "COEFF0" not in hdu.header and "CRVAL1" not in hdu.header:
         for column in columns[:8]:

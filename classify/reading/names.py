@@ -70,7 +70,7 @@ def role_of(name: str) -> tuple[Role, int]:
     if kinds & _VAR_WORDS:
         return "var", 9
     wave = glued in _WAVE or glued in _LOG_WAVE or bool(set(words) & (_WAVE - {"w", "l", "x"}))
-    if wave and not (set(words) & (_STD_WORDS | set(_FLUX) - {"data", "int", "i", "s", "y", "object", "spec", "f", "f"})):
+    if wave and not (set(words) & (_STD_WORDS | set(_FLUX) - {"data", "int", "i", "s", "y", "object", "spec"})):
         return "wave", 3 if len(glued) == 1 else 10 if glued in _WAVE or glued in _LOG_WAVE else 6
     if wave and words[0] in ("log", "ln") and len(words) == 2 and words[1] in _WAVE:
         return "wave", 8

@@ -19,9 +19,13 @@ from starfathom.classify.reading.request import Request
 from starfathom.classify.reading.units import flux_kind, spectral_unit
 from starfathom.classify.spectrum import FloatArray
 
-#: Largest text that is parsed as one spectrum, in bytes.
+#: Largest text that is parsed as one spectrum, in bytes; most lines of a text that is not plain even columns; longest line.
 MAX_TEXT = 32 << 20
-_NUMBER = rb"[-+]?(?:\d+\.?\d*|\.\d+)(?:[eEdD][-+]?\d+)?"
+MAX_LINES = 400_000
+MAX_LINE = 1 << 20
+_LONG_HEADING = 500
+# digits are counted in all patterns here: without that, a long run of digits takes quadratic time
+_NUMBER = rb"[-+]?(?:\d{1,40}\.?\d{0,40}|\.\d{1,40})(?:[eEdD][-+]?\d{1,4})?"
 _FIRST_ROW = re.compile(rb"^[ \t]*" + _NUMBER + rb"(?:[ \t]+|[ \t]*[,;][ \t]*)" + _NUMBER + rb"(?=[\s,;]|$)", re.M)
 _MISSING = {"", "nan", "null", "none", "indef", "--", "-", "---", "n/a", "na", "masked", "...", "nodata", "?", "*", "****", "inf", "-inf", "+inf", ".", "undef", "infinity", "missing", "bad"}
 _FORTRAN = re.compile(r"([-+]?(?:\d+\.?\d*|\.\d+))(?:[dDqQ]([-+]?\d+)|([-+]\d{2,3}))")
@@ -102,6 +106,8 @@ def _quick(data: bytes) -> Table | None:
         return None
     line_end = body.find(b"\n")
     first = body[:line_end] if line_end >= 0 else body
+    if len(first) > MAX_LINE:
+        return None
     strange = body.translate(None, b"0123456789+-.eE \t\r\n")
     if strange:
         separator = strange[:1]
@@ -139,6 +145,8 @@ def _quick(data: bytes) -> Table | None:
 
 def cell(text: str) -> float:
     """A number as people and programs write it; NaN for the usual words for nothing; ValueError otherwise."""
+    if len(text) > 60:
+        raise ValueError("too long for a number")
     try:
         return float(text)
     except ValueError:
@@ -160,9 +168,13 @@ def _is_number(text: str) -> bool:
 
 
 def _slow(text: str, path: str) -> Table:
+    if max(text.count("\n"), text.count("\r")) > MAX_LINES:
+        raise SpectrumError(f"{path}: more than {MAX_LINES} lines of text are too many for one spectrum; extract it first.")
     lines = text.replace("\r\n", "\n").replace("\r", "\n").replace("\x1a", "").split("\n")
     if lines and "%ECSV" in lines[0]:
         return _ecsv(lines, path)
+    if max(map(len, lines)) > MAX_LINE:
+        raise SpectrumError(f"{path}: a line of more than {MAX_LINE >> 20} MB is no part of a spectrum; check what the file is.")
     sample = [line for line in lines[:20000] if _may_be_data(line)][:400]
     if not sample:
         raise SpectrumError(f"{path}: no rows of numbers found; a text spectrum needs at least wavelength and flux in columns.")
@@ -309,6 +321,7 @@ def _bare(line: str) -> str:
 
 def _headings(table: Table, lines: list[str], columns: int, separator: str = "") -> None:
     """Find column names and units in the lines above the data."""
+    lines = [line for line in lines[-500:] if len(line) <= _LONG_HEADING]
     listed = _listed(lines, columns)
     if listed:
         table.names = [split_unit(n)[0] for n in listed]
