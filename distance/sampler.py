@@ -201,6 +201,8 @@ def draw(stars: list[Star], scale: Scale, prior: str, n_samples: int, seed: int)
     mean, slope = scale.mean[cell], scale.slope[cell]
     spec, spec_err, rho = (column([s.abs_mag[i] for s in stars]) for i in range(3))
     has_spec = np.isfinite(spec)
+    # a star without its own luminosity beside stars with one must not spread its NaN
+    spec_err = np.where(has_spec, spec_err, 0.0)
     plx_mu = column([5 * np.log10(100.0 / s.parallax[0]) if s.parallax else 0.0 for s in stars])
     plx_var = column([(2.1715 * s.parallax[1] / s.parallax[0]) ** 2 if s.parallax else np.inf for s in stars])
 
