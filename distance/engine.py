@@ -11,6 +11,7 @@ from numpy.typing import NDArray
 
 from starfathom.classify.assignment import Assignment
 from starfathom.classify.errors import RequestError, StarfathomError
+from starfathom.classify.mktype import MKType
 from starfathom.distance import cautions as caution_text
 from starfathom.distance.budget import budget_rows, decompose
 from starfathom.distance.dust import galactic_latitude_sine
@@ -77,7 +78,12 @@ def prepare(request: Request) -> tuple[Star, Any]:
     source = request.source
     if isinstance(source, str):
         source = parse_type(source)
-    cells, shares = cells_of_assignment(source) if isinstance(source, Assignment) else cells_of_type(source)
+    if isinstance(source, Assignment):
+        cells, shares = cells_of_assignment(source)
+    elif isinstance(source, MKType):
+        cells, shares = cells_of_type(source)
+    else:
+        raise RequestError(f"A distance needs an MK type or an assignment, not {type(source).__name__}.")
     photometry = request.photometry if isinstance(request.photometry, Photometry) else Photometry(request.photometry)
     if not len(photometry):
         raise RequestError("There is no magnitude to take a distance from; give at least V.")

@@ -2,13 +2,12 @@
 
 from __future__ import annotations
 
-from typing import Any
-
 import numpy as np
 from numpy.typing import NDArray
 
 from starfathom.classify.assignment import Assignment
 from starfathom.classify.errors import RequestError
+from starfathom.classify.mktype import MKType
 from starfathom.distance.grid import LUM_AXIS, cell_of
 from starfathom.templates.subtypes import LUM_CODES, T_CODES, step_of, t_code_from_step
 
@@ -39,37 +38,29 @@ def cells_of_range(t_code: float, lum_code: float, t_hi: float, lum_hi: float) -
     return cells, np.full(len(cells), 1.0 / len(cells))
 
 
-def cells_of_type(mk_type: Any) -> tuple[IntArray, FloatArray]:
+#: Suffixes of class III carry luminosity (Keenan & Barnbaum 1999 ApJ 518 859: IIIb is the split-off clump); the codes
+#: are a convention of this table.
+_SUFFIX_CODES = {"IIIa": 2.7, "IIIab": 2.9, "IIIb": 3.3, "IIa": 1.9, "IIab": 2.0, "IIb": 2.2, "IVa": 3.8, "IVb": 4.2}
+
+
+def fine_lum_code(mk_type: MKType) -> float:
+    """Luminosity code of a parsed type, with the suffixes a, ab and b of the classes II to IV told apart."""
+    return _SUFFIX_CODES.get(mk_type.lum_class.rstrip("+-"), mk_type.lum_code)
+
+
+def cells_of_type(mk_type: MKType) -> tuple[IntArray, FloatArray]:
     """Cells and probabilities of a parsed MK type; raises RequestError for what has no place on the grid."""
     if mk_type.kind != "star":
         raise RequestError(f"{mk_type} is a {mk_type.kind}; the distance scale knows MK types from O to M only.")
     if not np.isfinite(mk_type.t_code):
         raise RequestError(f"{mk_type} has no temperature subtype, so it has no place on the distance scale.")
-    if not np.isfinite(mk_type.lum_code):
-        raise RequestError(f"{mk_type} has no luminosity class; give one (such as {mk_type} V) to get a distance.")
-    t_hi = mk_type.t_code_hi if np.isfinite(mk_type.t_code_hi) else mk_type.t_code
-    lum_hi = mk_type.lum_code_hi if np.isfinite(mk_type.lum_code_hi) else mk_type.lum_code
-    return cells_of_range(mk_type.t_code, mk_type.lum_code, t_hi, lum_hi)
+    lum = fine_lum_code(mk_type)
+    if not np.isfinite(lum):
+        raise RequestError(f"{mk_type} has no luminosity class; give one (such as {mk_type.text} V) to get a distance.")
+    lum_hi = mk_type.lum_code_hi if mk_type.lum_code_hi != mk_type.lum_code else lum
+    return cells_of_range(mk_type.t_code, lum, mk_type.t_code_hi, lum_hi)
 
 
-def parse_type(text: str) -> Any:
+def parse_type(text: str) -> MKType:
     """An MK type from its text; raises RequestError, in one sentence, where it cannot be read."""
-    try:
-        from starfathom.classify.mktype import MKType
-    except ModuleNotFoundError:  # the full reader of types is not there yet
-        return _plain_type(text)
     return MKType.parse(text)
-
-
-def _plain_type(text: str) -> Any:
-    import re
-    from types import SimpleNamespace
-
-    from starfathom.templates.subtypes import CLASSES, t_code_of
-
-    found = re.match(r"^\s*([OBAFGKM])(\d(?:\.\d+)?)\s*(Ia0|Iab|Ia|Ib|III|II|IV|V)\b", text)
-    if not found:
-        raise RequestError(f"{text!r} is not an MK type that can be read; write it like G2 V or B0.5 Ia.")
-    lum = LUM_CODES[CLASSES.index(found[3])]
-    t = t_code_of(found[1] + found[2])
-    return SimpleNamespace(t_code=t, lum_code=lum, t_code_hi=t, lum_code_hi=lum, kind="star", peculiarities=(), composite=())
