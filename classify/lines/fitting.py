@@ -16,7 +16,7 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from starfathom.classify.lines.profiles import gaussian, voigt
+from starfathom.classify.lines.profiles import gaussian_parts, voigt
 
 FloatArray = NDArray[np.float64]
 BoolArray = NDArray[np.bool_]
@@ -27,7 +27,7 @@ _MAX_STEPS = 50
 _GAIN = 1e-5
 _PATIENCE = 5
 _MAX_ROUNDS = 15
-_LOSS_TOLERANCE = 3e-5
+_LOSS_TOLERANCE = 1e-4
 
 
 @dataclass(frozen=True)
@@ -127,15 +127,17 @@ def _depth(x: FloatArray, fitted: FloatArray, base: FloatArray, ties: Ties) -> t
     parts = np.empty((j, ties.components * size, p))
     for k in range(ties.components):
         area, centre, sigma = (full[:, k, i, None] for i in range(3))
+        first = k * size
         if ties.is_voigt:
             value, by_centre, by_sigma, by_gamma = voigt(x, centre, sigma, full[:, k, 3, None])
-            np.multiply(area, by_gamma, out=parts[:, k * size + 3])
+            np.multiply(area, by_gamma, out=parts[:, first + 3])
+            parts[:, first] = value
+            np.multiply(area, by_centre, out=parts[:, first + 1])
+            np.multiply(area, by_sigma, out=parts[:, first + 2])
+            depth += area * value
         else:
-            value, by_centre, by_sigma = gaussian(x, centre, sigma)
-        depth += area * value
-        parts[:, k * size] = value
-        np.multiply(area, by_centre, out=parts[:, k * size + 1])
-        np.multiply(area, by_sigma, out=parts[:, k * size + 2])
+            scaled = gaussian_parts(x, centre, sigma, area, parts[:, first:first + 3])
+            depth += scaled
     if ties.matrix.shape[0] != ties.matrix.shape[1]:
         parts = np.matmul(ties.matrix, parts)
     return depth, parts
@@ -200,6 +202,8 @@ def _descend(problem: _Problem, start: FloatArray) -> tuple[FloatArray, BoolArra
     fitted = start.copy()
     hessian, gradient, chi2 = problem.normal(fitted)
     count, size = fitted.shape
+    if not (problem.low < problem.high)[:, ~problem.ties.areas].any():
+        return _linear(problem, fitted, hessian, gradient), np.isfinite(chi2)
     damping = np.full(count, 1e-3)
     freedom = np.maximum((problem.weight > 0).sum(axis=1) - size, 1.0)
     converged = np.zeros(count, bool)
@@ -246,25 +250,61 @@ def _descend(problem: _Problem, start: FloatArray) -> tuple[FloatArray, BoolArra
     return fitted, converged
 
 
+def _linear(problem: _Problem, start: FloatArray, hessian: FloatArray, gradient: FloatArray) -> FloatArray:
+    """One exact step where only areas are free; an area that would leave its bound is held there, the rest solved."""
+    free = problem.low < problem.high
+    index = np.arange(start.shape[1])
+    for _ in range(int(problem.ties.areas.sum())):
+        outside = ~free[:, :, None] | ~free[:, None, :]
+        matrix = np.where(outside, 0.0, hessian)
+        matrix[:, index, index] += ~free
+        trial = start + _solve(matrix, np.where(free, gradient, 0.0))
+        beyond = free & ((trial < problem.low) | (trial > problem.high))
+        if not beyond.any():
+            break
+        moved = np.where(beyond, np.clip(trial, problem.low, problem.high), start)
+        gradient = gradient - np.einsum("jab,jb->ja", hessian, moved - start)
+        start, free = moved, free & ~beyond
+    return np.clip(trial, problem.low, problem.high)
+
+
 def fit_jobs(jobs: Jobs, start: FloatArray, base: FloatArray, ties: Ties, low: FloatArray, high: FloatArray,
-             correlation: FloatArray | None = None) -> Fits:
+             correlation: FloatArray | None = None, to_beat: FloatArray | None = None) -> Fits:
     """Fit every job from ``start`` (j, q) within the bounds ``low``, ``high`` (j, q).
 
     ``base`` (j, k s) is added to the tied parameters: the components' rest wavelengths. ``correlation`` (lags,) or
-    (j, lags) widens the errors for resampled pixels; the side bands' own errors are always carried.
+    (j, lags) widens the errors for resampled pixels; the side bands' own errors are always carried. ``to_beat`` (j,) is
+    the chi2 of a simpler profile: jobs that do not come clearly below it are dropped (not converged).
     """
     fitted = np.clip(start, low, high)
-    loss = np.zeros((fitted.shape[0], 2))
-    converged = np.zeros(fitted.shape[0], bool)
-    rows = np.arange(fitted.shape[0])
-    for _ in range(_MAX_ROUNDS):
-        part = jobs if rows.size == loss.shape[0] else jobs.take(rows)
-        fitted[rows], converged[rows] = _descend(
-            _problem(part, loss[rows], base[rows], low[rows], high[rows], ties), fitted[rows])
+    count, size = fitted.shape
+    loss = np.zeros((count, 2))
+    before = np.full((count, 2), np.nan)
+    converged = np.zeros(count, bool)
+    rows = np.arange(count)
+    for turn in range(_MAX_ROUNDS):
+        part = jobs if rows.size == count else jobs.take(rows)
+        problem = _problem(part, loss[rows], base[rows], low[rows], high[rows], ties)
+        fitted[rows], converged[rows] = _descend(problem, fitted[rows])
         now = np.clip(_band_depths(part, fitted[rows], base[rows], ties)[0], -1.0, 0.7)
-        moved = np.abs(now - loss[rows]).max(axis=1) > _LOSS_TOLERANCE
+        step = now - loss[rows]
+        going = converged[rows] & (np.abs(step).max(axis=1) > _LOSS_TOLERANCE)
+        if turn == 0 and to_beat is not None:
+            depth, _ = _depth(part.x, fitted, base, ties)
+            chi2 = (problem.weight * (problem.target - depth) ** 2).sum(axis=1)
+            dof = np.maximum((jobs.weight > 0).sum(axis=1) - size, 1.0)
+            hopeless = to_beat - chi2 < 2.0 * np.maximum(chi2 / dof, 1.0)
+            converged &= ~hopeless
+            going &= ~hopeless
+        # the rounds approach their end geometrically: jump there as soon as the ratio is known
+        with np.errstate(invalid="ignore", divide="ignore"):
+            ratio = np.nan_to_num(np.clip(step / before[rows], 0.0, 0.8))
+        before[rows] = step if turn == 0 else np.nan
+        if turn >= 1:
+            now = np.clip(now + np.where(ratio > 0, step * ratio / (1.0 - ratio), 0.0), -1.0, 0.7)
+            before[rows] = np.nan
         loss[rows] = now
-        rows = rows[moved & converged[rows]]
+        rows = rows[going]
         if rows.size == 0:
             break
     converged[rows] = False
@@ -300,10 +340,12 @@ def _finish(jobs: Jobs, fitted: FloatArray, loss: FloatArray, base: FloatArray, 
     stuck = (on_bound & ~_may_rest(fitted, low, high, ties)).any(axis=1)
     # an area resting at zero keeps its own error
     on_bound &= ~(ties.areas & (low < high))
-    lowered = _line(band_parts[:, :, :1], band_parts[:, :, 1:], jobs.share_red[:, None, :])
     weighted = jacobian * problem.weight[:, None, :]
     meat = np.matmul(weighted, jacobian.transpose(0, 2, 1))
-    response = np.matmul(weighted, (jacobian - jobs.y[:, None, :] * lowered).transpose(0, 2, 1))
+    response = meat.copy()
+    if np.abs(band_parts).max(initial=0.0) > 1e-5:
+        lowered = _line(band_parts[:, :, :1], band_parts[:, :, 1:], jobs.share_red[:, None, :])
+        response -= np.matmul(weighted, (jobs.y[:, None, :] * lowered).transpose(0, 2, 1))
     outside = on_bound[:, :, None] | on_bound[:, None, :]
     response = np.where(outside, 0.0, response)
     response[:, index, index] += on_bound

@@ -169,7 +169,7 @@ def _batches(wave: FloatArray, lines: BulkLines, first: dict[int, int]) -> Itera
         for slot in slots:
             pending.append(slot)
             total += slot.rows.size
-            if total * slot.pixels.size >= 16000:
+            if total * slot.pixels.size >= 24000:
                 yield pending
                 pending, total = [], 0
         if pending:
@@ -266,7 +266,8 @@ def _fit_batch(wave: FloatArray, lines: BulkLines, slots: list[_Slot], profiles:
                 start[:, i] = low[:, i] = high[:, i] = value
         part = jobs.take(rows)
         fits = fit_jobs(part, start, base, ties, low, high,
-                        correlation if correlation is None or correlation.shape[0] == 1 else correlation[rows])
+                        correlation if correlation is None or correlation.shape[0] == 1 else correlation[rows],
+                        to_beat=best.chi2[rows] if is_voigt else None)
         best.offer(rows, fits, ties)
 
     # with centre and width held, the area is a matched filter; where neither it nor the direct sum sees a trace of a
