@@ -64,7 +64,7 @@ class MKType:
     letter, subtype : ``K`` and 0.0; letter-only types have subtype NaN. Of a range, its first end
     letter_hi, subtype_hi : the second end of a range, equal to the first end otherwise
     lum_text : the luminosity class as printed, with marks of doubt, such as ``(III):``
-    tail : the rest of the notation as written: peculiarities and what has no meaning here
+    tail : the rest of the notation as written, with the blank before it if any: peculiarities and what has no meaning here
     prefix : ``sd``, ``d``, ``g`` ... or ""
     kind : ``star``, ``white dwarf``, ``hot subdwarf``, ``carbon star``, ``S star``, ``Wolf-Rayet``, ``ultracool dwarf``
     composite : the companions of a composite type, primary not included
@@ -80,7 +80,6 @@ class MKType:
     prefix: str = ""
     kind: str = "star"
     composite: tuple[MKType, ...] = ()
-    trailer: str = ""
 
     @classmethod
     def parse(cls, text: str) -> MKType:
@@ -109,11 +108,7 @@ class MKType:
                    first.prefix, first.kind, tuple(others))
 
     def __str__(self) -> str:
-        own = self.text
-        if self.lum_text:
-            own += " " + self.lum_text
-        if self.tail:
-            own += (" " if _needs_space(own, self.tail) else "") + self.tail
+        own = self.text + (" " if self.lum_text else "") + self.lum_text + self.tail
         return " + ".join([own, *map(str, self.composite)])
 
     @property
@@ -174,7 +169,8 @@ class MKType:
                     break
                 found.append(match.group())
                 at = match.end()
-            if at < len(word) and word[at].isalpha():
+            run = word.isalpha() and word.islower() and len(word) > 3 and len(found) > 2
+            if run or (at < len(word) and word[at].isalpha()):
                 found, at = [], 0   # a word of its own, not a string of marks
             known += found
             if at < len(word):
@@ -203,9 +199,14 @@ def _t_code(letter: str, subtype: float, missing: float) -> float:
     return 10.0 * LETTERS.index(letter) + (subtype if subtype == subtype else missing)
 
 
-def _needs_space(own: str, tail: str) -> bool:
+def _tail(piece: str, at: int) -> str:
+    """What follows the class, with one blank before it where there was one or where it would run into the class."""
+    tail = piece[at:].strip()
+    if not tail:
+        return ""
     first = tail[0]
-    return first.isupper() or first.isdigit() or first in ".,+-0" or not (first.isalpha() or first in "([!*:?")
+    apart = piece[at : at + 1] == " " or first.isupper() or first.isdigit() or not (first.isalpha() or first in "([!*:?")
+    return " " + tail if apart else tail
 
 
 @dataclass(frozen=True)
@@ -281,7 +282,7 @@ def _other_kinds(piece: str, whole: str) -> MKType | None:
         match = pattern.match(piece)
         if match is None:
             continue
-        tail = piece[match.end() :].strip()
+        tail = _tail(piece, match.end())
         groups = [g for g in match.groups() if g]
         number = re.match(r"\d*\.?\d+", groups[-1]) if groups else None
         if kind in ("hot subdwarf", "ultracool dwarf"):
@@ -304,7 +305,7 @@ def _metallic(piece: str, whole: str) -> MKType | None:
     chosen = parts.get("h") or parts.get("k") or next(iter(parts.values()))
     subtype = _checked(chosen[0], chosen[1:], whole)
     lum, at = _class_at(piece, match.end(), whole)
-    return MKType(match.group(), chosen[0], subtype, chosen[0], subtype, lum, piece[at:].strip())
+    return MKType(match.group(), chosen[0], subtype, chosen[0], subtype, lum, _tail(piece, at))
 
 
 def _checked(letter: str, digits: str, whole: str) -> float:
@@ -347,7 +348,7 @@ def _ordinary(piece: str, whole: str) -> MKType | None:
     if piece[at : at + 2] == "OB" and not piece[at + 2 : at + 3].isdigit():
         step = piece[at + 2 : at + 3] if piece[at + 2 : at + 3] in ("+", "-") else ""
         lum, end = _class_at(piece, at + 2 + len(step), whole)
-        found = MKType(prefix + "OB" + step, "O", NAN, "B", NAN, lum, piece[end:].strip(), prefix)
+        found = MKType(prefix + "OB" + step, "O", NAN, "B", NAN, lum, _tail(piece, end), prefix)
         return None if found.rest else found
     text, at = prefix + letter, at + 1
     if letter in "OB" and piece[at : at + 1] in ("N", "C") and piece[at + 1 : at + 2].isdigit():
@@ -382,7 +383,7 @@ def _ordinary(piece: str, whole: str) -> MKType | None:
             text, at = text + bare.group(), bare.end()
         text, at = _marks(piece, at, text)
     lum, at = _class_at(piece, at, whole)
-    found = MKType(text, letter, subtype, letter_hi, subtype_hi, lum, piece[at:].strip(), prefix)
+    found = MKType(text, letter, subtype, letter_hi, subtype_hi, lum, _tail(piece, at), prefix)
     if found.rest and (digits is None or not (lum or found.peculiarities or found.rest.startswith(("+", ".")))):
         return None
     return found
