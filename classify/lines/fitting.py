@@ -21,7 +21,7 @@ from starfathom.classify.lines.profiles import gaussian_parts, voigt
 FloatArray = NDArray[np.float64]
 BoolArray = NDArray[np.bool_]
 
-_MAX_STEPS = 50
+_MAX_STEPS = 40
 # stop when a step gains less than this times chi2 per degree of freedom: no parameter then moves by more than
 # 0.3 per cent of the error that the residuals allow it
 _GAIN = 1e-5
@@ -197,8 +197,12 @@ def _solve(matrix: FloatArray, vector: FloatArray) -> FloatArray:
     return np.linalg.solve(unit, (vector * root)[:, :, None])[:, :, 0] * root
 
 
-def _descend(problem: _Problem, start: FloatArray) -> tuple[FloatArray, BoolArray]:
-    """Levenberg-Marquardt from ``start`` (j, q) within the bounds: fitted numbers and whether each job converged."""
+def _descend(problem: _Problem, start: FloatArray,
+             to_beat: FloatArray | None = None) -> tuple[FloatArray, BoolArray]:
+    """Levenberg-Marquardt from ``start`` (j, q) within the bounds: fitted numbers and whether each job converged.
+
+    After a few steps jobs that are not clearly below ``to_beat`` (j,) in chi2 are dropped.
+    """
     fitted = start.copy()
     hessian, gradient, chi2 = problem.normal(fitted)
     count, size = fitted.shape
@@ -243,6 +247,8 @@ def _descend(problem: _Problem, start: FloatArray) -> tuple[FloatArray, BoolArra
             now = fitted[live]
             pressed = (now <= part.low) | (now >= part.high)
             finished |= (pressed & ~_may_rest(now, part.low, part.high, part.ties)).any(axis=1)
+        if attempt >= _PATIENCE and to_beat is not None:
+            finished |= to_beat[live] - chi2[live] < 2.0 * np.maximum(chi2[live] / freedom[live], 1.0)
         if finished.any():
             keep = ~finished
             live, hessian, gradient = live[keep], hessian[keep], gradient[keep]
@@ -285,7 +291,7 @@ def fit_jobs(jobs: Jobs, start: FloatArray, base: FloatArray, ties: Ties, low: F
     for turn in range(_MAX_ROUNDS):
         part = jobs if rows.size == count else jobs.take(rows)
         problem = _problem(part, loss[rows], base[rows], low[rows], high[rows], ties)
-        fitted[rows], converged[rows] = _descend(problem, fitted[rows])
+        fitted[rows], converged[rows] = _descend(problem, fitted[rows], to_beat if turn == 0 else None)
         now = np.clip(_band_depths(part, fitted[rows], base[rows], ties)[0], -1.0, 0.7)
         step = now - loss[rows]
         going = converged[rows] & (np.abs(step).max(axis=1) > _LOSS_TOLERANCE)

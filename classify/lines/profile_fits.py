@@ -169,7 +169,7 @@ def _batches(wave: FloatArray, lines: BulkLines, first: dict[int, int]) -> Itera
         for slot in slots:
             pending.append(slot)
             total += slot.rows.size
-            if total * slot.pixels.size >= 24000:
+            if total * slot.pixels.size >= 40000:
                 yield pending
                 pending, total = [], 0
         if pending:
@@ -284,6 +284,8 @@ def _fit_batch(wave: FloatArray, lines: BulkLines, slots: list[_Slot], profiles:
     if "voigt" in profiles:
         strong = np.maximum(best.significance().max(axis=1), best.total_significance()) >= _VOIGT_SIGMA
         strong &= (jobs.weight > 0).sum(axis=1) >= 3 * k + 3
+        # a Voigt profile is wider than the line spread, and where no Gaussian holds no Voigt will
+        strong &= best.converged & (best.full[:, :, 2].max(axis=1) >= 0.95 * spread)
         attempt(True, True, everyone[strong])
         attempt(True, False, apart[strong[apart]])
     if k > 1:
