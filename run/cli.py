@@ -9,6 +9,7 @@ import json
 import math
 import os
 import sys
+import textwrap
 from collections.abc import Callable, Iterable, Sequence
 from pathlib import Path
 from typing import TYPE_CHECKING, Annotated, Any, NoReturn
@@ -221,9 +222,12 @@ def _say_stars(rows: Sequence[dict[str, Any]], budgets: dict[str, list[dict[str,
 
     width, colour = terminal.width_of(), terminal.colour_wanted()
     if len(rows) <= BLOCKS:
+        said = terminal.common_cautions(rows)
         for row in rows:
             budget = (budgets or {}).get(str(row.get("name")), [])
-            _say(terminal.star_block(row, budget, width=width, colour=colour) + "\n")
+            _say(terminal.star_block(row, budget, width=width, colour=colour, said=said) + "\n")
+        if said:
+            _say(textwrap.fill(f"For most of these stars: {' '.join(said)}", width) + "\n")
     else:
         for row in rows:
             _say(terminal.one_line(row, width=width, colour=colour))

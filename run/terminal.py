@@ -8,6 +8,7 @@ from __future__ import annotations
 
 import math
 import os
+import re
 import shutil
 import sys
 import textwrap
@@ -74,8 +75,9 @@ def class_sentence(row: Row) -> str:
     return ", ".join(f"{in_words(p)} {name} ({per_cent(p)})" for p, name in told)
 
 
-def significant(value: float, error: float | None = None, digits: int = 2) -> str:
-    """``value`` to the decimal where ``error`` has its last of ``digits`` figures (three figures without an error)."""
+def significant(value: float, error: float | None = None, digits: int = 2, most: int = 3) -> str:
+    """``value`` to the decimal where ``error`` has its last of ``digits`` figures (three figures without an error),
+    but to ``most`` decimals at the most."""
     if not _is_number(value):
         return "?"
     scale = error
@@ -83,7 +85,7 @@ def significant(value: float, error: float | None = None, digits: int = 2) -> st
         scale, digits = abs(value), 3
     if scale == 0:
         return "0"
-    decimals = min(4, digits - 1 - math.floor(math.log10(scale)))
+    decimals = min(most, digits - 1 - math.floor(math.log10(scale)))
     return f"{round(value, decimals):.{max(0, decimals)}f}"
 
 
@@ -107,9 +109,12 @@ def _with_error(row: Row, key: str, digits: int = 2, sign: bool = False) -> str:
 
 
 def _wrapped(label: str, text: str, width: int) -> list[str]:
-    lines = textwrap.wrap(text, width - LABEL_WIDTH - 2, break_long_words=True, break_on_hyphens=False) or [""]
+    # A number and its unit stay on one line: hidden from the wrapping by a no-break space.
+    whole = re.sub(r"(?<=\d) (?=%|pc\b|kpc\b|Å|K\b|km/s|sigma)", "\0", " ".join(text.split()))
+    lines = textwrap.wrap(whole, width - LABEL_WIDTH - 2, break_long_words=True, break_on_hyphens=False) or [""]
     head = f"  {label:<{LABEL_WIDTH}}"
-    return [head + lines[0], *(" " * len(head) + line for line in lines[1:])]
+    rows = [head + lines[0], *(" " * len(head) + line for line in lines[1:])]
+    return [row.replace("\0", " ") for row in rows]
 
 
 def _joined(label: str, pieces: Iterable[str], width: int) -> list[str]:
@@ -185,32 +190,69 @@ def _parallax_line(row: Row, width: int) -> list[str]:
     return _wrapped("parallax", f"{words} ({sigma:+.1f} sigma)", width)
 
 
-def budget_sentence(budget: Sequence[Row], limit: int = 5) -> str:
-    """The largest contributions to the error of the distance, such as "scale scatter 14 %, class 6 %"."""
-    told = sorted(
-        (
-            (float(b["per_cent"]), str(b["step"]))
-            for b in budget
-            if b.get("step") != "total" and _is_number(b.get("per_cent"))
-        ),
-        reverse=True,
-    )
-    named = [f"{step} {value:.0f} %" for value, step in told[:limit] if value >= 0.5]
-    return ", ".join(named) + (", the rest under 1 %" if named and len(told) > len(named) else "")
+def budget_sentence(budget: Sequence[Row]) -> str:
+    """What contributed to the error of the distance, largest first, such as "scale scatter 14 %, class 6 %"."""
+    told = [b for b in budget if b.get("step") != "total" and _is_number(b.get("per_cent"))]
+    shares = sorted(((float(b["per_cent"]), str(b["step"])) for b in told), reverse=True)
+    named = [f"{step} {value:.0f} %" for value, step in shares if value >= 1]
+    return ", ".join(named) + (", the rest under 1 %" if named and len(shares) > len(named) else "")
 
 
-def _caution_lines(row: Row, width: int, colour: bool) -> list[str]:
-    cautions = row.get("cautions") or ""
-    sentences = [cautions] if isinstance(cautions, str) else list(cautions)
-    out = []
-    for sentence in (s.strip() for s in sentences):
-        if sentence:
-            lines = _wrapped("careful" if not out else "", sentence, width)
-            out += [_styled(line, "warn", colour) for line in lines]
-    return out
+def sentences_of(cautions: Any) -> list[str]:
+    """Cautions, a text or a sequence of them, as single sentences."""
+    text = cautions if isinstance(cautions, str) else " ".join(cautions or ())
+    return [part.strip() for part in re.split(r"(?<=[.!?])\s+(?=[A-Z])", text) if part.strip()]
 
 
-def star_block(row: Row, budget: Sequence[Row] = (), *, width: int = 80, colour: bool = False) -> str:
+def common_cautions(rows: Sequence[Row]) -> tuple[str, ...]:
+    """Cautions that most stars of a list share: better said once than at every star."""
+    counts: dict[str, int] = {}
+    for row in rows:
+        for sentence in sentences_of(row.get("cautions")):
+            counts[sentence] = counts.get(sentence, 0) + 1
+    return tuple(sentence for sentence, n in counts.items() if n >= 4 and 2 * n > len(rows))
+
+
+def _caution_lines(row: Row, said: Sequence[str], width: int, colour: bool) -> list[str]:
+    text = " ".join(s for s in sentences_of(row.get("cautions")) if s not in said)
+    return [_styled(line, "warn", colour) for line in _wrapped("careful", text, width)] if text else []
+
+
+def _finding_lines(row: Row, width: int) -> list[str]:
+    """What the spectrum said: class probabilities, remark, nearest templates."""
+    lines: list[str] = []
+    if not _type_given(row):
+        error = row.get("t_code_err")
+        subtype = f"subtype ± {significant(error, error)}" if _is_number(error) else ""  # type: ignore[arg-type]
+        lines += _joined("class", [class_sentence(row), subtype], width)
+    if row.get("remark"):
+        lines += _wrapped("seen", str(row["remark"]), width)
+    if row.get("nearest"):
+        lines += _wrapped("like", ", ".join(str(row["nearest"]).split(",")), width)
+    return lines
+
+
+def _star_lines(row: Row, width: int) -> list[str]:
+    """What follows for the star: dust, distance, temperature, luminosity, radius."""
+    absolute, ebv = _with_error(row, "abs_mag_v", sign=True), _with_error(row, "ebv")
+    doubt = "" if row.get("abs_mag_v_ok", True) else " (beyond where parallaxes check it)"
+    a_v = significant(row["a_v"], row.get("a_v_err"), most=2) if _is_number(row.get("a_v")) else ""
+    dust = [f"E(B-V) {ebv}" if ebv else "", f"A_V {a_v}" if a_v else ""]
+    temperature, luminosity = _with_error(row, "teff_k"), _with_error(row, "log_lum_lsun", sign=True)
+    radius = _with_error(row, "radius_rsun")
+    physics = [f"Teff {temperature} K" if temperature else "", f"log L {luminosity}" if luminosity else "",
+               f"R {radius} Rsun" if radius else ""]  # fmt: skip
+    return [
+        *_joined("M_V", [f"{absolute} from the spectrum{doubt}" if absolute else ""], width),
+        *_joined("dust", dust, width),
+        *_distance_lines(row, width),
+        *_joined("star", physics, width),
+        *_parallax_line(row, width),
+    ]
+
+
+def star_block(row: Row, budget: Sequence[Row] = (), *, width: int = 80, colour: bool = False,
+               said: Sequence[str] = ()) -> str:  # fmt: skip
     """All that matters about one star as a few lines of text.
 
     Parameters
@@ -219,55 +261,24 @@ def star_block(row: Row, budget: Sequence[Row] = (), *, width: int = 80, colour:
     budget : the star's rows of the error budget (``step``, ``per_cent``)
     width : columns to write in
     colour : whether to use ANSI colour
+    said : cautions told elsewhere, to be left out here
     """
+    typed = row.get("status") == "typed"
     lines = [_headline(row, width, colour)]
     if row.get("reason"):
         lines += _wrapped("because", str(row["reason"]), width)
-    if row.get("status") == "typed":
-        if not _type_given(row):
-            error = row.get("t_code_err")
-            subtype = f"subtype ± {significant(error, error)}" if _is_number(error) else ""  # type: ignore[arg-type]
-            lines += _joined("class", [class_sentence(row), subtype], width)
-        if row.get("remark"):
-            lines += _wrapped("seen", str(row["remark"]), width)
-        if row.get("nearest"):
-            lines += _wrapped("like", str(row["nearest"]).replace(",", ", ").replace(",  ", ", "), width)
+    if typed:
+        lines += _finding_lines(row, width)
     lines += _spectrum_lines(row, width)
-    flags = [flag for flag in str(row.get("flags") or "").split(",") if flag.strip() and flag != GIVEN_FLAG]
+    flags = [flag.strip() for flag in str(row.get("flags") or "").split(",") if flag.strip() not in ("", GIVEN_FLAG)]
     if flags:
-        lines += _wrapped("flags", ", ".join(flag.strip() for flag in flags), width)
-    if row.get("status") == "typed":
-        absolute = _with_error(row, "abs_mag_v", sign=True)
-        doubt = "" if row.get("abs_mag_v_ok", True) else " (beyond where parallaxes check it)"
-        reddening = _with_error(row, "ebv")
-        extinction = (
-            _with_error(row, "a_v")
-            if not _is_number(row.get("a_v_err"))
-            else significant(row["a_v"], row["a_v_err"])
-            if _is_number(row.get("a_v"))
-            else ""
-        )
-        lines += _joined(
-            "reddening", [f"E(B-V) {reddening}" if reddening else "", f"A_V {extinction}" if extinction else ""], width
-        )
-        lines += _joined("M_V", [f"{absolute} from the spectrum{doubt}" if absolute else ""], width)
-        lines += _distance_lines(row, width)
-        temperature, luminosity = _with_error(row, "teff_k"), _with_error(row, "log_lum_lsun", sign=True)
-        radius = _with_error(row, "radius_rsun")
-        lines += _joined(
-            "star",
-            [
-                f"Teff {temperature} K" if temperature else "",
-                f"log L {luminosity}" if luminosity else "",
-                f"R {radius} Rsun" if radius else "",
-            ],
-            width,
-        )
-        lines += _parallax_line(row, width)
+        lines += _wrapped("flags", ", ".join(flags), width)
+    if typed:
+        lines += _star_lines(row, width)
         shares = budget_sentence(budget)
         if shares:
             lines += _wrapped("errors", shares, width)
-        lines += _caution_lines(row, width, colour)
+        lines += _caution_lines(row, said, width, colour)
     return "\n".join(lines)
 
 

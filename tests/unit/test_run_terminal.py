@@ -66,7 +66,7 @@ def test_says_what_matters() -> None:
     for words in (
         "G8 III", "very likely III (88 %), possibly IV (10 %)", "subtype ± 0.62", "530 pc", "68 % 430 to 660 pc",
         "95 % 340 to 800 pc", "log L +1.72 ± 0.17", "R 9.8 ± 1.9 Rsun", "Teff 4990 ± 110 K",
-        "E(B-V) 0.121 ± 0.031", "scale scatter 18 %, class 6 %", "in tension (+2.4 sigma)", "One colour cannot",
+        "E(B-V) 0.121 ± 0.031", "A_V 0.38", "scale scatter 18 %, class 6 %", "in tension (+2.4 sigma)", "One colour cannot",
     ):  # fmt: skip
         assert words in block
 
@@ -130,3 +130,19 @@ def test_no_colour_without_a_terminal(monkeypatch: pytest.MonkeyPatch) -> None:
 def test_summary_counts() -> None:
     assert terminal.summary({"rows": 1, "refused": 0, "failed": 0}) == "1 star: 1 typed."
     assert terminal.summary({"rows": 9, "refused": 2, "failed": 1}).startswith("9 stars: 6 typed, 2 refused")
+
+
+def test_a_caution_that_most_share_is_said_once() -> None:
+    rows = [ROW | {"cautions": "Common to all; with a semicolon. Own one."}] + [
+        ROW | {"cautions": "Common to all; with a semicolon."}
+    ] * 4
+    said = terminal.common_cautions(rows)
+    assert said == ("Common to all; with a semicolon.",)
+    assert "Own one." in terminal.star_block(rows[0], said=said)
+    assert "careful" not in terminal.star_block(rows[1], said=said)
+
+
+def test_a_number_and_its_unit_stay_together() -> None:
+    for width in range(50, 80):
+        for line in terminal.star_block(ROW, BUDGET, width=width).splitlines():
+            assert not line.lstrip().startswith(("%", "pc", "Å", "K ", "km/s"))
