@@ -32,20 +32,20 @@ def serve(paths: Sequence[str], port: int | None = None, open_browser: bool = Tr
     from starfathom.desk.server import Desk
     from starfathom.desk.windows import known_marks
 
-    night.type_some()
-    desk = Desk(night, known_marks(), port or 0)
     count = len(night.stars)
-    print(f"{count} star{'s' if count != 1 else ''} on the desk: {desk.address}", flush=True)
-    print(f"Decisions are kept in {night.log.path}. Stop with Ctrl-C.", flush=True)
-    if open_browser:
-        _open_browser(desk.address)
     before = len(night.decisions())
     try:
+        night.type_some()
+        desk = Desk(night, known_marks(), port or 0)
+        print(f"{count} star{'s' if count != 1 else ''} on the desk: {desk.address}", flush=True)
+        print(f"Decisions are kept in {night.log.path}. Stop with Ctrl-C.", flush=True)
+        if open_browser:
+            _open_browser(desk.address)
         desk.run()
     except KeyboardInterrupt:
-        desk.stop()
+        pass                                       # the way to stop; every decision is on the disk already
     kept = len(night.decisions())
-    print(f"\n{kept} of {count} decided ({kept - before} now), kept in {night.log.path}.", file=sys.stdout)
+    print(f"\n{kept} of {count} decided ({kept - before} now), kept in {night.log.path}.")
     return 0
 
 

@@ -70,4 +70,5 @@ def of_run(run_dir: Path) -> Night:
         stars.append(Star(row["name"], spectrum_path(facts, row["file"]), settings, said, row=row, target=target))
     classifier = Classifier.load(without_libraries=tuple(asked.get("without_libraries", ())),
                                  without_stars=tuple(asked.get("without_stars", ())))
-    return Night(stars, classifier, DecisionLog(log_path(run_dir)), lambda path: read_plain(path, medium=medium))
+    return Night(stars, classifier, DecisionLog(log_path(run_dir)), lambda path: read_plain(path, medium=medium),
+                 scaling={k: asked.get(k) for k in ("scale", "prior", "rv")})

@@ -9,7 +9,7 @@ from pathlib import Path
 from typing import Any
 
 from starfathom.classify.assignment import Assignment
-from starfathom.classify.errors import SpectrumError
+from starfathom.classify.errors import SpectrumError, StarfathomError
 from starfathom.classify.prepared import Prepared
 from starfathom.classify.spectrum import PlainSpectrum
 from starfathom.decisions import Action, Decision, DecisionLog, file_digest
@@ -51,15 +51,19 @@ class Night:
     log : where decisions are kept
     read : reads one file, raising SpectrumError
     magnitudes : absolute magnitudes of the plane's cells, for the order of the queue
+    scaling : ``scale``, ``prior`` and ``rv`` of the run, for distances
     """
 
     def __init__(self, stars: Sequence[Star], classifier: Any, log: DecisionLog,
-                 read: Callable[[str], PlainSpectrum], magnitudes: MagnitudeGrid | None = None) -> None:
+                 read: Callable[[str], PlainSpectrum], magnitudes: MagnitudeGrid | None = None,
+                 scaling: dict[str, Any] | None = None) -> None:
         self.stars = list(stars)
         self.classifier = classifier
         self.log = log
         self.magnitudes = magnitudes
         self._read = read
+        self._scaling = scaling or {}
+        self._far: dict[tuple[int, str], tuple[float, float, float] | None] = {}
         self._lock = threading.Lock()
         self._prepared: dict[tuple[int, float, float], Prepared] = {}
         self._order()
@@ -131,6 +135,29 @@ class Night:
                 self._prepared.pop(next(iter(self._prepared)))
             self._prepared[key] = ready
         return self._prepared[key]
+
+    def distance_if(self, index: int, mk_type: str) -> tuple[float, float, float] | None:
+        """Distance of a star in pc, if it were of a given type: median, 16 % and 84 %; None without photometry."""
+        key = (index, mk_type)
+        if key not in self._far:
+            self._far[key] = self._distance(self.stars[index].target, mk_type)
+        return self._far[key]
+
+    def _distance(self, target: dict[str, Any], mk_type: str) -> tuple[float, float, float] | None:
+        if not target.get("magnitudes"):
+            return None
+        from starfathom.classify.mktype import MKType
+        from starfathom.distance import Photometry, fathom
+
+        ebv = target.get("ebv")
+        try:
+            found = fathom(MKType.parse(mk_type), Photometry(target["magnitudes"]), ra_deg=target.get("ra_deg"),
+                           dec_deg=target.get("dec_deg"), ebv=None if ebv is None else tuple(ebv), n_samples=600,
+                           **self._scaling)
+        except StarfathomError:
+            return None
+        lo, hi = found.interval("distance_pc")
+        return found.median("distance_pc"), lo, hi
 
     # ---- the person's say -----------------------------------------------------------------------------------------
 

@@ -78,10 +78,6 @@ class Desk:
         threading.Thread(target=self._type_all, name="typing", daemon=True).start()
         self.server.io_loop.start()
 
-    def stop(self) -> None:
-        """Stop serving; nothing is lost, decisions are on the disk already."""
-        self.server.stop(wait=False)
-
     # ---- one page -------------------------------------------------------------------------------------------------
 
     def _open(self, doc: Document) -> None:

@@ -21,6 +21,16 @@ def per_cent(p: float | None) -> str:
     return f"{100 * p:.0f} %" if p >= 0.01 else "< 1 %"
 
 
+def figures(value: float, digits: int = 3) -> str:
+    """A number to so many figures, without an exponent; "–" where there is none."""
+    if not math.isfinite(value):
+        return "–"
+    if value == 0:
+        return "0"
+    decimals = digits - 1 - math.floor(math.log10(abs(value)))
+    return f"{round(value, decimals):,.{min(max(0, decimals), 6)}f}".replace(",", "\u2009").replace("-", "−")
+
+
 def star_tile(s: Session) -> str:
     """Name of the star, and its decision if it has one."""
     decision = s.decided.get(s.star.name)
@@ -53,17 +63,32 @@ def place_tile(s: Session, here: Comparison | None, pinned: Comparison | None) -
     chance = "" if probability is None else f"probability {per_cent(probability)}"
     fit = "" if here is None else f"misfit {here.overall:.2f} σ"
     top = f'you stand at <b>{escape(plane.cell_name(place.cell))}</b> <small>{chance}</small>'
-    under = " · ".join(x for x in (fit, f"real star {escape(place.standard)}" if place.standard else "") if x)
+    standard = f"real star {escape(place.standard)}" if place.standard else ""
+    under = " · ".join(x for x in (fit, standard, _distance_words(s)) if x)
     if pinned is not None and here is not None:
         under += (f' · pinned <b class="pin">{escape(pinned.place.label)}</b> {pinned.overall:.2f} σ, '
                   f"{_preferred(here, pinned)}")
     return f'<div class="big">{top}</div><div class="what">{under}</div>'
 
 
+def _distance_words(s: Session) -> str:
+    """How far the star would be if it were of the type where one stands, and how far the run puts it."""
+    found = s.night.distance_if(s.index, plane.cell_name(s.look.place.cell))
+    if found is None or not math.isfinite(found[0]):
+        return ""
+    middle, lo, hi = (figures(v) for v in found)
+    text = f"if so at {middle} pc ({lo} to {hi})"
+    try:
+        run = float(s.star.row.get("distance_pc", "nan"))
+    except (TypeError, ValueError):
+        run = float("nan")
+    return text + (f", run {figures(run)} pc" if math.isfinite(run) else "")
+
+
 def _preferred(here: Comparison, pinned: Comparison) -> str:
     for_pin = sum(b < a - 0.1 for a, b in zip(here.by_window, pinned.by_window))
     for_here = sum(a < b - 0.1 for a, b in zip(here.by_window, pinned.by_window))
-    return f"better in {for_pin} windows, here in {for_here}"
+    return f"better in {for_pin} windows, here {for_here}"
 
 
 def machine_tile(said: Assignment | None) -> str:
@@ -115,8 +140,23 @@ def queue_list(s: Session) -> str:
     return "".join(rows)
 
 
-def evidence_table(s: Session) -> str:
-    """Every criterion: what it measured, where it points, whether it can live with where one stands."""
+def evidence_table(s: Session, here: Comparison | None = None) -> str:
+    """Every criterion: what it measured, where it points, whether it can live with the place; then the windows."""
+    return _criteria(s) + (_window_words(s, here) if here is not None else "")
+
+
+def _window_words(s: Session, here: Comparison) -> str:
+    rows = []
+    for w, size in zip(s.windows(), here.by_window):
+        css = "no" if size > 2.0 else "yes"
+        rows += [f'<tr><td>{escape(m.name)}</td><td>{escape(m.tells)}</td><td class="{css} num">{size:.1f} σ</td></tr>'
+                 for m in w.marks]
+    if not rows:
+        return ""
+    return f"<table><tr><th>window</th><th>tells</th><th class='num'>misfit</th></tr>{''.join(rows)}</table>"
+
+
+def _criteria(s: Session) -> str:
     said = s.star.assignment
     if said is None:
         return "<p>The machine has not come to this star yet.</p>"

@@ -275,7 +275,7 @@ class View:
         on_view = star[(wave >= lo) & (wave <= hi)]
         low, high = np.nanpercentile(on_view, [0.3, 99.7]) if np.isfinite(on_view).any() else (0.0, 1.0)
         room = 0.1 * (high - low) + 0.01
-        top = high + room + (0.8 * (high - low) if look.names else 0.0)
+        top = high + room + (0.95 * (high - low) if look.names else 0.0)
         bottom = low - room - 0.24 * (high - low)
         if self._sent.get("span") != (bottom, top):
             self._sent["span"] = (bottom, top)
@@ -430,7 +430,7 @@ class View:
             ("machine", "html"): texts.machine_tile(s.star.assignment),
             ("count", "html"): texts.count_line(s),
             ("queue", "html"): texts.queue_list(s),
-            ("evidence", "html"): texts.evidence_table(s),
+            ("evidence", "html"): texts.evidence_table(s, here),
             ("legend", "html"): texts.legend(s),
             ("nudges", "html"): texts.nudges(s),
             ("view-name", "html"): "as measured" if s.look.measured else "rectified",

@@ -16,6 +16,7 @@ FloatArray = NDArray[np.float64]
 
 MARGIN_ANGSTROM = 6.0
 LEAST_WIDTH_ANGSTROM = 30.0
+MOST_WIDTH_ANGSTROM = 60.0
 MOST_WINDOWS = 9
 #: All windows together; more would be too narrow to see on 1280 pixels.
 MOST_ANGSTROM = 420.0
@@ -87,6 +88,8 @@ def windows_for(evidence: Iterable[Criterion], marks: Sequence[Mark], lo: float,
     for mark, criterion_name in wanted:
         spare = max(MARGIN_ANGSTROM, (LEAST_WIDTH_ANGSTROM - (mark.hi_angstrom - mark.lo_angstrom)) / 2)
         a, b = mark.lo_angstrom - spare, mark.hi_angstrom + spare
+        if mark.line and b - a > MOST_WIDTH_ANGSTROM:      # the wings run on; their shoulders say enough
+            a, b = (mark.wave_angstrom + side * MOST_WIDTH_ANGSTROM / 2 for side in (-1, 1))
         touching = [w for w in windows if a < w.hi_angstrom and b > w.lo_angstrom]
         grown = b - a + sum(w.hi_angstrom - w.lo_angstrom for w in windows)
         if not touching:
@@ -151,9 +154,10 @@ def choose_marks(marks: Sequence[Mark], wave: FloatArray, template: FloatArray, 
         values = template[near]
         values = values[np.isfinite(values)]
         if len(values):
-            depth.append((float(np.max(np.abs(1.0 - values))), m))
+            # bands are named after lines, save where bands rule
+            depth.append((float(np.max(np.abs(1.0 - values))) * (1.0 if m.line or letter in "KM" else 0.5), m))
     chosen: list[Mark] = []
     for d, m in sorted(depth, key=lambda x: -x[0]):
-        if d > 0.02 and len(chosen) < most and all(abs(m.wave_angstrom - c.wave_angstrom) > gap for c in chosen):
+        if d > 0.015 and len(chosen) < most and all(abs(m.wave_angstrom - c.wave_angstrom) > gap for c in chosen):
             chosen.append(m)
     return sorted(chosen, key=lambda m: m.wave_angstrom)

@@ -12,6 +12,7 @@ from starfathom.classify.errors import StarfathomError
 from starfathom.decisions import FILE_NAME, Decision
 from starfathom.desk import plane
 from starfathom.desk.palette import DARK, LIGHT
+from starfathom.desk.texts import figures
 from starfathom.desk.windows import known_marks
 from starfathom.report import pictures
 from starfathom.report.gather import STAR_PAGES, RunResult, StarResult, read_run, spectrum_path
@@ -67,16 +68,6 @@ def _section(title: str, body: str, css: str = "") -> str:
     return f'<section class="{css}"><h2>{escape(title)}</h2>{body}</section>'
 
 
-def _number(value: float, digits: int = 3) -> str:
-    """A number to so many figures, without an exponent; "–" where there is none."""
-    if not math.isfinite(value):
-        return "–"
-    if value == 0:
-        return "0"
-    decimals = max(0, digits - 1 - math.floor(math.log10(abs(value))))
-    return f"{value:,.{min(decimals, 6)}f}".replace(",", "\u2009")
-
-
 def _fixed(value: float, decimals: int) -> str:
     """A number to so many decimals; "–" where there is none."""
     return f"{value:.{decimals}f}".replace("-", "−") if math.isfinite(value) else "–"
@@ -86,12 +77,12 @@ def _plus_minus(star: StarResult, column: str, digits: int = 3, decimals: int | 
     value, error = star.number_of(column), star.number_of(column + "_err")
     if decimals is not None:
         return _fixed(value, decimals) + (f" ± {_fixed(error, decimals)}" if math.isfinite(error) else "")
-    return _number(value, digits) + (f" ± {_number(error, 2)}" if math.isfinite(value) and math.isfinite(error) else "")
+    return figures(value, digits) + (f" ± {figures(error, 2)}" if math.isfinite(value) and math.isfinite(error) else "")
 
 
 def _span(star: StarResult) -> str:
     lo, hi = star.number_of("distance_lo_pc"), star.number_of("distance_hi_pc")
-    return f"{_number(lo)} to {_number(hi)}" if math.isfinite(lo) and math.isfinite(hi) else ""
+    return f"{figures(lo)} to {figures(hi)}" if math.isfinite(lo) and math.isfinite(hi) else ""
 
 
 def _type(star: StarResult) -> str:
@@ -198,7 +189,7 @@ def _raw(value: float) -> str:
 
 
 def _cell(value: float, digits: int = 3, text: str = "") -> str:
-    return f'<td class="num" data-v="{_raw(value)}">{text or _number(value, digits)}</td>'
+    return f'<td class="num" data-v="{_raw(value)}">{text or figures(value, digits)}</td>'
 
 
 def _tables(run: RunResult) -> str:
@@ -274,7 +265,7 @@ def star_page(star: StarResult, artist: SpectrumArtist, before: StarResult | Non
     name = escape(star.name)
     said = star.assignment
     kind = _type(star)
-    numbers = [("distance, pc", _number(star.number_of("distance_pc"))), ("68 %", _span(star)),
+    numbers = [("distance, pc", figures(star.number_of("distance_pc"))), ("68 %", _span(star)),
                ("E(B−V)", _plus_minus(star, "ebv", decimals=2)), ("T<sub>eff</sub>, K", _plus_minus(star, "teff_k")),
                ("log L/L<sub>☉</sub>", _plus_minus(star, "log_lum_lsun", decimals=2)),
                ("R/R<sub>☉</sub>", _plus_minus(star, "radius_rsun"))]
