@@ -192,7 +192,7 @@ def fathom_targets(
     if requests:
         found = fathom_many(
             requests,
-            scale=settings.scale,
+            scale=_scale(settings),
             prior=settings.prior,
             n_samples=settings.n_samples,
             seed=settings.seed,
@@ -203,6 +203,16 @@ def fathom_targets(
         for i, answer in zip(places, found):
             out[i] = str(answer) if isinstance(answer, StarfathomError) else answer
     return out
+
+
+def _scale(settings: RunSettings) -> Any:
+    """The scale asked for; our own is fitted afresh without what is to be left out (some seconds, once a process)."""
+    from starfathom.distance import fit_scale, load_scale
+
+    left_out = settings.without_libraries or settings.without_stars
+    if left_out and load_scale(settings.scale).fitted:
+        return fit_scale(settings.without_libraries, settings.without_stars)
+    return settings.scale
 
 
 def row_of(target: Target, assignment: Assignment, fathoming: Fathoming | str | None) -> dict[str, Any]:
