@@ -79,7 +79,9 @@ def _emission(wave: FloatArray, lines: BulkLines, fits: BulkFits, i: int, k: int
         if not core.any() or around.sum() < 5:
             continue
         peak, error = y[core].mean(), np.sqrt((noise[core] ** 2).sum()) / core.sum()
-        if peak - np.percentile(y[around], 95) > 3.0 * error:
+        span = max(1, round(spread / float(np.median(np.diff(x)))))
+        smooth = np.convolve(y, np.ones(span) / span, mode="same")
+        if peak - np.max(smooth[around]) > max(3.0 * error, 0.02):
             return True
     return False
 

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Iterator
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
@@ -25,6 +25,7 @@ FloatArray = NDArray[np.float64]
 NAN = float("nan")
 #: A fit is preferred to the direct sum only where the line is this significant.
 _FIT_SIGMA = 10.0
+_SHARP_SIGMA = 5.0
 
 #: Columns in order: (name, unit or "", decimals or None for text and flags, what it means).
 COLUMNS: tuple[tuple[str, str, int | None, str], ...] = (
@@ -41,12 +42,12 @@ COLUMNS: tuple[tuple[str, str, int | None, str], ...] = (
     ("ew_fit_angstrom", "Angstrom", 4, "area of the fitted profile, wings included"),
     ("ew_fit_err_angstrom", "Angstrom", 4, "one standard deviation"),
     ("limit_angstrom", "Angstrom", 4, "3 sigma detection limit of the equivalent width"),
-    ("detected", "", None, "true where the feature is there at 3 sigma"),
+    ("detected_ok", "", None, "true where the feature is there at 3 sigma"),
     ("fwhm_angstrom", "Angstrom", 3, "full width at half depth of the fitted profile"),
     ("fwhm_err_angstrom", "Angstrom", 3, "one standard deviation"),
     ("intrinsic_fwhm_angstrom", "Angstrom", 3, "the same with the line spread taken out; upper limit if unresolved"),
     ("intrinsic_fwhm_err_angstrom", "Angstrom", 3, "one standard deviation; empty for an upper limit"),
-    ("intrinsic_is_limit", "", None, "true where intrinsic_fwhm_angstrom is a 3 sigma upper limit"),
+    ("intrinsic_ok", "", None, "true where intrinsic_fwhm_angstrom is a width, false where it is a limit"),
     ("depth", "", 4, "central depth of the profile (mean depth over the window for a band)"),
     ("depth_err", "", 4, "one standard deviation"),
     ("center_angstrom", "Angstrom", 3, "centre of the profile, rest frame, air"),
@@ -136,7 +137,7 @@ class LineTable:
         return table
 
     def __str__(self) -> str:
-        there = [r for r in self.rows if r["detected"]]
+        there = [r for r in self.rows if r["detected_ok"]]
         head = f"{self.path or 'spectrum'}: {len(there)} of {len(self.rows)} features there"
         body = [f"{r['feature']:24s} {r['ew_angstrom']:8.3f} +- {r['ew_err_angstrom']:.3f} A  {r['flags']}"
                 for r in there]
@@ -152,6 +153,8 @@ def measure_lines(
     correlation: FloatArray | None = None,
     fwhm_err_angstrom: float = 0.0,
     profiles: tuple[str, ...] = ("gaussian", "voigt"),
+    reference: bool = False,
+    notes: tuple[str, ...] = (),
 ) -> LineTable:
     """Measure every feature of one spectrum on its own pixels (nothing is resampled).
 
@@ -166,12 +169,14 @@ def measure_lines(
         (:func:`starfathom.classify.lines.noise.resampling_correlation`)
     fwhm_err_angstrom : error of the line spread, carried into intrinsic widths
     profiles : which profiles compete
+    reference : take equivalent widths, widths and centres from specutils, call by call (slow); errors stay ours
+    notes : sentences to carry along
 
     Raises
     ------
     SpectrumError : too few pixels, or a line spread that is not positive
     """
-    notes: list[str] = []
+    said = list(notes)
     vacuum: bool | None = None
     if isinstance(spectrum, Prepared):
         plain = spectrum.spectrum
@@ -187,7 +192,7 @@ def measure_lines(
     if vacuum is None:
         vacuum = plain.medium == "vacuum"
         if plain.medium == "unknown":
-            notes.append("wavelengths taken to be in air: the file does not say")
+            said.append("wavelengths taken to be in air: the file does not say")
     wave = np.asarray(plain.wave_angstrom, float)
     if wave.size < 12:
         raise SpectrumError(f"{plain.path or 'the spectrum'} has {wave.size} pixels: too few to measure a line; "
@@ -199,24 +204,41 @@ def measure_lines(
     if velocity_kms is None:
         velocity_kms = float(plain.meta.get("velocity_kms", 0.0))
         if "velocity_kms" not in plain.meta:
-            notes.append("velocity taken as zero: none given")
+            said.append("velocity taken as zero: none given")
     if fwhm_angstrom is None:
         if "fwhm_angstrom" in plain.meta:
             fwhm_angstrom = float(plain.meta["fwhm_angstrom"])
         else:
             fwhm_angstrom = 2.5 * float(np.median(np.diff(wave)))
-            notes.append(f"line spread taken as 2.5 pixels ({fwhm_angstrom:.2f} A): none given")
+            said.append(f"line spread taken as 2.5 pixels ({fwhm_angstrom:.2f} A): none given")
     rest = wave / (1.0 + velocity_kms / LIGHT_KMS)
     flux, valid = plain.flux[None, :], plain.valid[None, :]
     sigma = None if plain.sigma is None else plain.sigma[None, :]
     if sigma is None:
-        notes.append("the file gives no errors: noise estimated from the spectrum itself")
+        said.append("the file gives no errors: noise estimated from the spectrum itself")
     lines = measure_many(rest, flux, sigma, valid, fwhm_angstrom, velocity_kms=velocity_kms, features=features,
                          correlation=correlation)
     fits = fit_many(rest, lines, profiles=profiles, correlation=correlation, fwhm_err_angstrom=fwhm_err_angstrom)
+    if reference:
+        lines, fits = _by_reference(rest, lines, fits)
+        said.append("values by specutils, errors by ours")
     return LineTable(rows=tuple(_rows(rest, lines, fits, velocity_kms)), wave_angstrom=rest, lines=lines, fits=fits,
                      velocity_kms=float(velocity_kms), fwhm_angstrom=float(fwhm_angstrom),
-                     sigma_estimated=sigma is None, path=plain.path, notes=tuple(notes))
+                     sigma_estimated=sigma is None, path=plain.path, notes=tuple(said))
+
+
+def _by_reference(wave: FloatArray, lines: BulkLines, fits: BulkFits) -> tuple[BulkLines, BulkFits]:
+    """The same measurements with the values specutils finds put in their place."""
+    from starfathom.classify.lines.reference import reference_lines
+
+    found = reference_lines(wave, lines, fits)
+
+    def put(ours: FloatArray, theirs: FloatArray) -> FloatArray:
+        return np.where(np.isfinite(theirs), theirs, ours)
+
+    return (replace(lines, ew=put(lines.ew, found.ew_direct[None])),
+            replace(fits, ew=put(fits.ew, found.ew_fit[None]), fwhm=put(fits.fwhm, found.fwhm_fit[None]),
+                    center=np.where(np.isnan(fits.center), np.nan, put(fits.center, found.center_fit[None]))))
 
 
 def _rows(wave: FloatArray, lines: BulkLines, fits: BulkFits, velocity_kms: float) -> Iterator[dict[str, Any]]:
@@ -231,7 +253,7 @@ def _rows(wave: FloatArray, lines: BulkLines, fits: BulkFits, velocity_kms: floa
             "feature": feature.label, "name": feature.name, "kind": feature.kind,
             "wavelength_angstrom": feature.wavelength, "ew_angstrom": ew, "ew_err_angstrom": err, "ew_from": "direct",
             "ew_direct_angstrom": ew, "ew_direct_err_angstrom": err, "limit_angstrom": DETECTION_SIGMA * err,
-            "detected": seen, "depth": float(lines.depth[0, k]), "depth_err": float(lines.depth_err[0, k])}
+            "detected_ok": seen, "depth": float(lines.depth[0, k]), "depth_err": float(lines.depth_err[0, k])}
         if feature.kind == "band" and np.isfinite(ew):
             width = lines.width[0, k]
             top |= {"flux_ratio": 1.0 - ew / width, "flux_ratio_err": err / width}
@@ -239,9 +261,9 @@ def _rows(wave: FloatArray, lines: BulkLines, fits: BulkFits, velocity_kms: floa
             top["ew_from"] = ""
         if feature.kind == "line":
             top |= _fitted(fits, columns[0], feature.wavelength, velocity_kms)
-            top["detected"] = seen or bool(fits.detected[0, columns[0]] and fits.ew[0, columns[0]] > 0)
+            top["detected_ok"] = seen or bool(fits.detected[0, columns[0]] and fits.ew[0, columns[0]] > 0)
             _prefer(top, fits, columns[0])
-            if not top["detected"]:
+            if not top["detected_ok"]:
                 top["depth"], top["depth_err"] = float(lines.depth[0, k]), float(lines.depth_err[0, k])
         if feature.wings:
             for d, percent in enumerate((10, 20, 30)):
@@ -249,13 +271,13 @@ def _rows(wave: FloatArray, lines: BulkLines, fits: BulkFits, velocity_kms: floa
                 top[f"width_{percent}_err_angstrom"] = float(lines.width_at_err[0, k, d])
         flags = flags_of(wave, lines, fits, 0, k, columns)
         top["flags"] = ",".join(flags)
-        top["detected"] |= "emission" in flags
+        top["detected_ok"] |= "emission" in flags
         yield top
         if feature.kind == "blend":
             for c in columns:
                 row = _blank() | common | {
                     "feature": fits.labels[c], "kind": "component", "blend": feature.label,
-                    "wavelength_angstrom": float(fits.wavelength[c]), "detected": bool(fits.detected[0, c])}
+                    "wavelength_angstrom": float(fits.wavelength[c]), "detected_ok": bool(fits.detected[0, c])}
                 row |= _fitted(fits, c, float(fits.wavelength[c]), velocity_kms)
                 if np.isfinite(row["ew_fit_angstrom"]):
                     row |= {"ew_angstrom": row["ew_fit_angstrom"], "ew_err_angstrom": row["ew_fit_err_angstrom"],
@@ -266,7 +288,8 @@ def _rows(wave: FloatArray, lines: BulkLines, fits: BulkFits, velocity_kms: floa
 
 def _blank() -> dict[str, Any]:
     row: dict[str, Any] = {name: ("" if decimals is None else NAN) for name, _, decimals, _ in COLUMNS}
-    row["detected"] = row["intrinsic_is_limit"] = False
+    row["detected_ok"] = False
+    row["intrinsic_ok"] = False
     return row
 
 
@@ -278,7 +301,7 @@ def _fitted(fits: BulkFits, c: int, rest_angstrom: float, velocity_kms: float) -
         "fwhm_angstrom": float(fits.fwhm[0, c]), "fwhm_err_angstrom": float(fits.fwhm_err[0, c]),
         "intrinsic_fwhm_angstrom": float(fits.intrinsic[0, c]),
         "intrinsic_fwhm_err_angstrom": float(fits.intrinsic_err[0, c]),
-        "intrinsic_is_limit": bool(fits.unresolved[0, c]),
+        "intrinsic_ok": bool(np.isfinite(fits.intrinsic[0, c]) and not fits.unresolved[0, c]),
         "center_angstrom": float(fits.center[0, c]), "center_err_angstrom": float(fits.center_err[0, c]),
         "profile": ("voigt" if fits.voigt[0, c] else "gaussian") if found else "",
         "chi2": float(fits.chi2[0, c]), "dof": float(fits.dof[0, c])}
@@ -300,7 +323,10 @@ def _prefer(row: dict[str, Any], fits: BulkFits, c: int) -> None:
     Explained means residuals like the noise, or small beside the depth. A weak line's fit picks its own width and
     place out of the noise and is biased high; its direct sum is not.
     """
-    if not fits.detected[0, c] or abs(fits.ew[0, c]) < _FIT_SIGMA * fits.ew_err[0, c]:
+    significance = abs(fits.ew[0, c]) / fits.ew_err[0, c]
+    # a narrow line in a window made for broad ones: the sum is mostly noise and neighbours
+    sharper = fits.ew_err[0, c] < 0.5 * row["ew_direct_err_angstrom"]
+    if not fits.detected[0, c] or not significance >= (_SHARP_SIGMA if sharper else _FIT_SIGMA):
         return
     like_noise = fits.chi2[0, c] <= 2.0 * fits.dof[0, c]
     small = fits.residual_rms[0, c] <= 0.1 * abs(fits.depth[0, c])
