@@ -57,6 +57,7 @@ Without = Annotated[
 WithoutStar = Annotated[
     str, typer.Option("--without-star", metavar="HIP,...", help="Leave stars out of everything learned.")
 ]
+Velocity = Annotated[float | None, typer.Option(metavar="KMS", help="Velocity of the star; measured if not given.")]
 AsJson = Annotated[bool, typer.Option("--json", help="Print JSON and nothing else.")]
 Scale = Annotated[str | None, typer.Option(metavar="NAME", help="Luminosity scale; an unknown name lists them.")]
 Prior = Annotated[str | None, typer.Option(metavar="NAME", help="Distance prior; an unknown name lists them.")]
@@ -141,9 +142,7 @@ def classify(
     vacuum: Vacuum = False,
     fwhm: Fwhm = None,
     resolution: Annotated[float | None, typer.Option(metavar="R", help="Resolving power, in place of --fwhm.")] = None,
-    velocity: Annotated[
-        float | None, typer.Option(metavar="KMS", help="Velocity of the star; measured if not given.")
-    ] = None,
+    velocity: Velocity = None,
     read_as: Annotated[
         str | None,
         typer.Option(
@@ -250,9 +249,7 @@ def lines(
     fwhm: Fwhm = None,
     air: Air = False,
     vacuum: Vacuum = False,
-    velocity: Annotated[
-        float | None, typer.Option(metavar="KMS", help="Velocity of the star; measured if not given.")
-    ] = None,
+    velocity: Velocity = None,
     read_as: Annotated[
         str | None, typer.Option("--read-as", metavar="KIND", help="Read the file as this kind.")
     ] = None,
@@ -288,13 +285,21 @@ def sheet(
         str | None, typer.Option("--with", metavar="TYPE", help='Compare with this type, such as "G2 V".')
     ] = None,
     output: Annotated[
-        str | None, typer.Option("-o", "--output", metavar="PICTURE", help="File to draw: .png or .pdf.")
+        str | None, typer.Option("-o", "--output", metavar="PICTURE", help="File to draw: .png, .pdf or .svg.")
     ] = None,
+    air: Air = False,
+    vacuum: Vacuum = False,
+    fwhm: Fwhm = None,
+    velocity: Velocity = None,
 ) -> None:
     """Draw the evidence as a page to print."""
     from starfathom import sheet as page
 
-    page.run(file, with_type, output)
+    settings = _settings(air, vacuum, fwhm, None, velocity)
+    page.run(
+        file, with_type, output, medium=settings.medium, fwhm_angstrom=settings.fwhm_angstrom,
+        velocity_kms=settings.velocity_kms,
+    )  # fmt: skip
 
 
 @app.command()
