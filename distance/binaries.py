@@ -23,3 +23,17 @@ def share(lum_code: ArrayLike) -> FloatArray:
 def brightening(pick: ArrayLike, ratio: ArrayLike, lum_code: ArrayLike) -> FloatArray:
     """Mag by which the system outshines its primary, from two uniform numbers in (0, 1); arrays broadcast."""
     return np.where(np.asarray(pick) < share(lum_code), 2.5 * np.log10(1.0 + np.asarray(ratio, float)), 0.0)
+
+
+#: Median brightening over the mean one, for a scatter of so many mag (found by simulation, share 0.25).
+_MEDIAN_OVER_MEAN = ((0.2, 0.3, 0.45), (0.61, 0.77, 0.88))
+
+
+def median_shift(lum_code: ArrayLike, sigma: ArrayLike) -> FloatArray:
+    """How much brighter in mag the middle star of a class is than the middle of the single ones.
+
+    ``sigma`` is the scatter of single stars in mag: the narrower it is, the more the brightened stand apart. The mean
+    brightening of a companion whose light ratio is even in (0, 1) is 2.5/ln 10 (2 ln 2 - 1) = 0.419 mag.
+    """
+    mean = 2.5 / np.log(10.0) * (2.0 * np.log(2.0) - 1.0)
+    return np.interp(np.asarray(sigma, float), *_MEDIAN_OVER_MEAN) * mean * share(lum_code)

@@ -14,7 +14,7 @@ DUST_HEIGHT_PC = 125.0
 #: Inside the Local Bubble (about 80 pc; Lallement et al. 2003 A&A 411 447) dust is scarce.
 BUBBLE_PC = 80.0
 #: Share of sightlines through a cloud, and mean excess behind one. Broad on purpose: zeta Oph has 0.32 at 112 pc.
-CLOUD_SHARE, CLOUD_EBV = 0.15, 0.35
+CLOUD_SHARE, CLOUD_EBV = 0.15, 0.6
 #: Latitude factor |sin b| taken when the direction is not known: the bright stars' median.
 SIN_B_UNKNOWN = 0.3
 
@@ -37,10 +37,13 @@ def mean_smooth(distance_pc: ArrayLike, sin_b: ArrayLike) -> FloatArray:
 
 
 def mean_cloud(distance_pc: ArrayLike, sin_b: ArrayLike) -> FloatArray:
-    """Mean E(B-V) behind a cloud at up to this distance in pc: nothing nearby, :data:`CLOUD_EBV` and growing beyond."""
+    """Mean E(B-V) behind a cloud at up to this distance in pc: next to nothing nearby, :data:`CLOUD_EBV` beyond.
+
+    It does not grow farther out: a thick cloud may stand anywhere, and must not push its star away.
+    """
     d = np.asarray(distance_pc, float)
     inside = -np.expm1(-((d / (1.5 * BUBBLE_PC)) ** 2))
-    return CLOUD_EBV * (0.03 + 0.97 * inside) + 2.0 * mean_smooth(d, sin_b)
+    return CLOUD_EBV * (0.03 + 0.97 * inside) + 0.0 * np.asarray(sin_b, float)
 
 
 def log_density(ebv: ArrayLike, distance_pc: ArrayLike, sin_b: ArrayLike) -> FloatArray:

@@ -309,11 +309,64 @@ def fathom_many(
         for chunk, results in zip(chunks, pool.map(work, chunks)):
             for item, result in zip(chunk, results):
                 out[item[0]] = result
-    done: list[Fathoming | StarfathomError] = [r for r in out if r is not None]
-    if common_groups and any(isinstance(r, Fathoming) and r.group for r in done):
-        from starfathom.distance.groups import apply_groups
+    if common_groups:
+        for item, result in _grouped(ready, out, job):
+            out[item] = result
+    return [r for r in out if r is not None]
 
-        done = apply_groups(done)
+
+def _grouped(
+    ready: list[tuple[int, Star, Request, Any]], out: list[Fathoming | StarfathomError | None], job: _Job
+) -> list[tuple[int, Fathoming]]:
+    """Members of groups once more, each knowing what the others say of distance and dust; index and new result."""
+    from starfathom.distance import groups
+
+    by_name: dict[str, list[tuple[int, Star, Request, Any]]] = {}
+    for item in sorted(ready, key=lambda r: r[0]):
+        if item[2].group:
+            by_name.setdefault(item[2].group, []).append(item)
+    done = []
+    for name, items in by_name.items():
+        first = [r for r in (out[item[0]] for item in items) if isinstance(r, Fathoming)]
+        points = [groups.modulus_of(*r.percentiles["distance_pc"][1:4]) for r in first]
+        modulus, modulus_err = np.array(points).T
+        ebv = np.array([r.median("ebv") for r in first])
+        ebv_err = np.maximum([r.error("ebv") for r in first], 0.01)
+        names = [r.name or f"star {item[0] + 1}" for r, item in zip(first, items)]
+        group = groups.combine(name, names, modulus, modulus_err, ebv, ebv_err)
+        if group is None:
+            continue
+        inside = ~np.array(group.is_outlier)
+        stars = []
+        for i, item in enumerate(items):
+            parallax, excess = groups.without_one(i, inside, modulus, modulus_err, ebv, ebv_err)
+            stars.append(replace(item[1], parallax=parallax, ebv_measured=excess) if inside[i] else item[1])
+        again = draw(stars, job.scale, job.prior, job.n_samples, job.seed)
+        percentiles, samples = _summaries(again)
+        variance = decompose(again, job.scale, 1000) if job.with_budget else np.zeros((len(stars), 8))
+        for i, (item, before) in enumerate(zip(items, first)):
+            said = before.cautions
+            common = {"group_distance_pc": group.distance_pc, "group_distance_err_pc": group.distance_err_pc, "group_ebv": group.ebv}
+            if not inside[i]:
+                said = (f"The star stands apart from the group {name} in distance or reddening and was left on its own.", *said)
+                done.append((item[0], replace(before, cautions=said, group_outlier=True, **common)))
+                continue
+            own = {k: tuple(v[:, i].tolist()) for k, v in percentiles.items()}
+            sigma = group.distance_err_pc / group.distance_pc
+            own["distance_pc"] = tuple(float(group.distance_pc * np.exp(z * sigma)) for z in (-1.96, -0.994, 0.0, 0.994, 1.96))
+            done.append(
+                (
+                    item[0],
+                    replace(
+                        before,
+                        percentiles=own,
+                        budget=budget_rows(variance[i]) if job.with_budget else (),
+                        cautions=said,
+                        samples={k: v[i] for k, v in samples.items()} if job.keep_samples else {},
+                        **common,
+                    ),
+                )
+            )
     return done
 
 

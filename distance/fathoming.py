@@ -41,6 +41,10 @@ COLUMNS: tuple[tuple[str, str, int | None, str], ...] = (
     ("angular_diameter_mas_err", "mas", 4, "half the 68 % interval of angular_diameter_mas"),
     ("parallax_sigma", "", 2, "tension with the given parallax, positive where the parallax says farther"),
     ("parallax_percent", "", 1, "distance by the given parallax over distance by type, less one, in per cent"),
+    ("group_distance_pc", "pc", 2, "common distance of the star's group"),
+    ("group_distance_err_pc", "pc", 2, "one standard deviation of group_distance_pc"),
+    ("group_ebv", "mag", 3, "common E(B-V) of the star's group"),
+    ("group_outlier", "", None, "true where the star stands apart from its group"),
     ("scale", "", None, "distance scale used"),
     ("prior", "", None, "prior used"),
     ("cautions", "", None, "what to keep in mind, sentences"),
@@ -81,6 +85,10 @@ class Fathoming:
     scale: str = ""
     prior: str = ""
     group: str = ""
+    group_distance_pc: float = NAN
+    group_distance_err_pc: float = NAN
+    group_ebv: float = NAN
+    group_outlier: bool = False
     distance_class_pc: float = NAN
     distance_spec_pc: float = NAN
     routes_sigma: float = NAN

@@ -27,7 +27,7 @@ from starfathom.distance.calibrators import Calibrators, calibrators
 from starfathom.distance.extinction import RV_MEAN, band_terms, evaluate
 from starfathom.distance.grid import CELL_LUM, CELL_STEP, cell_of, from_nodes
 from starfathom.distance.intrinsic import intrinsic
-from starfathom.distance.scale import OWN, TAIL_WIDTH, Scale, composite_nodes
+from starfathom.distance.scale import OWN, PUBLISHED_TYPES, TAIL_WIDTH, Scale, composite_nodes
 
 FloatArray = NDArray[np.float64]
 
@@ -38,14 +38,15 @@ class Recipe:
 
     length_step: float = 5.0
     length_lum: float = 1.0
-    hold_dwarfs: float = 0.15
+    hold_dwarfs: float = 0.08
     hold_others: float = 0.6
     offset_length_step: float = 12.0
     offset: float = 0.4
     slope_length_step: float = 6.0
     slope: float = 5.0
+    slope_offset: float = 4.0
     scatter_length: float = 4.0
-    scatter_weight: float = 6.0
+    scatter_weight: float = 5.0
     library_scatter: float = 1.25
     library_vote: float = 0.2
     tail: float = 0.10
@@ -53,11 +54,11 @@ class Recipe:
 
 
 #: Guess of the scatter before any star is seen: main sequence, subgiants and giants, bright giants and supergiants.
-_SCATTER_GUESS = ((5.0, 0.28), (4.0, 0.60), (3.0, 0.55), (2.0, 0.80), (0.0, 0.80))
+_SCATTER_GUESS = ((5.0, 0.25), (4.0, 0.60), (3.0, 0.48), (2.0, 0.80), (0.0, 0.80))
 #: Guess of the colour term in mag per mag of (B-V)_0: (class, step, value). On the main sequence a star too red for
 #: its type is fainter; a red giant too red for it is brighter.
 _SLOPE_GUESS: tuple[tuple[float, tuple[tuple[float, float], ...]], ...] = (
-    (5.0, ((30, 0.0), (36, 1.5), (46, 2.0), (52, 3.0), (58, 6.0), (66, 7.0))),
+    (5.0, ((46, 0.0), (52, 3.0), (58, 6.0), (66, 7.0))),
     (4.0, ((34, 0.0), (42, -5.0), (50, -10.0), (56, -8.0))),
     (3.0, ((30, 0.0), (42, -9.0), (50, -11.0), (56, -6.0), (62, -2.0))),
     (2.0, ((30, 0.0), (45, -3.0), (60, -2.0))),
@@ -87,7 +88,7 @@ def _warp(lum_code: FloatArray) -> FloatArray:
 
 def _slope_amplitude(step: FloatArray, lum_code: FloatArray, recipe: Recipe) -> FloatArray:
     """How far the colour term may leave its guess: not at all where dust and rotation rule the colour."""
-    ramp = np.where(lum_code > 4.5, np.interp(step, [30, 46], [0.0, 1.0]), np.interp(step, [36, 44], [0.0, 1.0]))
+    ramp = np.where(lum_code >= 4.5, np.interp(step, [46, 52], [0.0, 1.0]), np.interp(step, [36, 44], [0.0, 1.0]))
     return recipe.slope * ramp
 
 
@@ -266,6 +267,8 @@ def fit(stars: Calibrators, recipe: Recipe = Recipe(), *, colour: bool = True) -
     free = _slope_amplitude(*at, recipe) * colour
     k_slope = np.outer(free, free) * _kernel(at, at, recipe.slope_length_step, recipe.length_lum)
     k_offset = recipe.offset**2 * _kernel(at, at, recipe.offset_length_step, 1.2) * np.outer(lib, lib)
+    mine = lib * free / recipe.slope * recipe.slope_offset
+    k_slope += np.outer(mine, mine) * _kernel(at, at, recipe.slope_length_step, recipe.length_lum)
     k_all = k_mean + delta[:, None] * k_slope * delta[None, :] + k_offset
     v_err = 3.2 * colours.ebv_err
     use = np.where(lib > 0, recipe.library_vote, 1.0)
@@ -286,10 +289,13 @@ def fit(stars: Calibrators, recipe: Recipe = Recipe(), *, colour: bool = True) -
     inverse = np.linalg.inv(k_all + np.diag(noise))
     alpha = inverse @ (expected.target - base)
     cross = covariance(cells, at)
-    mean = mean_cells + cross @ alpha
+    width = _smooth_scatter(cells, stars, expected.square / ratio**2, use, recipe)
+    mean = mean_cells + cross @ alpha - binaries.median_shift(CELL_LUM, width)
     variance = _amplitude(CELL_LUM, recipe) ** 2 - np.einsum("ij,ij->i", cross @ inverse, cross)
-    cross_slope = np.outer(_slope_amplitude(*cells, recipe), free * delta)
-    cross_slope *= _kernel(cells, at, recipe.slope_length_step, recipe.length_lum)
+    near = _kernel(cells, at, recipe.slope_length_step, recipe.length_lum)
+    free_cells = _slope_amplitude(*cells, recipe)
+    cross_slope = np.outer(free_cells, free * delta) * near
+    cross_slope_lib = np.outer(free_cells / recipe.slope * recipe.slope_offset, mine * delta) * near
     slope = slope_cells + cross_slope @ alpha
     held = (_kernel(cells, at, 2.0, 0.4) * np.minimum(1.0, 0.6**2 * expected.precision)).sum(axis=1)
     scale = Scale(
@@ -297,7 +303,7 @@ def fit(stars: Calibrators, recipe: Recipe = Recipe(), *, colour: bool = True) -
         source="fitted to Hipparcos parallaxes (van Leeuwen 2007) of MK standards and library stars",
         mean=mean,
         mean_err=np.sqrt(np.maximum(variance, 1e-4)),
-        sigma=_smooth_scatter(cells, stars, expected.square / ratio**2, use, recipe),
+        sigma=width,
         tail=np.full(len(mean), recipe.tail),
         slope=slope if colour else np.zeros(len(mean)),
         bv_shift=shift_cells,
@@ -307,8 +313,9 @@ def fit(stars: Calibrators, recipe: Recipe = Recipe(), *, colour: bool = True) -
     cross_offset = recipe.offset**2 * _kernel(cells, at, recipe.offset_length_step, 1.2) * lib
     at_large = replace(
         scale,
-        name=f"{OWN}-published",
+        name=PUBLISHED_TYPES,
         mean=mean + cross_offset @ alpha,
+        slope=scale.slope + colour * (cross_slope_lib @ alpha),
         sigma=scale.sigma * np.interp(CELL_LUM, *_by_class(stars.lum_code[lib > 0], ratio[lib > 0])),
     )
     return scale, at_large
@@ -320,11 +327,16 @@ def _by_class(lum_code: FloatArray, ratio: FloatArray) -> tuple[FloatArray, Floa
 
 
 @lru_cache(maxsize=16)
-def _fit_cached(libraries: tuple[str, ...], stars: tuple[int, ...]) -> Scale:
-    return fit(calibrators(libraries, stars))[0]
+def _fit_cached(libraries: tuple[str, ...], stars: tuple[int, ...]) -> tuple[Scale, Scale]:
+    return fit(calibrators(libraries, stars))
 
 
-def fit_scale(without_libraries: Collection[str] = (), without_stars: Collection[int] = ()) -> Scale:
-    """The scale fitted afresh without some libraries (by name) and stars (Hipparcos numbers); a few seconds, cached."""
+def fit_scale(
+    without_libraries: Collection[str] = (), without_stars: Collection[int] = (), *, published_types: bool = False
+) -> Scale:
+    """The scale fitted afresh without some libraries (by name) and stars (Hipparcos numbers); a few seconds, cached.
+
+    ``published_types`` gives the scale of types of mixed origin, wider and slightly off, instead of the standards'.
+    """
     libraries = tuple(sorted({name.lower() for name in without_libraries}))
-    return _fit_cached(libraries, tuple(sorted({int(h) for h in without_stars})))
+    return _fit_cached(libraries, tuple(sorted({int(h) for h in without_stars})))[int(published_types)]

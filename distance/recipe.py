@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from typing import Any
+
 import numpy as np
 
 from starfathom.distance.calibrators import calibrators
@@ -13,8 +15,10 @@ from starfathom.distance.tables import DATA
 def main() -> None:
     """Fit and write ``data/scale.npz``; about ten seconds."""
     stars = calibrators()
-    scale, _ = fit(stars)
-    np.savez_compressed(DATA / "scale.npz", **to_arrays(scale))
+    arrays: dict[str, Any] = {}
+    for scale in fit(stars):
+        arrays |= {f"{scale.name}/{key}": value for key, value in to_arrays(scale).items()}
+    np.savez_compressed(DATA / "scale.npz", **arrays)
     print(f"fitted {len(stars)} stars, {(stars.library == '').sum()} of them standards; wrote {DATA / 'scale.npz'}")
 
 

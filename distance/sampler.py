@@ -199,6 +199,8 @@ def draw(stars: list[Star], scale: Scale, prior: str, n_samples: int, seed: int)
     sigma = scale.sigma[cell] * sigma_factor * np.where(u[1] < scale.tail[cell], TAIL_WIDTH, 1.0)
     sigma = np.hypot(sigma, scale.mean_err[cell])
     mean, slope = scale.mean[cell], scale.slope[cell]
+    if scale.fitted:  # the scale states the middle of all stars; a single one is a little fainter
+        mean = mean + binaries.median_shift(lum, scale.sigma[cell])
     spec, spec_err, rho = (column([s.abs_mag[i] for s in stars]) for i in range(3))
     has_spec = np.isfinite(spec)
     # a star without its own luminosity beside stars with one must not spread its NaN
