@@ -17,6 +17,8 @@ from starfathom.desk.needs import MagnitudeGrid, Need, need
 
 #: Stars typed together; small, so that the first is on the page at once.
 BATCH = 12
+#: Stars kept ready to compare, nudges counted apart.
+PREPARED_KEPT = 24
 
 
 @dataclass
@@ -64,7 +66,7 @@ class Night:
         self._read = read
         self._scaling = scaling or {}
         self._far: dict[tuple[int, str], tuple[float, float, float] | None] = {}
-        self._lock = threading.Lock()
+        self._lock = threading.RLock()     # the classifier and the cache serve one thread at a time
         self._prepared: dict[tuple[int, float, float], Prepared] = {}
         self._order()
 
@@ -118,23 +120,36 @@ class Night:
         SpectrumError : the file cannot be read any more, or has too little to compare
         """
         key = (index, blur_angstrom, nudge_kms)
-        if key not in self._prepared:
-            star = self.stars[index]
-            settings = star.settings
-            if nudge_kms:
-                settings = replace(settings, velocity_kms=self.prepared(index).velocity_kms + nudge_kms)
-            elif blur_angstrom:
-                ready = self.prepared(index)
-            if nudge_kms or not blur_angstrom:
-                spectrum = self._read(star.file)
-                with self._lock:
-                    ready = self.classifier.prepare(spectrum, settings)
-            if blur_angstrom:
-                ready = replace(ready, fwhm_angstrom=max(0.2, ready.fwhm_angstrom + blur_angstrom))
-            if len(self._prepared) > 24:
-                self._prepared.pop(next(iter(self._prepared)))
-            self._prepared[key] = ready
-        return self._prepared[key]
+        found = self._prepared.get(key)
+        if found is not None:
+            return found
+        with self._lock:
+            if key not in self._prepared:
+                ready = self._prepare(index, blur_angstrom, nudge_kms)
+                if len(self._prepared) >= PREPARED_KEPT:
+                    self._prepared.pop(next(iter(self._prepared)))
+                self._prepared[key] = ready
+            return self._prepared[key]
+
+    def _prepare(self, index: int, blur_angstrom: float, nudge_kms: float) -> Prepared:
+        if blur_angstrom:
+            plain = self.prepared(index, 0.0, nudge_kms)
+            return replace(plain, fwhm_angstrom=max(0.2, plain.fwhm_angstrom + blur_angstrom))
+        star = self.stars[index]
+        settings = star.settings
+        if nudge_kms:
+            settings = replace(settings, velocity_kms=self.prepared(index).velocity_kms + nudge_kms)
+        ready: Prepared = self.classifier.prepare(self._read(star.file), settings)
+        return ready
+
+    def make_ready(self, index: int | None) -> None:
+        """Prepare a star ahead of its turn, so that going on is quick; faults wait until it is looked at."""
+        if index is None or (index, 0.0, 0.0) in self._prepared:
+            return
+        try:
+            self.prepared(index)
+        except StarfathomError:
+            return
 
     def distance_if(self, index: int, mk_type: str) -> tuple[float, float, float] | None:
         """Distance of a star in pc, if it were of a given type: median, 16 % and 84 %; None without photometry."""

@@ -126,6 +126,7 @@ class Handler:
     def __init__(self, doc: Document, session: Session, view: View) -> None:
         self.doc, self.session, self.view = doc, session, view
         self._due = False
+        self._ahead: threading.Thread | None = None
 
     def heard(self, attr: str, old: Any, new: Any) -> None:
         """A message from the page."""
@@ -155,4 +156,12 @@ class Handler:
             self.view.refresh()
         finally:
             self.doc.unhold()
+        self._make_ready()
+
+    def _make_ready(self) -> None:
+        """Read and prepare the next star while this one is being looked at."""
+        if self._ahead is None or not self._ahead.is_alive():
+            self._ahead = threading.Thread(target=self.session.night.make_ready, args=(self.session.upcoming(),),
+                                           name="ahead", daemon=True)
+            self._ahead.start()
 

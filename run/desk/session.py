@@ -98,8 +98,7 @@ class Session:
     @property
     def look(self) -> Look:
         if self.index not in self._looks:
-            best = self.best_cell()
-            self._looks[self.index] = Look(Place(best if best is not None else plane.cell_near(40.0, 5.0)))
+            self._looks[self.index] = Look(Place(self.best_cell() or self._nearest_cell()))
         return self._looks[self.index]
 
     @look.setter
@@ -121,6 +120,25 @@ class Session:
             return None
         i, j = np.unravel_index(int(self.posterior.argmax()), self.posterior.shape)
         return int(i), int(j)
+
+    def _nearest_cell(self) -> Cell:
+        """Where the template comes nearest to a star without a type, on a coarse net of whole subtypes."""
+        try:
+            ready = self.night.prepared(self.index)
+        except StarfathomError:
+            return plane.cell_near(40.0, 5.0)
+        net = [(i, j) for i in range(0, plane.N_TYPES, 4) for j in (1, 5, 7)]
+        sizes = [rms(misfit(ready, np.asarray(self.night.classifier.template(*plane.cell_codes(c), ready), float)))
+                 for c in net]
+        if not np.isfinite(sizes).any():
+            return plane.cell_near(40.0, 5.0)
+        return net[int(np.nanargmin(sizes))]
+
+    def upcoming(self) -> int | None:
+        """The star that is next in the queue, None at its end."""
+        queue = [k for k in self.night.queue if self.night.stars[k].shown]
+        at = queue.index(self.index) + 1 if self.index in queue else len(queue)
+        return queue[at] if at < len(queue) else None
 
     def probability(self, cell: Cell) -> float | None:
         """What the machine gives a cell; None when the star was not typed."""

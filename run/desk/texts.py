@@ -42,7 +42,7 @@ def star_tile(s: Session) -> str:
 def _conditions(said: Assignment) -> str:
     parts = []
     if math.isfinite(said.snr):
-        parts.append(f"S/N {said.snr:.0f}")
+        parts.append(f"S/N {figures(said.snr, 2 if said.snr < 100 else 3)}")
     if math.isfinite(said.velocity_kms):
         parts.append(f"{said.velocity_kms:+.0f} km/s")
     if math.isfinite(said.fwhm_angstrom):

@@ -59,7 +59,9 @@ class View:
     def _figure(self, name: str, ranges: list[Range1d]) -> Any:
         f = figure(name=name, x_range=ranges[0], y_range=ranges[1], sizing_mode="stretch_both", tools="",
                    toolbar_location=None, min_border=0, min_border_left=6, min_border_right=8, output_backend="canvas",
-                   outline_line_color=None, background_fill_color=None, border_fill_color=None)
+                   outline_line_color=None)
+        self._ink(f, "background_fill_color", "card")
+        self._ink(f, "border_fill_color", "card")
         f.grid.visible = False
         for axis in (*f.xaxis, *f.yaxis):
             axis.minor_tick_line_color = None
@@ -155,6 +157,7 @@ class View:
         f.xaxis.major_label_overrides = {k + 0.5: name for k, name in enumerate(SUBTYPES)}
         f.yaxis.ticker = FixedTicker(ticks=list(range(len(CLASSES))))
         f.xaxis.major_tick_out = 2
+        f.xaxis.major_label_text_font_size = "11px"
         f.yaxis.major_tick_out = 0
         f.add_tools(zoom := WheelZoomTool(dimensions="width"))
         f.toolbar.active_scroll = zoom
@@ -351,7 +354,7 @@ class View:
         self._put("size_pin", _labels([b - 1 for _, b in edges], -1.3,
                                       [_sigma(v) for v in pinned.by_window] if pinned else []))
         sizes = np.array([v if np.isfinite(v) else 0.0 for v in here.by_window])
-        worst = [(*edges[int(sizes.argmax())], bottom + 0.05, top - 0.03)] if len(sizes) and sizes.max() > 1.5 else []
+        worst = [(*edges[int(sizes.argmax())], bottom + 0.05, top - 0.07)] if len(sizes) and sizes.max() > 1.5 else []
         self._put("worst", _boxes(worst))
         if self._sent.get("strip_ticks") != ticks:
             self._sent["strip_ticks"] = ticks
