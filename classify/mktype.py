@@ -19,7 +19,16 @@ MAX_LENGTH = 120
 
 #: Code of each luminosity class word; classes without a letter among the supergiants count as Iab.
 CLASS_CODES: dict[str, float] = {
-    "Ia0": 0.0, "Ia": 1.0, "Iab": 1.3, "I": 1.3, "Ib": 1.6, "II": 2.0, "III": 3.0, "IV": 4.0, "V": 5.0, "VI": 6.0,
+    "Ia0": 0.0,
+    "Ia": 1.0,
+    "Iab": 1.3,
+    "I": 1.3,
+    "Ib": 1.6,
+    "II": 2.0,
+    "III": 3.0,
+    "IV": 4.0,
+    "V": 5.0,
+    "VI": 6.0,
 }
 #: Code that a prefix stands for where no class is written: subdwarf, dwarf, subgiant, giant, supergiant (``c``).
 PREFIX_CODES: dict[str, float] = {"esd": 6.0, "usd": 6.0, "sd": 6.0, "d": 5.0, "sg": 4.0, "g": 3.0, "c": 1.3}
@@ -31,27 +40,38 @@ _PREFIX = re.compile(r"(esd|usd|sd|sg|d|g|c|w|r)(?=[OBAFGKM](?:[^a-z]|$))")
 _METALLIC = re.compile(rf"(?:[khm]{_TYPE}(?:[-/]{_TYPE})?:?){{2,3}}")
 _METAL_SUFFIX = re.compile(rf"\s?m{_TYPE}(?:[-/](?:{_TYPE}|\d(?:\.\d)?))?:?")
 _CLASS = re.compile(
-    r"0-Ia|Ia-0|Ia\s?0|Ia\+(?!\s*[OBAFGKMWDCSLT](?:\d|$|\s|[A-Z-]))|Iab|Ia|Ib|III|II|IV|VII|VI|V|I|0(?![.\d])")
+    r"0-Ia|Ia-0|Ia\s?0|Ia\+(?!\s*[OBAFGKMWDCSLT](?:\d|$|\s|[A-Z-]))|Iab|Ia|Ib|III|II|IV|VII|VI|V|I|0(?![.\d])"
+)
 _CLASS_LETTERS = re.compile(r"(?:ab|a|b)[+-]?(?=[enpms(]|var)|(?:ab|a|b)[+-]?(?![a-z])")
 _COMPANION = re.compile(
-    r"\+\s*(?=(?:sd|esd|usd|sg|[dgckh])?[OBAFGKM](?:\d|\(|[IV/:?+-]|[NC]\d|[emp]?(?:$|[\s+)]))|W[NCOR]\d?|WD|D[ABCOQZX]|C[-\d]|S\d|[LTY]\d|sd[OB])")
+    r"\+\s*(?=(?:sd|esd|usd|sg|[dgckh])?[OBAFGKM](?:\d|\(|[IV/:?+-]|[NC]\d|[emp]?(?:$|[\s+)]))|W[NCOR]\d?|WD|D[ABCOQZX]|C[-\d]|S\d|[LTY]\d|sd[OB])"
+)
 _WHITE_DWARF = re.compile(r"(?:D[ABCOQZX][ABCOQZXPHVEe]{0,5}|WD)(?![a-df-z])\s?(\d{0,2}(?:\.\d{1,2})?)")
-_WOLF_RAYET = re.compile(r"(WN/WC|WN/C|WNL|WNE|WCL|WCE|WN|WC|WO|WR)(?![a-gi-z])\s?(\d{1,2}(?:\.\d)?(?:[-/]\d{1,2}(?:\.\d)?)?)?")
-_CARBON = re.compile(r"C-?(?:Hd|[NRJH])(?![a-z])\s?(\d(?:\.\d)?(?:[-/]\d(?:\.\d)?)?)?|C\s?(\d(?:\.\d)?)(?:[-,/](?:\d(?:\.\d)?))?(?:J|e|ch)?|[RN](\d)(?![\d.])|C$")
+_WOLF_RAYET = re.compile(
+    r"(WN/WC|WN/C|WNL|WNE|WCL|WCE|WN|WC|WO|WR)(?![a-gi-z])\s?(\d{1,2}(?:\.\d)?(?:[-/]\d{1,2}(?:\.\d)?)?)?"
+)
+_CARBON = re.compile(
+    r"C-?(?:Hd|[NRJH])(?![a-z])\s?(\d(?:\.\d)?(?:[-/]\d(?:\.\d)?)?)?|C\s?(\d(?:\.\d)?)(?:[-,/](?:\d(?:\.\d)?))?(?:J|e|ch)?|[RN](\d)(?![\d.])|C$"
+)
 _S_STAR = re.compile(r"(?:SC|MS|S)\s?(\d(?:\.\d)?)(?:[+-])?(?:[-]\d(?:\.\d)?)?(?:[,/*]\d{1,2}(?:\.\d)?)?|SC|MS|S$")
 _ULTRACOOL = re.compile(r"(?:esd|usd|sd|d)?([LTY])(\d(?:\.\d)?)(?:[-/][LTY]?\d(?:\.\d)?)?[:?]?")
-_HOT_SUBDWARF = re.compile(r"(?:He-?)?sd(OBA?|OA|O|B)(\d(?:\.\d)?)?(?![A-Z])")
+_HOT_SUBDWARF = re.compile(r"(?:He-?)?sd(OBA?|OA|O|B)(\d(?:\.\d)?)?")
 
-_ABUNDANCE = (r"(?:HgMn|SrCrEu|SiSrCr|CrEuSr|EuCrSr|SrEuCr|CN|CH|C2|Ca|Fe|Si|Sr|Cr|Eu|Mn|Hg|Ba|Ti|Mg|He|Li|Zr|La|Ce|Nd|Na|Ni|OB|SB[12]?"
-              r"|[CNOPYH](?=[-+]?\d|wk|str|-rich|weak|$|\s))(?:[-+]?\d(?:\.\d{1,2})?|[-+](?!\S))?"
-              r"(?:-?(?:strong|weak|str|wk|st|rich|r|s|w|p|n))?")
+_ABUNDANCE = (
+    r"(?:HgMn|SrCrEu|SiSrCr|CrEuSr|EuCrSr|SrEuCr|CN|CH|C2|Ca|Fe|Si|Sr|Cr|Eu|Mn|Hg|Ba|Ti|Mg|He|Li|Zr|La|Ce|Nd|Na|Ni|OB|SB[12]?"
+    r"|[CNOPYH](?=[-+]?\d|wk|str|-rich|weak|$|\s))(?:[-+]?\d(?:\.\d{1,2})?|[-+](?!\S))?"
+    r"(?:-?(?:strong|weak|str|wk|st|rich|r|s|w|p|n))?"
+)
 _TOKEN = re.compile(
     r"\(\([^()]{1,20}\)\)|\([^()]{1,30}\)|\[[^\[\]]{1,12}\]"
     rf"|{_ABUNDANCE}"
     rf"|[khm]{_TYPE}(?:-{_TYPE})?"
     r"|shell|mild|metal|met|neb|comp|var|pec|lam(?:bda)?\s?Boo|delDel|deltaDel|alpha|beta|gamma|delta|strong|weak|lines?|early|late|abs|"
-    r"wk|wl|sh|em|ev|eq|ep|pe|ha|nn|ss|f\*|f\+|fc|f|e|n|s|m|p|q|v|w|x|z|h|k|d|l|!|\*|α|β|γ|δ|:|\?")
-_DASHES = str.maketrans({"–": "-", "—": "-", "−": "-", "‐": "-", "‑": "-", "_": " ", "\u00a0": " ", "\u2009": " ", "’": "'", "Ⅴ": "V"})
+    r"wk|wl|sh|em|ev|eq|ep|pe|ha|nn|ss|f\*|f\+|fc|f|e|n|s|m|p|q|v|w|x|z|h|k|d|l|!|\*|α|β|γ|δ|:|\?"
+)
+_DASHES = str.maketrans(
+    {"–": "-", "—": "-", "−": "-", "‐": "-", "‑": "-", "_": " ", "\u00a0": " ", "\u2009": " ", "’": "'", "Ⅴ": "V"}
+)
 
 
 @dataclass(frozen=True)
@@ -64,7 +84,7 @@ class MKType:
     letter, subtype : ``K`` and 0.0; letter-only types have subtype NaN. Of a range, its first end
     letter_hi, subtype_hi : the second end of a range, equal to the first end otherwise
     lum_text : the luminosity class as printed, with marks of doubt, such as ``(III):``
-    tail : the rest of the notation as written, with the blank before it if any: peculiarities and what has no meaning here
+    tail : the rest as written, with the blank before it if any: peculiarities and what has no meaning here
     prefix : ``sd``, ``d``, ``g`` ... or ""
     kind : ``star``, ``white dwarf``, ``hot subdwarf``, ``carbon star``, ``S star``, ``Wolf-Rayet``, ``ultracool dwarf``
     composite : the companions of a composite type, primary not included
@@ -97,15 +117,25 @@ class MKType:
         clean = " ".join(text.translate(_DASHES).split()).strip("'\"").strip()
         if not clean:
             raise RequestError("the spectral type is empty; write it like 'G2 V'.")
-        if not clean.isprintable() or any(c in clean for c in "<>{}|\\\"`"):
+        if not clean.isprintable() or any(c in clean for c in '<>{}|\\"`'):
             raise _not_mk(text)
         starts = [m.start() for m in _COMPANION.finditer(clean)]
         pieces = [clean[a:b] for a, b in zip([0, *(s + 1 for s in starts)], [*starts, len(clean)])]
         first, *others = (_component(p.strip(), text) for p in pieces)
         if not others:
             return first
-        return cls(first.text, first.letter, first.subtype, first.letter_hi, first.subtype_hi, first.lum_text, first.tail,
-                   first.prefix, first.kind, tuple(others))
+        return cls(
+            first.text,
+            first.letter,
+            first.subtype,
+            first.letter_hi,
+            first.subtype_hi,
+            first.lum_text,
+            first.tail,
+            first.prefix,
+            first.kind,
+            tuple(others),
+        )
 
     def __str__(self) -> str:
         own = self.text + (" " if self.lum_text else "") + self.lum_text + self.tail
@@ -171,7 +201,7 @@ class MKType:
                 at = match.end()
             run = word.isalpha() and word.islower() and len(word) > 3 and len(found) > 2
             if run or (at < len(word) and word[at].isalpha()):
-                found, at = [], 0   # a word of its own, not a string of marks
+                found, at = [], 0  # a word of its own, not a string of marks
             known += found
             if at < len(word):
                 unknown.append(word[at:])
@@ -205,7 +235,9 @@ def _tail(piece: str, at: int) -> str:
     if not tail:
         return ""
     first = tail[0]
-    apart = piece[at : at + 1] == " " or first.isupper() or first.isdigit() or not (first.isalpha() or first in "([!*:?")
+    apart = (
+        piece[at : at + 1] == " " or first.isupper() or first.isdigit() or not (first.isalpha() or first in "([!*:?")
+    )
     return " " + tail if apart else tail
 
 
@@ -226,7 +258,7 @@ def _one_class(text: str, at: int) -> tuple[str, float, int] | None:
     if word in ("0-Ia", "Ia-0", "Ia0", "Ia+", "0"):
         return "Ia0", 0.0, end
     if word not in CLASS_CODES:
-        return None   # VII is not in use any more
+        return None  # VII is not in use any more
     code = CLASS_CODES[word]
     if word in ("II", "III", "IV", "V"):
         letters = _CLASS_LETTERS.match(text, end)
@@ -246,7 +278,7 @@ def _read_class(text: str, at: int) -> _Class | None:
     match = re.compile(r"\s?([-/])\s?").match(text, end)
     if match is not None:
         second = _one_class(text, match.end())
-        if second is None and word.startswith("I") and code < 2:   # Ia/ab, Iab-b
+        if second is None and word.startswith("I") and code < 2:  # Ia/ab, Iab-b
             letters = re.compile(r"(?:ab|b)(?![a-z])").match(text, match.end())
             if letters is not None:
                 second = "I" + letters.group(), CLASS_CODES["I" + letters.group()], letters.end()
@@ -276,8 +308,12 @@ def _component(piece: str, whole: str) -> MKType:
 def _other_kinds(piece: str, whole: str) -> MKType | None:
     """White dwarfs, hot subdwarfs, Wolf-Rayet, carbon, S, L and T types."""
     for kind, pattern, letter in (
-        ("white dwarf", _WHITE_DWARF, "D"), ("hot subdwarf", _HOT_SUBDWARF, ""), ("Wolf-Rayet", _WOLF_RAYET, "W"),
-        ("carbon star", _CARBON, "C"), ("S star", _S_STAR, "S"), ("ultracool dwarf", _ULTRACOOL, ""),
+        ("white dwarf", _WHITE_DWARF, "D"),
+        ("hot subdwarf", _HOT_SUBDWARF, ""),
+        ("Wolf-Rayet", _WOLF_RAYET, "W"),
+        ("carbon star", _CARBON, "C"),
+        ("S star", _S_STAR, "S"),
+        ("ultracool dwarf", _ULTRACOOL, ""),
     ):
         match = pattern.match(piece)
         if match is None:
@@ -291,7 +327,7 @@ def _other_kinds(piece: str, whole: str) -> MKType | None:
         found = MKType(match.group().strip().replace(" ", ""), letter, value, letter, value, tail=tail, kind=kind)
         glued = match.end() < len(piece) and piece[match.end()].isalpha()
         if found.rest and (glued or (not number and not found.peculiarities)):
-            return None   # a word that happens to start like a type
+            return None  # a word that happens to start like a type
         return found
     return None
 
@@ -345,14 +381,16 @@ def _ordinary(piece: str, whole: str) -> MKType | None:
     if piece[at : at + 1] not in tuple(LETTERS):
         return None
     letter = piece[at]
+    if prefix == "sd" and letter in "OB":
+        return None  # hot subdwarfs are no Population I types
     if piece[at : at + 2] == "OB" and not piece[at + 2 : at + 3].isdigit():
-        step = piece[at + 2 : at + 3] if piece[at + 2 : at + 3] in ("+", "-") else ""
-        lum, end = _class_at(piece, at + 2 + len(step), whole)
-        found = MKType(prefix + "OB" + step, "O", NAN, "B", NAN, lum, _tail(piece, end), prefix)
+        sign = piece[at + 2 : at + 3] if piece[at + 2 : at + 3] in ("+", "-") else ""
+        lum, end = _class_at(piece, at + 2 + len(sign), whole)
+        found = MKType(prefix + "OB" + sign, "O", NAN, "B", NAN, lum, _tail(piece, end), prefix)
         return None if found.rest else found
     text, at = prefix + letter, at + 1
     if letter in "OB" and piece[at : at + 1] in ("N", "C") and piece[at + 1 : at + 2].isdigit():
-        text, at = text + piece[at], at + 1   # nitrogen and carbon sequences: ON9.7, BC1.5
+        text, at = text + piece[at], at + 1  # nitrogen and carbon sequences: ON9.7, BC1.5
     digits = _SUBTYPE.match(piece, at + (piece[at : at + 1] == " " and piece[at + 1 : at + 2].isdigit()))
     subtype = NAN
     letter_hi, subtype_hi = letter, NAN
@@ -362,7 +400,9 @@ def _ordinary(piece: str, whole: str) -> MKType | None:
         text += f"({number})" if digits.group(2) else number
         at = digits.end()
         text, at = _marks(piece, at, text)
-        second = re.compile(r"\s?([-/])\s?(?:([OBAFGKM]?)(\d(?:\.\d{1,2})?)(?![.\d])|([OBAFGKM])(?![a-z\d]))").match(piece, at)
+        second = re.compile(r"\s?([-/])\s?(?:([OBAFGKM]?)(\d(?:\.\d{1,2})?)(?![.\d])|([OBAFGKM])(?![a-z\d]))").match(
+            piece, at
+        )
         if second is not None:
             letter_hi = second.group(2) or second.group(4) or letter
             subtype_hi = _checked(letter_hi, second.group(3), whole) if second.group(3) else NAN

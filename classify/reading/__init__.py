@@ -32,7 +32,8 @@ def read_plain(
     ----------
     path : the file; ``name.fits[2]`` or ``name.fits[SCI]`` picks an HDU
     medium : "air" or "vacuum" to overrule the header, None to believe it
-    read_as : "text", "fits", "votable" or "specutils" (``specutils:NAME`` for one of its loaders); None to tell by content
+    read_as : "text", "fits", "votable" or "specutils" (``specutils:NAME`` for one of its loaders); None to tell
+        by content
     columns : which column is what, as ``{"wave": "LAMBDA", "flux": 3}`` or ``"wave=LAMBDA,flux=3"``; also ``hdu``,
         ``row`` (1-based), ``unit`` (of wavelength, such as nm) and ``flux_unit``
 
@@ -67,7 +68,9 @@ def read_plain(
         raise SpectrumError(f"{shown}: there is not enough memory to read it; extract the spectrum first.") from None
     except Exception as error:
         text = " ".join(str(error).split())[:150] or type(error).__name__
-        raise SpectrumError(f"{shown}: cannot be read as a spectrum ({text}); check the file or say how to read it.") from error
+        raise SpectrumError(
+            f"{shown}: cannot be read as a spectrum ({text}); check the file or say how to read it."
+        ) from error
 
 
 def _medium_of(medium: str | None) -> Medium | None:
@@ -128,11 +131,22 @@ def _raw(data: bytes, name: str, shown: str, request: Request) -> RawSpectrum:
 
 #: First bytes of files that are no spectra, and what they are.
 _OTHERS: tuple[tuple[bytes, str], ...] = (
-    (b"%PDF", "a PDF document"), (b"\x89PNG", "a PNG picture"), (b"\xff\xd8\xff", "a JPEG picture"), (b"GIF8", "a GIF picture"),
-    (b"\x89HDF", "an HDF5 file"), (b"#ASDF", "an ASDF file"), (b"PK\x05\x06", "an empty zip archive"), (b"\x7fELF", "a program"),
-    (b"{\\rtf", "a word-processor document"), (b"\xd0\xcf\x11\xe0", "an office document"), (b"SQLite format 3", "a database"),
-    (b"PAR1", "a Parquet table"), (b"\x1f\x9d", "a file packed with compress"), (b"(\xb5/\xfd", "a file packed with zstd"),
-    (b"7z\xbc\xaf", "a 7z archive"), (b"Rar!", "a RAR archive"),
+    (b"%PDF", "a PDF document"),
+    (b"\x89PNG", "a PNG picture"),
+    (b"\xff\xd8\xff", "a JPEG picture"),
+    (b"GIF8", "a GIF picture"),
+    (b"\x89HDF", "an HDF5 file"),
+    (b"#ASDF", "an ASDF file"),
+    (b"PK\x05\x06", "an empty zip archive"),
+    (b"\x7fELF", "a program"),
+    (b"{\\rtf", "a word-processor document"),
+    (b"\xd0\xcf\x11\xe0", "an office document"),
+    (b"SQLite format 3", "a database"),
+    (b"PAR1", "a Parquet table"),
+    (b"\x1f\x9d", "a file packed with compress"),
+    (b"(\xb5/\xfd", "a file packed with zstd"),
+    (b"7z\xbc\xaf", "a 7z archive"),
+    (b"Rar!", "a RAR archive"),
 )
 
 
@@ -163,7 +177,9 @@ def _fits(data: bytes, name: str, shown: str, request: Request) -> RawSpectrum:
         except SpectrumError:
             raise
         except Exception:
-            raise SpectrumError(f"{shown}: {beyond} and cannot be unpacked; save it as a plain image or table.") from None
+            raise SpectrumError(
+                f"{shown}: {beyond} and cannot be unpacked; save it as a plain image or table."
+            ) from None
         return general.read_with_specutils(name, shown, "")
 
 

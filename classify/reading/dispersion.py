@@ -38,7 +38,7 @@ def axis_of(header: Header, n: int, axis: int = 1, row: int = 0) -> Axis | None:
     if "COEFF0" in header and "COEFF1" in header and axis == 1:
         start, step = header.number("COEFF0"), header.number("COEFF1")
         if np.isfinite(start) and np.isfinite(step) and step != 0:
-            return Axis(start + step * np.arange(n), "", "log10")
+            return Axis(start + step * np.arange(n, dtype=np.float64), "", "log10")
     return _from_wcs(header, n, axis)
 
 
@@ -58,12 +58,12 @@ def _from_wcs(header: Header, n: int, axis: int) -> Axis | None:
         start, step = header.number("W0"), header.number("WPC")
     if not (np.isfinite(start) and np.isfinite(step)) or step == 0:
         return None
-    offset = np.arange(1, n + 1) - reference
+    offset = np.arange(1, n + 1, dtype=np.float64) - reference
     unit = header.word(f"CUNIT{axis}") or _wat_unit(header, axis)
     if ctype.endswith("-LOG"):
         with np.errstate(over="ignore", divide="ignore", invalid="ignore"):
-            values = start * np.exp(offset * step / start)   # Greisen et al. 2006, eq. 5
-        return Axis(values, unit or _unit_of_ctype(ctype))
+            values = start * np.exp(offset * step / start)  # Greisen et al. 2006, eq. 5
+        return Axis(values, unit or _CTYPE_UNITS.get(ctype[:4], ""))
     values = start + offset * step
     log = ""
     if header.whole("DC-FLAG", 0) == 1 or re.match(r"LOG|WAVE?LOG", ctype) or ctype in ("WLOG", "LLAM"):
@@ -72,23 +72,30 @@ def _from_wcs(header: Header, n: int, axis: int) -> Axis | None:
         log = "log10"
     elif _looks_log(values):
         log = "log10" if values.max() <= 4.4 else "ln"
-    if log and spectral_unit(unit) is not None and not 0.2 < _median_power(values, log) * spectral_unit(unit).scale / 1e4 < 2.6:  # type: ignore[union-attr]
-        # logarithms of angstrom are common under any unit word, the logarithm of the unit named is too
+    said = spectral_unit(unit)
+    if log and said is not None and not 2000 < _median_power(values, log) * said.scale < 26000:
+        # logarithms of angstrom stand under any unit word; natural ones are told by their size
         if values.min() >= 7.6 and values.max() <= 10.2:
             log = "ln"
         else:
             unit = ""
     if not log and abs(start) <= 1.0 and step == 1.0 and spectral_unit(unit) is None:
-        return None   # pixel numbers, not wavelengths
+        return None  # pixel numbers, not wavelengths
     if not log and ctype in ("PIXEL", "PIXELS", "PIX") and spectral_unit(unit) is None:
         return None
     if unit.lower() in ("pixel", "pixels", "pix"):
         return None
-    if spectral_unit(unit) is None:
-        unit = _unit_of_ctype(ctype) if ctype[:4] in ("FREQ", "WAVN", "ENER") else ("" if not unit else unit)
-    if unit.lower() in ("deg", "degree", "degrees", "''", "none", "unknown", "lambda", "wavelength", "1", "erg/cm2/s/a"):
+    if spectral_unit(unit) is None and ctype[:4] in _CTYPE_UNITS:
+        unit = _CTYPE_UNITS[ctype[:4]]
+    if unit.lower() in _NO_UNITS:
         unit = ""
     return Axis(values, unit, log)
+
+
+#: Default units of the coordinate types that are not wavelengths (Greisen et al. 2006, table 1).
+_CTYPE_UNITS = {"FREQ": "Hz", "WAVN": "1/m", "ENER": "eV"}
+#: Words found in CUNIT that name no unit of wavelength.
+_NO_UNITS = ("deg", "degree", "degrees", "''", "none", "unknown", "lambda", "wavelength", "1", "erg/cm2/s/a")
 
 
 def _looks_log(values: FloatArray) -> bool:
@@ -99,10 +106,6 @@ def _looks_log(values: FloatArray) -> bool:
 def _median_power(values: FloatArray, log: str) -> float:
     middle = min(float(np.median(values)), 300.0)
     return float(10.0**middle if log == "log10" else np.exp(middle))
-
-
-def _unit_of_ctype(ctype: str) -> str:
-    return {"FREQ": "Hz", "WAVN": "1/m", "ENER": "eV"}.get(ctype[:4], "m" if ctype[:4] in ("WAVE", "AWAV") and False else "")
 
 
 def _wat_unit(header: Header, axis: int) -> str:
@@ -128,7 +131,7 @@ def multispec(header: Header, n: int, row: int = 0) -> Axis | None:
     pixel or sampled coordinate functions, weights, zero offsets and the Doppler factor.
     """
     text = wat_text(header, 2)
-    found = dict((int(k), v) for k, v in re.findall(r"spec(\d{1,4})\s*=\s*\"([^\"]*)\"?", text))
+    found = {int(k): v for k, v in re.findall(r"spec(\d{1,4})\s*=\s*\"([^\"]*)\"?", text)}
     if not found:
         return None
     spec = found.get(row + 1)
@@ -142,7 +145,8 @@ def multispec(header: Header, n: int, row: int = 0) -> Axis | None:
         raise FitsError("the multispec dispersion holds something that is not a number") from None
     if len(numbers) < 6:
         raise FitsError("the multispec dispersion is cut off")
-    kind, first, step, pixels, z = int(numbers[2]), numbers[3], numbers[4], int(numbers[5]), numbers[6] if len(numbers) > 6 else 0.0
+    kind, first, step = int(numbers[2]), numbers[3], numbers[4]
+    z = numbers[6] if len(numbers) > 6 else 0.0
     unit = _wat_unit(header, 1)
     physical = _physical_pixels(header, n)
     if kind in (-1,):
@@ -154,17 +158,17 @@ def multispec(header: Header, n: int, row: int = 0) -> Axis | None:
         return Axis(values / (1.0 + z), unit)
     if kind != 2:
         raise FitsError(f"multispec dispersion type {kind} is not known")
-    values = _functions(numbers[9:], physical, n if pixels <= 0 else pixels)
+    values = _functions(numbers[9:], physical)
     return Axis(values / (1.0 + z), unit)
 
 
 def _physical_pixels(header: Header, n: int) -> FloatArray:
     """Physical pixel numbers of the n image pixels (LTV1 and LTM1_1 remember a section copied from a longer image)."""
     shift, scale = header.number("LTV1", 0.0), header.number("LTM1_1", 1.0)
-    return (np.arange(1, n + 1) - shift) / (scale or 1.0)
+    return (np.arange(1, n + 1, dtype=np.float64) - shift) / (scale or 1.0)
 
 
-def _functions(numbers: list[float], pixel: FloatArray, n_pixels: int) -> FloatArray:
+def _functions(numbers: list[float], pixel: FloatArray) -> FloatArray:
     total = np.zeros(pixel.size)
     at = 0
     while at < len(numbers):
@@ -221,4 +225,4 @@ def _spline(s: FloatArray, c: FloatArray, pieces: int, cubic: bool) -> FloatArra
     a = 1.0 - b
     if not cubic:
         return c[j] * a + c[j + 1] * b
-    return (c[j] * a**3 + c[j + 1] * (1 + 3 * a * (1 + a * b)) + c[j + 2] * (1 + 3 * b * (1 + a * b)) + c[j + 3] * b**3)
+    return c[j] * a**3 + c[j + 1] * (1 + 3 * a * (1 + a * b)) + c[j + 2] * (1 + 3 * b * (1 + a * b)) + c[j + 3] * b**3

@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import bz2
-import errno
 import io
 import lzma
 import os
@@ -51,7 +50,7 @@ def load_bytes(path: str | os.PathLike[str]) -> bytes:
     try:
         with open(name, "rb", buffering=0) as stream:
             data = stream.read(MAX_BYTES + 1) or b""
-            while len(data) < status.st_size:   # a raw read may stop short
+            while len(data) < status.st_size:  # a raw read may stop short
                 more = stream.read(status.st_size - len(data))
                 if not more:
                     break
@@ -59,8 +58,10 @@ def load_bytes(path: str | os.PathLike[str]) -> bytes:
     except PermissionError:
         raise SpectrumError(f"{said}: no permission to read it; change its mode or copy it.") from None
     except OSError as error:
-        raise SpectrumError(f"{said}: cannot be read ({_why(error)}); check the disk and copy the file again.") from None
-    for _ in range(2):   # a gzip inside a gzip happens; deeper nesting does not
+        raise SpectrumError(
+            f"{said}: cannot be read ({_why(error)}); check the disk and copy the file again."
+        ) from None
+    for _ in range(2):  # a gzip inside a gzip happens; deeper nesting does not
         unpacked = unpack(data, said)
         if unpacked is data:
             break
@@ -72,7 +73,7 @@ def load_bytes(path: str | os.PathLike[str]) -> bytes:
 
 
 def _why(error: Exception) -> str:
-    if isinstance(error, OSError) and error.errno in errno.errorcode:
+    if isinstance(error, OSError) and error.errno is not None:
         return os.strerror(error.errno).lower()
     return str(error).lower()
 

@@ -1,7 +1,7 @@
 """A thin FITS reader: headers by card, data by the few bytes wanted, sizes checked before anything is allocated.
 
-Follows the FITS standard 4.0 (Pence et al. 2010 A&A 524, A42). It reads what one-dimensional spectra come in and says so
-when it meets anything else, so that a slower general reader can be asked.
+Follows the FITS standard 4.0 (Pence et al. 2010 A&A 524, A42). It reads what one-dimensional spectra come in and says
+so when it meets anything else, so that a slower general reader can be asked.
 """
 
 from __future__ import annotations
@@ -20,7 +20,18 @@ MAX_HDUS = 400
 _END = re.compile(rb"END {77}")
 _NUMBER = re.compile(r"[-+]?(\d+\.?\d*|\.\d+)([EeDd][-+]?\d+)?")
 _IMAGE_TYPES = {8: "u1", 16: ">i2", 32: ">i4", 64: ">i8", -32: ">f4", -64: ">f8"}
-_TABLE_TYPES = {"L": "S1", "B": "u1", "I": ">i2", "J": ">i4", "K": ">i8", "E": ">f4", "D": ">f8", "A": "S", "C": ">c8", "M": ">c16"}
+_TABLE_TYPES = {
+    "L": "S1",
+    "B": "u1",
+    "I": ">i2",
+    "J": ">i4",
+    "K": ">i8",
+    "E": ">f4",
+    "D": ">f8",
+    "A": "S",
+    "C": ">c8",
+    "M": ">c16",
+}
 
 
 class FitsError(ValueError):
@@ -100,8 +111,11 @@ class Header:
 
     def remarks(self) -> str:
         """All COMMENT and HISTORY text, one line a card."""
-        lines = [self.text[at + 8 : at + CARD].strip() for at in range(0, len(self.text), CARD)
-                 if self.text[at : at + 8] in ("COMMENT ", "HISTORY ", "        ")]
+        lines = [
+            self.text[at + 8 : at + CARD].strip()
+            for at in range(0, len(self.text), CARD)
+            if self.text[at : at + 8] in ("COMMENT ", "HISTORY ", "        ")
+        ]
         return "\n".join(lines)
 
 
@@ -152,11 +166,17 @@ class Hdu:
 
     @property
     def kind(self) -> str:
-        """"image", "table", "ascii table" or the extension's own word."""
+        """ "image", "table", "ascii table" or the extension's own word."""
         if self.number == 0:
             return "image"
         word = self.header.word("XTENSION").upper()
-        return {"IMAGE": "image", "IUEIMAGE": "image", "BINTABLE": "table", "A3DTABLE": "table", "TABLE": "ascii table"}.get(word, word.lower())
+        return {
+            "IMAGE": "image",
+            "IUEIMAGE": "image",
+            "BINTABLE": "table",
+            "A3DTABLE": "table",
+            "TABLE": "ascii table",
+        }.get(word, word.lower())
 
     @property
     def shape(self) -> tuple[int, ...]:
@@ -189,7 +209,7 @@ def hdus(data: bytes) -> Iterator[Hdu]:
         if number == 0 and not start.startswith(b"SIMPLE  ="):
             raise FitsError("does not start like FITS")
         if number > 0 and start != b"XTENSION=":
-            return   # special records or padding after the last HDU
+            return  # special records or padding after the last HDU
         end = _find_end(data, at)
         if end < 0:
             raise FitsError(f"the header of HDU {number} has no END; the file is cut off or damaged")
@@ -297,8 +317,20 @@ def columns(hdu: Hdu) -> list[Column]:
         else:
             width = repeat * np.dtype(_TABLE_TYPES[code]).itemsize
         null = header.whole(f"TNULL{i}") if f"TNULL{i}" in header else None
-        out.append(Column(header.word(f"TTYPE{i}") or f"col{i}", header.word(f"TUNIT{i}"), code, repeat, at, width,
-                          header.number(f"TSCAL{i}", 1.0), header.number(f"TZERO{i}", 0.0), null, pointer))
+        out.append(
+            Column(
+                header.word(f"TTYPE{i}") or f"col{i}",
+                header.word(f"TUNIT{i}"),
+                code,
+                repeat,
+                at,
+                width,
+                header.number(f"TSCAL{i}", 1.0),
+                header.number(f"TZERO{i}", 0.0),
+                null,
+                pointer,
+            )
+        )
         at += width
     if at > hdu.header.whole("NAXIS1"):
         raise FitsError(f"the columns of {hdu} are wider than its rows")
@@ -318,8 +350,9 @@ def column_values(hdu: Hdu, column: Column) -> NDArray[np.float64]:
     if column.pointer:
         values = _from_heap(hdu, column, kind, row_bytes, rows)
     else:
-        values = np.ndarray((rows, column.repeat), kind, hdu.buffer, hdu.offset + column.offset,
-                            (row_bytes, kind.itemsize))
+        values = np.ndarray(
+            (rows, column.repeat), kind, hdu.buffer, hdu.offset + column.offset, (row_bytes, kind.itemsize)
+        )
     if column.code == "L":
         return np.where(values == b"T", 1.0, 0.0)
     out = values.astype(np.float64)

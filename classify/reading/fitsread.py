@@ -62,8 +62,10 @@ def read_fits(data: bytes, path: str, request: Request) -> RawSpectrum:
         raise beyond
     if broken:
         reasons.append((6, broken))
-    raise SpectrumError(f"{path}: {max(reasons, default=(0, 'the FITS file holds no data'))[1]}; "
-                        "check that this is an extracted, wavelength-calibrated spectrum.")
+    raise SpectrumError(
+        f"{path}: {max(reasons, default=(0, 'the FITS file holds no data'))[1]}; "
+        "check that this is an extracted, wavelength-calibrated spectrum."
+    )
 
 
 def _wanted(units: list[Hdu], request: Request, path: str) -> list[Hdu]:
@@ -111,7 +113,9 @@ def _from_image(hdu: Hdu, units: list[Hdu], request: Request) -> RawSpectrum | t
     sizes = [shape[i] for i in long]
     if len(long) > 2 or (len(long) == 2 and min(sizes) > MAX_COMPANIONS and request.row is None):
         text = " x ".join(str(s) for s in shape[:4]) + (" x ..." if len(shape) > 4 else "")
-        return 4, f"{hdu} is a {text} image, not a one-dimensional spectrum"
+        several = len(long) == 2 and ("COEFF0" in hdu.header or max(sizes) > 4 * min(sizes))
+        hint = " (a row of it can be picked by its number)" if several else ""
+        return 4, f"{hdu} is a {text} image, not a one-dimensional spectrum{hint}"
     if max(sizes) > 5_000_000:
         hdu.need()
         return 4, f"{hdu} has {max(sizes)} pixels along the spectrum, too many for one spectrum"
@@ -142,7 +146,7 @@ def _from_image(hdu: Hdu, units: list[Hdu], request: Request) -> RawSpectrum | t
     raw.where = str(hdu)
     raw.flux_unit = raw.flux_unit or hdu.header.word("BUNIT")
     if raw.error is None and request.hdu is None:
-        _companions(raw, hdu, units)
+        _companions(raw, hdu, units, request.row)
     return raw
 
 
@@ -176,19 +180,27 @@ def _wave_extension(raw: RawSpectrum, hdu: Hdu, units: list[Hdu]) -> None:
                         return
 
 
-def _companions(raw: RawSpectrum, hdu: Hdu, units: list[Hdu]) -> None:
-    """Uncertainties and mask in image extensions of their own."""
+def _companions(raw: RawSpectrum, hdu: Hdu, units: list[Hdu], row: int | None) -> None:
+    """Uncertainties and mask in image extensions of their own; of a stack of spectra, those of the row picked."""
+    n = raw.flux.size
     for other in units:
-        if other is hdu or other.kind != "image" or not other.name or not other.complete:
+        if other is hdu or other.kind != "image" or not other.complete or not other.shape:
             continue
-        role = role_of(other.name)[0]
-        if role not in ("std", "var", "ivar", "snr", "bad") or int(np.prod(other.shape or (0,), dtype=object)) != raw.flux.size:
+        size = int(np.prod(other.shape, dtype=object))
+        if size != n and (row is None or other.shape != hdu.shape):
+            continue
+        role = role_of(other.name)[0] if other.name else ""
+        if role not in ("std", "var", "ivar", "snr", "bad", ""):
             continue
         values = _flat(other)
+        if size != n and row is not None:
+            values = values.reshape(-1, n)[row]
         if role == "bad":
             raw.bad = values != 0
-        elif raw.error is None:
+        elif role and raw.error is None:
             raw.error, raw.error_kind = values, _error_kind(role)
+        elif not role and raw.error is None and other.number == hdu.number + 1:
+            _second(raw, values, f"unnamed {other}")
 
 
 def _error_kind(role: str) -> ErrorKind:
@@ -213,7 +225,11 @@ def _name_rows(rows: FloatArray, hdu: Hdu, found: dispersion.Axis | None) -> Raw
                 raw.error, raw.error_kind = row, _error_kind(role)
             elif role == "wave":
                 raw.wave = row
-        flux = [i for i, word in enumerate(said) if word.lower().startswith(("spectrum", "flux")) or role_of(word)[0] == "flux"]
+        flux = [
+            i
+            for i, word in enumerate(said)
+            if word.lower().startswith(("spectrum", "flux")) or role_of(word)[0] == "flux"
+        ]
         raw.flux = rows[flux[0] if flux else 0]
         return raw
     survey = hints.survey_of(header)
@@ -242,13 +258,14 @@ def _name_rows(rows: FloatArray, hdu: Hdu, found: dispersion.Axis | None) -> Raw
     return raw
 
 
-def _second(raw: RawSpectrum, row: FloatArray) -> None:
+def _second(raw: RawSpectrum, row: FloatArray, what: str = "a further row") -> None:
+    """Take values that nothing names as one standard deviation, if they can be."""
     finite = row[np.isfinite(row)]
     if finite.size and finite.min() >= 0 and np.nanmedian(row) < np.nanmedian(np.abs(raw.flux)):
         raw.error, raw.error_kind = row, "std"
-        raw.notes.append("a further row taken as one standard deviation")
+        raw.notes.append(f"{what} taken as one standard deviation")
     else:
-        raw.notes.append("further rows left out")
+        raw.notes.append(f"{what} left out")
 
 
 def _row_word(header: fitsio.Header, i: int) -> str:
@@ -266,7 +283,9 @@ def _is_wave(row: FloatArray) -> bool:
     if not (np.all(step > 0) or np.all(step < 0)):
         return False
     lo, hi = min(row[0], row[-1]), max(row[0], row[-1])
-    return bool((lo > 900 and hi < 60000) or (lo > 150 and hi < 2600) or (lo > 0.15 and hi < 2.6) or (lo > 3.2 and hi < 4.5))
+    return bool(
+        (lo > 900 and hi < 60000) or (lo > 150 and hi < 2600) or (lo > 0.15 and hi < 2.6) or (lo > 3.2 and hi < 4.5)
+    )
 
 
 # --- binary tables --------------------------------------------------------------------------------------------------
@@ -299,7 +318,9 @@ def _from_table(hdu: Hdu, units: list[Hdu], request: Request) -> RawSpectrum | t
             return 2, f"{hdu} is a table without a wavelength column (it has {names})"
         raw = RawSpectrum(axis.values, flux_values, axis.unit, "", axis.log)
     else:
-        raw = RawSpectrum(_cells(hdu, wave, request), flux_values, wave.unit or split_unit(wave.name)[1], "", log_of(wave.name))
+        raw = RawSpectrum(
+            _cells(hdu, wave, request), flux_values, wave.unit or split_unit(wave.name)[1], "", log_of(wave.name)
+        )
         if raw.wave_is_log and raw.wave_unit.lower().startswith("log"):
             raw.wave_unit = split_unit(raw.wave_unit)[1]
         elif raw.wave_unit.lower().startswith("log"):
@@ -315,6 +336,10 @@ def _from_table(hdu: Hdu, units: list[Hdu], request: Request) -> RawSpectrum | t
     elif "good" in picked:
         raw.bad = _cells(hdu, picked["good"], request) == 0
     raw.where = f"columns {wave.name if wave else 'of the header'} and {flux.name} of {hdu}"
+    if wave is not None:
+        found = hints.text_medium(f"wavelength {wave.name} {wave.unit}".replace("_", " "))
+        if found != "unknown":
+            raw.medium, raw.medium_source = found, f"column name {wave.name}"
     _wdisp(raw, hdu, all_columns)
     return raw
 
@@ -347,14 +372,16 @@ def _pick(columns: list[fitsio.Column], request: Request, hdu: Hdu) -> dict[str,
         if role not in best or rank > best[role][0]:
             best[role] = (rank, column)
     out = {role: column for role, (_rank, column) in best.items()}
-    for role, want in request.columns.items():
-        match = [c for i, c in enumerate(columns) if c.name == want or c.name.lower() == want.lower() or str(i + 1) == want]
+    for asked, want in request.columns.items():
+        match = [
+            c for i, c in enumerate(columns) if c.name == want or c.name.lower() == want.lower() or str(i + 1) == want
+        ]
         if not match:
             raise FitsError(f"{hdu} has no numeric column {want}")
-        if role in ("std", "var", "ivar", "snr"):
+        if asked in ("std", "var", "ivar", "snr"):
             for other in ("std", "var", "ivar", "snr"):
                 out.pop(other, None)
-        out[role] = match[0]
+        out[asked] = match[0]
     return out
 
 
@@ -373,8 +400,12 @@ def _pick_by_values(picked: dict[str, fitsio.Column], columns: list[fitsio.Colum
     if "wave" in picked and "flux" not in picked:
         wave = picked["wave"]
         for column in columns[columns.index(wave) + 1 :] + columns[: columns.index(wave)]:
-            if column not in picked.values() and column.repeat == wave.repeat and role_of(column.name)[0] == "other" \
-                    and not is_companion(column.name):
+            if (
+                column not in picked.values()
+                and column.repeat == wave.repeat
+                and role_of(column.name)[0] == "other"
+                and not is_companion(column.name)
+            ):
                 picked["flux"] = column
                 break
 

@@ -33,7 +33,9 @@ def plain_fits(data: bytes, path: str) -> bytes:
     for hdu in fitsio.hdus(data):
         sizes = [hdu.header.whole(f"ZNAXIS{i + 1}") for i in range(min(hdu.header.whole("ZNAXIS"), 9))]
         if sizes and int(np.prod(sizes, dtype=object)) > _MAX_UNPACKED:
-            raise SpectrumError(f"{path}: {hdu} unpacks to too many pixels for one spectrum; extract the spectrum first.")
+            raise SpectrumError(
+                f"{path}: {hdu} unpacks to too many pixels for one spectrum; extract the spectrum first."
+            )
     from astropy.io import fits
     from astropy.table import Table as AstropyTable
 
@@ -87,9 +89,13 @@ def read_votable(data: bytes, path: str, request: Request) -> RawSpectrum:
         keep = [i for i, v in enumerate(values) if v.ndim == 1 and len(v) == length]
         if len(keep) >= 2:
             remarks = "\n".join(str(v) for v in [table.meta.get("description", "")])
-            found = Table(np.column_stack([values[i] for i in keep]), [names[i] for i in keep], [units[i] for i in keep], remarks)
+            found = Table(
+                np.column_stack([values[i] for i in keep]), [names[i] for i in keep], [units[i] for i in keep], remarks
+            )
             return assign_columns(found, path, request)
-    raise SpectrumError(f"{path}: the VOTable holds no table with wavelength and flux columns; check what was exported.")
+    raise SpectrumError(
+        f"{path}: the VOTable holds no table with wavelength and flux columns; check what was exported."
+    )
 
 
 def read_with_specutils(name: str, path: str, loader: str) -> RawSpectrum:
@@ -120,8 +126,9 @@ def raw_from_specutils(spec: Spectrum, path: str) -> RawSpectrum:
             wave = np.asarray(axis.to_value(u.AA, u.spectral()), float)
         except u.UnitConversionError:
             raise SpectrumError(
-                f"{path or 'the spectrum'}: its spectral axis is in {axis.unit.to_string() or 'no unit'}, which gives no "
-                "wavelengths; calibrate it first.") from None
+                f"{path or 'the spectrum'}: its spectral axis is in {axis.unit.to_string() or 'no unit'}, "
+                "which gives no wavelengths; calibrate it first."
+            ) from None
     raw = RawSpectrum(wave, flux, "Angstrom", _flux_word(spec.flux.unit), where="specutils")
     if spec.uncertainty is not None and spec.uncertainty.array is not None:
         kinds: dict[str, ErrorKind] = {"std": "std", "var": "var", "ivar": "ivar"}
@@ -169,8 +176,12 @@ def _medium_of_wcs(spec: Spectrum) -> tuple[Medium, str]:
 def _flux_word(unit: Any) -> str:
     """A flux unit as a word :func:`units.flux_kind` knows, told by its physical type."""
     kinds = {
-        "spectral flux density wav": "erg/s/cm2/A", "surface brightness wav": "erg/s/cm2/A", "spectral flux density": "Jy",
-        "surface brightness": "Jy", "photon flux density wav": "photon/s/cm2/A", "photon flux density": "photon/s/cm2/Hz",
+        "spectral flux density wav": "erg/s/cm2/A",
+        "surface brightness wav": "erg/s/cm2/A",
+        "spectral flux density": "Jy",
+        "surface brightness": "Jy",
+        "photon flux density wav": "photon/s/cm2/A",
+        "photon flux density": "photon/s/cm2/Hz",
     }
     for physical in unit.physical_type if unit is not None else ():
         if physical in kinds:

@@ -12,11 +12,76 @@ from starfathom.classify.spectrum import Medium
 #: Speed of light in km/s (exact).
 C_KMS = 299792.458
 _OBJECT = ("OBJECT", "OBJNAME", "TARGNAME", "TARGET", "OBJ", "NAME", "STAR", "DESIG", "TITLE", "SPEC_NAME")
-_EXPTIME = ("EXPTIME", "EXPOSURE", "TEXPTIME", "ITIME", "EXP_TIME", "INTTIME", "TEXPOSED", "EXPOTIME", "TOTALEXP", "DARKTIME")
-_RA = ("RA_DEG", "RADEG", "RA_TARG", "RAJ2000", "RA", "RA_OBJ", "OBJCTRA", "TELRA", "PLUG_RA", "RAOBJ", "OBJRA", "CAT-RA", "ALPHA")
-_DEC = ("DEC_DEG", "DECDEG", "DEC_TARG", "DEJ2000", "DEC", "DEC_OBJ", "OBJCTDEC", "TELDEC", "PLUG_DEC", "DECOBJ", "OBJDEC", "CAT-DEC", "DELTA")
-_SNR = ("SNR", "S/N", "SN", "S_N", "SNR_MED", "SN_MEDIAN_ALL", "SN_MED", "SNRMED", "MEDSNR", "SNRG", "SN_G", "SNR_G", "SPECSNR")
-_RESOLVING = ("SPEC_RES", "RESOLVIN", "SPECRP", "RESPOW", "RESOLPOW", "R_POWER", "RESOL", "SPECRES", "RESOLUTI", "RESOLVE", "R")
+_EXPTIME = (
+    "EXPTIME",
+    "EXPOSURE",
+    "TEXPTIME",
+    "ITIME",
+    "EXP_TIME",
+    "INTTIME",
+    "TEXPOSED",
+    "EXPOTIME",
+    "TOTALEXP",
+    "DARKTIME",
+)
+_RA = (
+    "RA_DEG",
+    "RADEG",
+    "RA_TARG",
+    "RAJ2000",
+    "RA",
+    "RA_OBJ",
+    "OBJCTRA",
+    "TELRA",
+    "PLUG_RA",
+    "RAOBJ",
+    "OBJRA",
+    "CAT-RA",
+    "ALPHA",
+)
+_DEC = (
+    "DEC_DEG",
+    "DECDEG",
+    "DEC_TARG",
+    "DEJ2000",
+    "DEC",
+    "DEC_OBJ",
+    "OBJCTDEC",
+    "TELDEC",
+    "PLUG_DEC",
+    "DECOBJ",
+    "OBJDEC",
+    "CAT-DEC",
+    "DELTA",
+)
+_SNR = (
+    "SNR",
+    "S/N",
+    "SN",
+    "S_N",
+    "SNR_MED",
+    "SN_MEDIAN_ALL",
+    "SN_MED",
+    "SNRMED",
+    "MEDSNR",
+    "SNRG",
+    "SN_G",
+    "SNR_G",
+    "SPECSNR",
+)
+_RESOLVING = (
+    "SPEC_RES",
+    "RESOLVIN",
+    "SPECRP",
+    "RESPOW",
+    "RESOLPOW",
+    "R_POWER",
+    "RESOL",
+    "SPECRES",
+    "RESOLUTI",
+    "RESOLVE",
+    "R",
+)
 _VELOCITY = ("RADVEL", "VRAD", "RAD_VEL", "RV", "VEL_RAD", "RADIALV", "VELOCITY", "RVEL", "VHELIO", "HRV", "VOBS")
 
 
@@ -33,8 +98,28 @@ def medium_of(headers: Iterable[Header]) -> tuple[Medium, str]:
     for header in headers:
         for key in header.keys():
             plain = key.upper()
-            if plain in ("AIRORVAC", "AIR_VAC", "AIRVAC", "VACORAIR", "WAVEMED", "MEDIUM", "WAVEREF", "WAVETYPE", "WAVE_MED", "WAVEMEDI",
-                         "LAMBDTYP", "SPECSYSW", "WAVSYS", "WAVELENG", "WLTYPE", "WAVE_TYP", "WAVFRAME", "WAVESYS", "VACAIR", "WLMEDIUM"):
+            if plain in (
+                "AIRORVAC",
+                "AIR_VAC",
+                "AIRVAC",
+                "VACORAIR",
+                "WAVEMED",
+                "MEDIUM",
+                "WAVEREF",
+                "WAVETYPE",
+                "WAVE_MED",
+                "WAVEMEDI",
+                "LAMBDTYP",
+                "SPECSYSW",
+                "WAVSYS",
+                "WAVELENG",
+                "WLTYPE",
+                "WAVE_TYP",
+                "WAVFRAME",
+                "WAVESYS",
+                "VACAIR",
+                "WLMEDIUM",
+            ):
                 found = _word_medium(header.word(key))
                 if found != "unknown":
                     return found, f"header {key} = {header.word(key)}"
@@ -47,7 +132,18 @@ def medium_of(headers: Iterable[Header]) -> tuple[Medium, str]:
                 if value is not None:
                     return ("air" if value else "vacuum"), f"header {key} = {'T' if value else 'F'}"
     for header in headers:
-        for key in ("CTYPE1", "CUNIT1", "WAT1_001", "CRVAL1", "CDELT1", "CD1_1", "COEFF0", "CRPIX1", "CTYPE2", "CUNIT2"):
+        for key in (
+            "CTYPE1",
+            "CUNIT1",
+            "WAT1_001",
+            "CRVAL1",
+            "CDELT1",
+            "CD1_1",
+            "COEFF0",
+            "CRPIX1",
+            "CTYPE2",
+            "CUNIT2",
+        ):
             if key in header:
                 found = text_medium(header.comment(key) + " " + (header.word(key) if not key.startswith("CR") else ""))
                 if found != "unknown":
@@ -63,12 +159,20 @@ def medium_of(headers: Iterable[Header]) -> tuple[Medium, str]:
 
 
 def survey_of(header: Header) -> str:
-    """"SDSS" or "LAMOST" when the header is one of theirs, else ""."""
+    """ "SDSS" or "LAMOST" when the header is one of theirs, else ""."""
     telescope = header.word("TELESCOP").upper()
     if "LAMOST" in telescope or "LAMOST" in header.word("DATA_V").upper() or "LAMOST" in header.word("ORIGIN").upper():
         return "LAMOST"
-    if "SDSS" in telescope or "SDSS" in header.word("ORIGIN").upper() or ("PLATEID" in header and "FIBERID" in header) or (
-            "COEFF0" in header and "COEFF1" in header and ("SPEC1_G" in header or "RUN2D" in header or "PLATEID" in header)):
+    if (
+        "SDSS" in telescope
+        or "SDSS" in header.word("ORIGIN").upper()
+        or ("PLATEID" in header and "FIBERID" in header)
+        or (
+            "COEFF0" in header
+            and "COEFF1" in header
+            and ("SPEC1_G" in header or "RUN2D" in header or "PLATEID" in header)
+        )
+    ):
         return "SDSS"
     return ""
 
@@ -79,8 +183,20 @@ def _truth(value: Any) -> bool | None:
     if isinstance(value, (int, float)) and value in (0, 1):
         return bool(value)
     word = str(value).strip().lower()
-    return {"t": True, "true": True, "yes": True, "y": True, "1": True, "f": False, "false": False, "no": False, "n": False,
-            "0": False, "vacuum": True, "vac": True}.get(word)
+    return {
+        "t": True,
+        "true": True,
+        "yes": True,
+        "y": True,
+        "1": True,
+        "f": False,
+        "false": False,
+        "no": False,
+        "n": False,
+        "0": False,
+        "vacuum": True,
+        "vac": True,
+    }.get(word)
 
 
 def _word_medium(word: str) -> Medium:
@@ -109,10 +225,14 @@ def text_medium(text: str) -> Medium:
             continue
         vac, air = bool(_VACUUM.search(line)), bool(_AIR.search(line))
         if vac and air:
-            turned = re.search(r"(converted|corrected|transformed|shifted|changed)?\s*(from)?\s*\b(air|vac(?:uum)?)\b[\w ]{0,40}\b(?:to|into|->|2)\s+(?:the\s+)?(air|vac(?:uum)?)\b", line, re.I)
+            turned = re.search(
+                r"\b(?:air|vac(?:uum)?)\b[\w ]{0,40}\b(?:to|into|2)\s+(?:the\s+)?(air|vac(?:uum)?)\b",
+                line,
+                re.I,
+            )
             negated = re.search(r"\b(not|no|non)[ -]+(in )?(vac(?:uum)?|air)\b", line, re.I)
             if turned:
-                found.add("vacuum" if turned.group(4).lower().startswith("vac") else "air")
+                found.add("vacuum" if turned.group(1).lower().startswith("vac") else "air")
             elif negated:
                 found.add("air" if negated.group(3).lower().startswith("vac") else "vacuum")
         elif vac:
@@ -174,7 +294,7 @@ def _coordinates(header: Header) -> tuple[float | None, float | None]:
 
 
 def angle(text: str, hours: bool) -> float | None:
-    """Degrees from ``12:34:56.7``, ``12 34 56.7``, ``12h34m56.7s`` or plain degrees; sexagesimal hours when ``hours``."""
+    """Degrees from ``12:34:56.7``, ``12 34 56.7``, ``12h34m56.7s`` or plain degrees; hours when ``hours``."""
     text = text.strip()[:40]
     try:
         return float(text)
@@ -189,8 +309,22 @@ def angle(text: str, hours: bool) -> float | None:
 
 
 def _fwhm(header: Header) -> float | None:
-    for key in ("SPEC_FWHM", "FWHM_A", "FWHMANG", "FWHM_ANG", "LSF_FWHM", "LSFFWHM", "SPECFWHM", "FWHM", "RESOLUTN", "INSTFWHM", "RES_A",
-                "RESOLUTI", "RESOL", "SPECRES"):
+    for key in (
+        "SPEC_FWHM",
+        "FWHM_A",
+        "FWHMANG",
+        "FWHM_ANG",
+        "LSF_FWHM",
+        "LSFFWHM",
+        "SPECFWHM",
+        "FWHM",
+        "RESOLUTN",
+        "INSTFWHM",
+        "RES_A",
+        "RESOLUTI",
+        "RESOL",
+        "SPECRES",
+    ):
         if key in header:
             value = header.number(key)
             said = header.comment(key).lower()

@@ -3,45 +3,71 @@
 from __future__ import annotations
 
 import re
+import unicodedata
 from functools import lru_cache
 from typing import Literal
 
 Role = Literal["wave", "flux", "std", "var", "ivar", "snr", "bad", "good", "index", "other"]
 
-_WAVE = {
-    "wavelength", "wavelengths", "wave", "waves", "wavel", "waveln", "wavelen", "lambda", "lambdas", "lam", "lamb", "lbda",
-    "wl", "wvl", "wlen", "wln", "wav", "wlength", "wvlength", "w", "l", "x", "spectralaxis", "ang", "angs", "angstrom",
-    "angstroms", "nm", "nanometer", "nanometers", "nanometre", "micron", "microns", "um", "freq", "frequency",
-    "frequencies", "wavenumber", "longueur", "wellenlaenge", "wellenlange", "longitud", "onda", "awav", "λ", "wa",
+
+def _set(words: str) -> frozenset[str]:
+    return frozenset(words.split())
+
+
+_WAVE = _set("""
+    wavelength wavelengths wave waves wavel waveln wavelen lambda lambdas lam lamb lbda wl wvl wlen wln wav wlength
+    wvlength w l x wa spectralaxis ang angs angstrom angstroms nm nanometer nanometers nanometre micron microns um freq
+    frequency frequencies wavenumber energy longueur lunghezza wellenlaenge wellenlange longitud onda awav λ
+""")
+#: Those of the above that are wavelengths beyond doubt, and names of steps of it.
+_WAVE_STEMS = _set("wavelength wavelengths wave lambda lam wl")
+_WAVE_STEPS = _set("dlambda dwave dlam dwavelength dwl deltalambda")
+_LOG_WAVE = {
+    **dict.fromkeys(_set("loglam loglambda logwave logwl logwavelength loglambdas logw"), "log10"),
+    **dict.fromkeys(_set("lnlam lnlambda lnwave lnwavelength"), "ln"),
 }
-_LOG_WAVE = {"loglam": "log10", "loglambda": "log10", "logwave": "log10", "logwl": "log10", "logwavelength": "log10",
-             "loglambdas": "log10", "lnlam": "ln", "lnlambda": "ln", "lnwave": "ln", "lnwavelength": "ln"}
-_FLUX = {
-    "flux": 10, "fluxes": 10, "flam": 10, "flambda": 10, "fl": 8, "fλ": 10, "fnu": 9, "fv": 7, "f": 8, "spec": 8, "spectrum": 8,
-    "fluxdensity": 10, "fluxcal": 10, "calflux": 10, "fluxreduced": 10, "relflux": 9, "relativeflux": 9, "flx": 10,
-    "intensity": 8, "intens": 8, "int": 7, "counts": 7, "count": 7, "cts": 7, "adu": 7, "electrons": 7, "photons": 7,
-    "dn": 7, "signal": 7, "sci": 7, "science": 7, "data": 6, "normflux": 9, "fluxnorm": 9, "normalizedflux": 9, "value": 4, "values": 4,
-    "normalisedflux": 9, "normalized": 6, "normalised": 6, "norm": 5, "fnorm": 9, "nflux": 9, "mag": 5, "magnitude": 5, "abmag": 6, "magab": 6, "stmag": 6,
-    "net": 4, "object": 3, "obj": 3, "star": 3, "y": 3, "i": 3, "s": 2, "primary": 3, "brightness": 4, "energy": 2,
+#: Names of flux columns; of two in one file the one that says so more clearly is taken.
+_FLUX_RANKS = {
+    10: "flux fluxes fluss flujo flusso flam flambda fλ fluxdensity fluxcal calflux fluxreduced fluxcalibrated",
+    9: "fnu flx relflux relativeflux normflux fluxnorm normalizedflux normalisedflux fnorm nflux",
+    8: "fl f spec spectrum intensity intens intensite intensitat intensidad intensita",
+    7: "fv int counts count cts adu electrons photons dn signal sci science",
+    6: "data normalized normalised abmag magab stmag",
+    5: "norm mag magnitude",
+    4: "value values net brightness",
+    3: "object obj star y i primary",
+    2: "s",
 }
-_STD_WORDS = {"err", "er", "error", "errors", "sigma", "sig", "std", "stdev", "stddev", "unc", "uncert", "uncertainty",
-              "uncertainties", "noise", "rms", "errs", "sd", "stat", "staterr", "staterror", "dflux", "df", "eflux", "ef", "fluxerr", "fluxerror",
-              "fluxsig", "fluxsigma", "sigflux", "sigmaflux", "errflux", "errorflux", "fluxunc", "uncflux", "ferr", "fsig",
-              "flamerr", "fluxe", "fluxuncertainty", "delta", "deltaflux", "dy", "yerr", "dev", "e", "fluxstd", "stdflux", "fluxrms", "abserr"}
-_VAR_WORDS = {"var", "variance", "variances", "fluxvar", "varflux", "fluxvariance", "sigma2", "err2"}
-_IVAR_WORDS = {"ivar", "invvar", "inversevariance", "invvariance", "fluxivar", "ivarflux", "weight", "weights", "iv"}
-_SNR_WORDS = {"snr", "sn", "s2n", "ston", "signaltonoise", "snratio", "ston", "snrpix"}
-_BAD_WORDS = {"mask", "andmask", "ormask", "dq", "flag", "flags", "bad", "badpix", "quality", "qual", "dataqual",
-              "dataquality", "badpixel", "qualityflag", "pixmask", "maskand", "bpm", "quals", "dqf"}
-_GOOD_WORDS = {"good", "valid", "goodpix", "goodpixel", "use", "ok"}
-_INDEX_WORDS = {"pixel", "pix", "index", "idx", "no", "row", "number", "num", "id", "channel", "n", "bin", "px"}
-_OTHER_WORDS = {"sky", "bkg", "background", "model", "continuum", "cont", "wdisp", "fwhm", "res", "resolution", "telluric",
-                "response", "sens", "sensitivity", "throughput", "gross", "exptime", "exposure", "raw", "contsub", "disp",
-                "fit", "bestfit", "template", "residual", "airmass", "width", "binwidth", "step", "tot", "totexp", "syserror", "sys", "syserr"}
+_FLUX = {word: rank for rank, words in _FLUX_RANKS.items() for word in words.split()}
+_STD_WORDS = _set("""
+    err er error errors errs sigma sig std stdev stddev unc uncert uncertainty uncertainties noise rms sd stat staterr
+    staterror dflux df eflux ef fluxerr fluxerror fluxsig fluxsigma sigflux sigmaflux errflux errorflux fluxunc uncflux
+    ferr fsig flamerr fluxe fluxuncertainty delta deltaflux dy yerr dev e fluxstd stdflux fluxrms abserr
+""")
+_VAR_WORDS = _set("var variance variances fluxvar varflux fluxvariance sigma2 err2")
+_IVAR_WORDS = _set("ivar invvar inversevariance invvariance fluxivar ivarflux weight weights iv")
+_SNR_WORDS = _set("snr sn s2n ston signaltonoise snratio snrpix")
+_BAD_WORDS = _set("""
+    mask andmask ormask dq flag flags bad badpix quality qual dataqual dataquality badpixel qualityflag pixmask maskand
+    bpm quals dqf
+""")
+_GOOD_WORDS = _set("good valid goodpix goodpixel use ok")
+_INDEX_WORDS = _set("pixel pix index idx no row number num id channel n bin px")
+_OTHER_WORDS = _set("""
+    sky bkg background model continuum cont wdisp fwhm res resolution telluric response sens sensitivity throughput
+    gross exptime exposure raw contsub disp fit bestfit template residual airmass width binwidth step tot totexp
+    syserror sys syserr
+""")
+#: Words that keep a name with "wave" in it from being the wavelength: "wave_err", "flux_per_wave".
+_NOT_WAVE = (_STD_WORDS | set(_FLUX)) - _set("data int i s y object spec")
 
 
 def _words(name: str) -> list[str]:
     name = re.sub(r"(?<=[a-z])(?=[A-Z])", "_", name[:80])
+    if not name.isascii():  # accents off: Wellenlänge, intensité
+        name = "".join(
+            c for c in unicodedata.normalize("NFKD", name.replace("ß", "ss")) if not unicodedata.combining(c)
+        )
     return [w for w in re.split(r"[^0-9a-zλσΔ²]+", name.lower()) if w]
 
 
@@ -69,8 +95,10 @@ def role_of(name: str) -> tuple[Role, int]:
         return "bad", 9 if words[0] in ("and", "andmask", "mask", "dq") else 7
     if kinds & _VAR_WORDS:
         return "var", 9
+    if set(words) & _WAVE_STEPS or (set(words) & _WAVE_STEMS and kinds & _STD_WORDS and not set(words) & set(_FLUX)):
+        return "other", 0  # bin widths, uncertainties of the wavelength
     wave = glued in _WAVE or glued in _LOG_WAVE or bool(set(words) & (_WAVE - {"w", "l", "x"}))
-    if wave and not (set(words) & (_STD_WORDS | set(_FLUX) - {"data", "int", "i", "s", "y", "object", "spec"})):
+    if wave and not set(words) & _NOT_WAVE:
         return "wave", 3 if len(glued) == 1 else 10 if glued in _WAVE or glued in _LOG_WAVE else 6
     if wave and words[0] in ("log", "ln") and len(words) == 2 and words[1] in _WAVE:
         return "wave", 8
@@ -98,7 +126,7 @@ def is_companion(name: str) -> bool:
 
 
 def log_of(name: str) -> str:
-    """"log10" or "ln" when a wavelength column's name says it holds logarithms, else ""."""
+    """ "log10" or "ln" when a wavelength column's name says it holds logarithms, else ""."""
     words = _words(split_unit(name)[0])
     glued = "".join(words)
     if glued in _LOG_WAVE:
@@ -110,6 +138,11 @@ def log_of(name: str) -> str:
 
 def split_unit(name: str) -> tuple[str, str]:
     """A column heading taken apart: ``Wavelength (nm)`` gives ``("Wavelength", "nm")``."""
+    logged = re.fullmatch(
+        r"\s*(log(?:10)?|lg|ln)\s*[(\[]\s*(\w+)\s*(?:[/(\[]\s*([\w^-]+)[)\]\s]*)?[)\]]?\s*", name[:80], re.I
+    )
+    if logged:
+        return f"{'ln' if logged.group(1).lower() == 'ln' else 'log'} {logged.group(2)}", logged.group(3) or ""
     match = re.fullmatch(r"\s*([^\[\](){}]*?)[\s_]*[\[({](.*)[\])}]\s*", name[:200])
     if match and match.group(1):
         return match.group(1), match.group(2).strip()

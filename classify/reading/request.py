@@ -11,8 +11,14 @@ from starfathom.classify.errors import RequestError
 KINDS = ("text", "fits", "votable", "specutils")
 
 _ROLES = {
-    "wave": "wave", "wavelength": "wave", "lambda": "wave", "flux": "flux", "std": "std", "sigma": "std", "err": "std", "error": "std",
-    "uncertainty": "std", "var": "var", "variance": "var", "ivar": "ivar", "snr": "snr", "mask": "bad", "bad": "bad", "good": "good",
+    **dict.fromkeys(("wave", "wavelength", "lambda"), "wave"),
+    "flux": "flux",
+    **dict.fromkeys(("std", "sigma", "err", "error", "uncertainty"), "std"),
+    **dict.fromkeys(("var", "variance"), "var"),
+    "ivar": "ivar",
+    "snr": "snr",
+    **dict.fromkeys(("mask", "bad"), "bad"),
+    "good": "good",
 }
 _SETTINGS = ("hdu", "row", "unit", "flux_unit")
 
@@ -69,4 +75,6 @@ def request_of(read_as: str | None, columns: Mapping[str, str | int] | str | Non
         if not settings["row"].isdecimal() or int(settings["row"]) < 1:
             raise RequestError(f"row {settings['row']!r} is not a whole number from 1 up.")
         row = int(settings["row"]) - 1
-    return Request(kind, loader, chosen, settings.get("hdu"), row, settings.get("unit", ""), settings.get("flux_unit", ""))
+    return Request(
+        kind, loader, chosen, settings.get("hdu"), row, settings.get("unit", ""), settings.get("flux_unit", "")
+    )

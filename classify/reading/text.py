@@ -19,7 +19,7 @@ from starfathom.classify.reading.request import Request
 from starfathom.classify.reading.units import flux_kind, spectral_unit
 from starfathom.classify.spectrum import FloatArray
 
-#: Largest text that is parsed as one spectrum, in bytes; most lines of a text that is not plain even columns; longest line.
+#: Largest text that is parsed as one spectrum, in bytes; most lines of one that is not plain columns; longest line.
 MAX_TEXT = 32 << 20
 MAX_LINES = 400_000
 MAX_LINE = 1 << 20
@@ -27,8 +27,29 @@ _LONG_HEADING = 500
 # digits are counted in all patterns here: without that, a long run of digits takes quadratic time
 _NUMBER = rb"[-+]?(?:\d{1,40}\.?\d{0,40}|\.\d{1,40})(?:[eEdD][-+]?\d{1,4})?"
 _FIRST_ROW = re.compile(rb"^[ \t]*" + _NUMBER + rb"(?:[ \t]+|[ \t]*[,;][ \t]*)" + _NUMBER + rb"(?=[\s,;]|$)", re.M)
-_MISSING = {"", "nan", "null", "none", "indef", "--", "-", "---", "n/a", "na", "masked", "...", "nodata", "?", "*", "****", "inf", "-inf", "+inf", ".", "undef", "infinity", "missing", "bad"}
+_MISSING = {
+    "",
+    *"""
+    nan null none indef -- - --- n/a na masked ... nodata ? * inf -inf +inf . undef infinity missing bad
+""".split(),
+}
 _FORTRAN = re.compile(r"([-+]?(?:\d+\.?\d*|\.\d+))(?:[dDqQ]([-+]?\d+)|([-+]\d{2,3}))")
+#: Separators ("" is any blank space) and decimal signs, in the order of preference.
+_SEPARATORS = (
+    ("\t", "."),
+    ("\t", ","),
+    (";", "."),
+    (";", ","),
+    ("|", "."),
+    ("|", ","),
+    (",", "."),
+    ("", "."),
+    ("", ","),
+    (":", "."),
+    ("&", "."),
+)
+_NO_ROWS = "no rows of numbers found; a text spectrum needs at least wavelength and flux in columns"
+_ONE_COLUMN = "holds one column of numbers only, so no wavelengths; give wavelength and flux in columns"
 _COMMENT = "#%!;*\"'\\/>"
 
 
@@ -52,7 +73,9 @@ def read_text(data: bytes, path: str, request: Request) -> RawSpectrum:
         when the content is not text, holds no table of numbers, or its columns cannot be told apart.
     """
     if len(data) > MAX_TEXT:
-        raise SpectrumError(f"{path}: {len(data) >> 20} MB of text is too much for one spectrum; extract the spectrum first.")
+        raise SpectrumError(
+            f"{path}: {len(data) >> 20} MB of text is too much for one spectrum; extract the spectrum first."
+        )
     table = _quick(data)
     if table is None:
         table = _slow(decode(data, path), path)
@@ -66,19 +89,31 @@ def read_array(data: bytes, path: str, request: Request) -> RawSpectrum:
     except Exception:
         raise SpectrumError(f"{path}: the numpy array is damaged or holds objects; save plain numbers.") from None
     if array.dtype.names:
-        names = [n for n in array.dtype.names if array.dtype[n].kind in "iufb" and array.ndim == 1 and not array.dtype[n].shape]
-        table = Table(np.column_stack([array[n].astype(np.float64) for n in names]) if names else np.empty((0, 0)), names, [""] * len(names))
+        names = [
+            n
+            for n in array.dtype.names
+            if array.dtype[n].kind in "iufb" and array.ndim == 1 and not array.dtype[n].shape
+        ]
+        table = Table(
+            np.column_stack([array[n].astype(np.float64) for n in names]) if names else np.empty((0, 0)),
+            names,
+            [""] * len(names),
+        )
     elif array.ndim == 2 and array.dtype.kind in "iuf":
         table = Table((array.T if array.shape[0] < array.shape[1] else array).astype(np.float64))
     else:
         table = Table(np.empty((0, 0)))
     if not 2 <= table.values.shape[1] <= 50:
-        raise SpectrumError(f"{path}: a numpy array of shape {array.shape} is not a table of wavelength and flux; save two columns.")
+        raise SpectrumError(
+            f"{path}: a numpy array of shape {array.shape} is not a table of wavelength and flux; save two columns."
+        )
     return assign_columns(table, path, request)
 
 
 def decode(data: bytes, path: str) -> str:
     """Bytes to text: UTF-8, UTF-16 with a mark, else Latin-1."""
+    if len(data) > 40 and not any(data[1:40:2]) and all(data[0:40:2]):
+        data = b"\xff\xfe" + data  # UTF-16 without its mark
     if data.startswith((b"\xff\xfe", b"\xfe\xff")):
         try:
             return data.decode("utf-16")
@@ -109,6 +144,12 @@ def _quick(data: bytes) -> Table | None:
     if len(first) > MAX_LINE:
         return None
     strange = body.translate(None, b"0123456789+-.eE \t\r\n")
+    notes: list[str] = []
+    if strange and b"." not in body and _decimal_commas(first, strange):
+        body = body.replace(b",", b".").replace(b";", b" ")
+        first = first.replace(b";", b" ")
+        strange = b""
+        notes.append("decimal commas read")
     if strange:
         separator = strange[:1]
         if separator not in b",;" or strange.strip(separator):
@@ -128,19 +169,34 @@ def _quick(data: bytes) -> Table | None:
     except ValueError:
         return None
     rows = body.count(b"\n") + (not body.endswith(b"\n"))
-    if rows * columns != values.size or columns < 2:
+    if rows * columns != values.size or columns < 2 or rows < 5:
         return None
     values = values.reshape(rows, columns)
     step = np.diff(values[:, 0])
     if not (np.all(step > 0) or np.all(step < 0)):
-        return None   # ragged rows would show here; the careful reader sorts it out
+        return None  # ragged rows would show here; the careful reader sorts it out
     try:
         text = head.decode("utf-8-sig")
     except UnicodeDecodeError:
         text = head.decode("latin-1")
-    table = Table(values, remarks=text)
+    table = Table(values, remarks=text, notes=notes)
     _headings(table, text.splitlines(), columns)
     return table
+
+
+def _decimal_commas(first: bytes, strange: bytes) -> bool:
+    """Whether the commas in a body without full stops are decimal ones: each cell of the first row has one at most,
+    between digits, and something else parts the cells."""
+    if strange.strip(b",;"):
+        return False
+    cells = first.split(b";") if b";" in first else first.split()
+    if b";" in strange and strange.count(b";") % max(first.count(b";"), 1):
+        return False
+    return (
+        len(cells) > 1
+        and b"," in strange
+        and all(re.fullmatch(rb"\s*[-+]?\d+(,\d+)?([eE][-+]?\d+)?\s*", c) for c in cells)
+    )
 
 
 def cell(text: str) -> float:
@@ -169,25 +225,29 @@ def _is_number(text: str) -> bool:
 
 def _slow(text: str, path: str) -> Table:
     if max(text.count("\n"), text.count("\r")) > MAX_LINES:
-        raise SpectrumError(f"{path}: more than {MAX_LINES} lines of text are too many for one spectrum; extract it first.")
+        raise SpectrumError(
+            f"{path}: more than {MAX_LINES} lines of text are too many for one spectrum; extract it first."
+        )
     lines = text.replace("\r\n", "\n").replace("\r", "\n").replace("\x1a", "").split("\n")
     if lines and "%ECSV" in lines[0]:
         return _ecsv(lines, path)
     if max(map(len, lines)) > MAX_LINE:
-        raise SpectrumError(f"{path}: a line of more than {MAX_LINE >> 20} MB is no part of a spectrum; check what the file is.")
+        raise SpectrumError(
+            f"{path}: a line of more than {MAX_LINE >> 20} MB is no part of a spectrum; check what the file is."
+        )
     sample = [line for line in lines[:20000] if _may_be_data(line)][:400]
     if not sample:
-        raise SpectrumError(f"{path}: no rows of numbers found; a text spectrum needs at least wavelength and flux in columns.")
+        raise SpectrumError(f"{path}: {_NO_ROWS}.")
     best: tuple[int, str, str] | None = None
-    for separator, decimal in (("\t", "."), ("\t", ","), (";", "."), (";", ","), ("|", "."), ("|", ","), (",", "."), ("", "."), ("", ","), (":", ".")):
+    for separator, decimal in _SEPARATORS:
         score = _score(sample, separator, decimal)
         if score and (best is None or score > best[0]):
             best = (score, separator, decimal)
     if best is None:
         one = sum(_is_number(line.strip().rstrip(",;")) for line in sample)
         if one > len(sample) // 2:
-            raise SpectrumError(f"{path}: holds one column of numbers only, so no wavelengths; give wavelength and flux in columns.")
-        raise SpectrumError(f"{path}: no rows of numbers found; a text spectrum needs at least wavelength and flux in columns.")
+            raise SpectrumError(f"{path}: {_ONE_COLUMN}.")
+        raise SpectrumError(f"{path}: {_NO_ROWS}.")
     _, separator, decimal = best
     rows: list[list[float]] = []
     remarks: list[str] = []
@@ -205,15 +265,20 @@ def _slow(text: str, path: str) -> Table:
             continue
         rows.append(cells)
     if not rows:
-        raise SpectrumError(f"{path}: no rows of numbers found; a text spectrum needs at least wavelength and flux in columns.")
+        raise SpectrumError(f"{path}: {_NO_ROWS}.")
+    if 2 <= len(rows) <= 4 and len(rows[0]) >= 100 and len({len(r) for r in rows}) == 1:
+        rows = [list(r) for r in zip(*rows)]
+        table_notes = ["columns written as rows"]
+    else:
+        table_notes = []
     width = Counter(len(r) for r in rows).most_common(1)[0][0]
     if width < 2:
-        raise SpectrumError(f"{path}: holds one column of numbers only, so no wavelengths; give wavelength and flux in columns.")
+        raise SpectrumError(f"{path}: {_ONE_COLUMN}.")
     kept = [r[:width] for r in rows if len(r) >= width]
     values = np.array(kept, dtype=np.float64)
     while values.shape[1] > 2 and np.isnan(values[:, -1]).all():
-        values = values[:, :-1]   # a separator at the end of each row
-    table = Table(values, remarks="\n".join(remarks[:2000]))
+        values = values[:, :-1]  # a separator at the end of each row
+    table = Table(values, remarks="\n".join(remarks[:2000]), notes=table_notes)
     if len(kept) < len(rows):
         table.notes.append(f"{len(rows) - len(kept)} short rows left out")
     if odd:
@@ -227,7 +292,7 @@ def _slow(text: str, path: str) -> Table:
 
 def _may_be_data(line: str) -> bool:
     bare = line.lstrip(" \t|\"'")[:1]
-    return bare.isdigit() or bare in "+-." and bool(bare)
+    return bare.isdigit() or (bare in "+-." and bool(bare))
 
 
 def _split(line: str, separator: str) -> list[str]:
@@ -237,6 +302,8 @@ def _split(line: str, separator: str) -> list[str]:
             line = line[: line.index(mark, 1)].rstrip()
     if separator == "|":
         line = line.strip("|")
+    elif separator == "&":
+        line = line.rstrip("\\ ")
     if separator == "":
         return line.split()
     return [c.strip() for c in line.split(separator)]
@@ -305,7 +372,10 @@ def _comma_pairs(table: Table, separator: str) -> Table:
         return table
     if np.all(np.diff(values[:, 0]) > 0) or np.any(values[:, 1::2] < 0):
         return table
-    digits = [10.0 ** np.maximum(np.ceil(np.log10(np.maximum(values[:, i], 1) + 1)), 1).max() for i in range(1, values.shape[1], 2)]
+    digits = [
+        10.0 ** np.maximum(np.ceil(np.log10(np.maximum(values[:, i], 1) + 1)), 1).max()
+        for i in range(1, values.shape[1], 2)
+    ]
     merged = values[:, ::2] + values[:, 1::2] / np.array(digits)
     if np.all(np.diff(merged[:, 0]) > 0):
         return Table(merged, remarks=table.remarks, notes=[*table.notes, "decimal commas read between commas"])
@@ -330,8 +400,12 @@ def _headings(table: Table, lines: list[str], columns: int, separator: str = "")
     nearest = [line for line in lines if _bare(line)][-12:]
     for back, line in enumerate(reversed(nearest)):
         for names in _name_splits(_bare(line), separator):
-            if len(names) == columns and any(role_of(n)[0] in ("wave", "flux") for n in names) and not any(
-                    _is_number(n) for n in names) and _tells(names):
+            if (
+                len(names) == columns
+                and any(role_of(n)[0] in ("wave", "flux") for n in names)
+                and not any(_is_number(n) for n in names)
+                and _tells(names)
+            ):
                 table.names = [split_unit(n)[0] for n in names]
                 table.units = [split_unit(n)[1] for n in names]
                 if not any(table.units) and back:
@@ -366,7 +440,9 @@ def _listed(lines: list[str], columns: int) -> list[str] | None:
     """Names given one a line, as in ``# column 1: wavelength [nm]``."""
     found: dict[int, str] = {}
     for line in lines:
-        match = re.match(r"\s*(?:col(?:umn)?s?\.?)?\s*#?\s*(\d{1,2})\s*(?:[:=.)-]|\s)\s*([A-Za-zλ].*)", _bare(line), re.I)
+        match = re.match(
+            r"\s*(?:col(?:umn)?s?\.?)?\s*#?\s*(\d{1,2})\s*(?:[:=.)-]|\s)\s*([A-Za-zλ].*)", _bare(line), re.I
+        )
         if match and 1 <= int(match.group(1)) <= columns:
             found.setdefault(int(match.group(1)), match.group(2).strip())
     if len(found) < 2 or 1 not in found:
@@ -417,12 +493,16 @@ def _ecsv(lines: list[str], path: str) -> Table:
             continue
         parts = re.findall(r'"[^"]*"|[^\s"]+', line) if separator == " " else line.split(separator)
         if len(parts) != len(names):
-            raise SpectrumError(f"{path}: an ECSV row has {len(parts)} cells for {len(names)} columns; the file is cut off or damaged.")
+            raise SpectrumError(
+                f"{path}: an ECSV row has {len(parts)} cells for {len(names)} columns; the file is cut off or damaged."
+            )
         row = []
         for part in parts:
             word = part.strip().strip('"')
             try:
-                row.append({"true": 1.0, "false": 0.0}[word.lower()] if word.lower() in ("true", "false") else cell(word))
+                row.append(
+                    {"true": 1.0, "false": 0.0}[word.lower()] if word.lower() in ("true", "false") else cell(word)
+                )
             except ValueError:
                 row.append(float("nan"))
         rows.append(row)
@@ -446,7 +526,7 @@ def assign_columns(table: Table, path: str, request: Request) -> RawSpectrum:
                 continue
             if rank > best.get(role, -1):
                 best[role], picked[role] = rank, i
-    for role, want in request.columns.items():
+    for asked, want in request.columns.items():
         lowered = [n.lower() for n in names]
         if want.lower() in lowered:
             index = lowered.index(want.lower())
@@ -455,17 +535,24 @@ def assign_columns(table: Table, path: str, request: Request) -> RawSpectrum:
         else:
             held = f"columns {', '.join(names)}" if names else f"{n_columns} columns without names"
             raise SpectrumError(f"{path}: has no column {want}; it has {held}.")
-        if role in ("std", "var", "ivar", "snr"):
+        if asked in ("std", "var", "ivar", "snr"):
             for other in ("std", "var", "ivar", "snr"):
                 picked.pop(other, None)
-        picked[role] = index
+        picked[asked] = index
+    if "wave" in picked and "wave" not in request.columns and not is_steady(values[:, picked["wave"]]):
+        better = _find_wave(values, set())
+        if better != picked["wave"] and is_steady(values[:, better]) and in_reach(values[:, better]):
+            names, units = [], []  # a sentence was taken for headings
+            picked = {r: i for r, i in picked.items() if r in request.columns}
     named = bool(picked)
     notes = list(table.notes)
     if "wave" not in picked:
         picked["wave"] = _find_wave(values, set(picked.values()))
     if "flux" not in picked:
         taken = set(picked.values()) | {i for i, n in enumerate(names) if n and role_of(n)[0] == "index"}
-        free = [i for i in range(n_columns) if i not in taken and i > picked["wave"]] or [i for i in range(n_columns) if i not in taken]
+        free = [i for i in range(n_columns) if i not in taken and i > picked["wave"]] or [
+            i for i in range(n_columns) if i not in taken
+        ]
         if not free:
             raise SpectrumError(f"{path}: no flux column found; name the columns.")
         picked["flux"] = free[0]
@@ -473,7 +560,7 @@ def assign_columns(table: Table, path: str, request: Request) -> RawSpectrum:
     error: FloatArray | None = None
     error_kind: ErrorKind = "std"
     if kinds:
-        error, error_kind = values[:, picked[kinds[0]]], kinds[0]  # type: ignore[assignment]
+        error, error_kind = values[:, picked[kinds[0]]], kinds[0]
     elif not named or not names:
         free = [i for i in range(n_columns) if i not in picked.values() and i > picked["flux"]]
         if free:
@@ -494,8 +581,17 @@ def assign_columns(table: Table, path: str, request: Request) -> RawSpectrum:
         flux_unit = next((x for x in (f"{flux_name} [{flux_unit}]", flux_name) if flux_kind(x) != "unknown"), flux_unit)
     if flux_kind(flux_unit) == "unknown":
         flux_unit = _flux_in_words(table.remarks) or flux_unit
-    raw = RawSpectrum(values[:, picked["wave"]], values[:, picked["flux"]], wave_unit, flux_unit, log, error, error_kind,
-                      where=f"columns {picked['wave'] + 1} and {picked['flux'] + 1}", notes=notes)
+    raw = RawSpectrum(
+        values[:, picked["wave"]],
+        values[:, picked["flux"]],
+        wave_unit,
+        flux_unit,
+        log,
+        error,
+        error_kind,
+        where=f"columns {picked['wave'] + 1} and {picked['flux'] + 1}",
+        notes=notes,
+    )
     if "bad" in picked:
         raw.bad = values[:, picked["bad"]] != 0
     elif "good" in picked:
@@ -552,8 +648,12 @@ def _third(flux: FloatArray, other: FloatArray, number: int, notes: list[str]) -
     seen = 1.4826 * float(np.median(np.abs(f[2:-2] - (f[:-4] + f[4:]) / 2))) / np.sqrt(1.5)
     middle = float(np.median(np.abs(f)))
     with np.errstate(all="ignore"):
-        guesses: dict[ErrorKind, float] = {"std": float(np.median(o)), "ivar": float(np.median(1 / np.sqrt(o))),
-                                           "snr": float(np.median(np.abs(f) / o)), "var": float(np.median(np.sqrt(o)))}
+        guesses: dict[ErrorKind, float] = {
+            "std": float(np.median(o)),
+            "ivar": float(np.median(1 / np.sqrt(o))),
+            "snr": float(np.median(np.abs(f) / o)),
+            "var": float(np.median(np.sqrt(o))),
+        }
     noise = max(seen, 1e-4 * middle)
     if guesses["std"] > middle and seen < 0.3 * middle:
         kind = min(guesses, key=lambda k: abs(np.log(guesses[k] / noise)) if guesses[k] > 0 else np.inf)
@@ -569,7 +669,9 @@ def _third(flux: FloatArray, other: FloatArray, number: int, notes: list[str]) -
 
 _SPECTRAL_WORDS = re.compile(
     r"(?:wave\w*|lambda|\bwl\b|spectral axis|x[- ]?axis|dispersion|freq\w*)[^\n]{0,60}?(?<![A-Za-z])"
-    r"(nm|nanomet\w+|angstroms?|ångströms?|Å|A|microns?|micromet\w+|um|µm|μm|Hz|GHz|THz|met(?:er|re)s?)(?![A-Za-z/^])", re.I)
+    r"(nm|nanomet\w+|angstroms?|ångströms?|Å|A|microns?|micromet\w+|um|µm|μm|Hz|GHz|THz|met(?:er|re)s?)(?![A-Za-z/^])",
+    re.I,
+)
 
 
 def _unit_in_words(remarks: str, wave: FloatArray) -> str:

@@ -21,39 +21,63 @@ class SpectralUnit(NamedTuple):
     scale: float
 
 
-_LENGTHS = {
-    "a": 1.0, "å": 1.0, "Å": 1.0, "ang": 1.0, "angs": 1.0, "angstrom": 1.0, "angstroms": 1.0, "aa": 1.0, "angstroem": 1.0, "ångström": 1.0, "ångstrom": 1.0,
-    "0.1nm": 1.0, "0.1 nm": 1.0, "10^-10m": 1.0, "angström": 1.0, "ängström": 1.0, "angst": 1.0, "anstrom": 1.0, "anstroms": 1.0,
-    "nm": 10.0, "nanometer": 10.0, "nanometers": 10.0, "nanometre": 10.0, "nanometres": 10.0, "nanom": 10.0, "mu": 1e4, "millimicron": 10.0,
-    "um": 1e4, "µm": 1e4, "μm": 1e4, "micron": 1e4, "microns": 1e4, "micrometer": 1e4, "micrometers": 1e4, "µ": 1e4, "μ": 1e4,
-    "micrometre": 1e4, "micrometres": 1e4, "mum": 1e4, "mm": 1e7, "cm": 1e8, "m": 1e10, "meter": 1e10, "meters": 1e10, "metre": 1e10,
-    "metres": 1e10, "pm": 0.01, "10a": 10.0, "10 a": 10.0, "km": 1e13,
-}
-_FREQUENCIES = {"hz": 1.0, "hertz": 1.0, "khz": 1e3, "mhz": 1e6, "ghz": 1e9, "thz": 1e12, "phz": 1e15, "1/s": 1.0, "s-1": 1.0, "s^-1": 1.0}
-_WAVENUMBERS = {"cm-1": 1.0, "cm^-1": 1.0, "1/cm": 1.0, "cm**-1": 1.0, "kayser": 1.0, "m-1": 0.01, "1/m": 0.01, "um-1": 1e4, "1/um": 1e4,
-                "micron-1": 1e4, "um^-1": 1e4}
-_ENERGIES = {"ev": 1.0, "kev": 1e3, "mev": 1e-3}
+def _table(rows: dict[float, str]) -> dict[str, float]:
+    return {word: scale for scale, words in rows.items() for word in words.split()}
+
+
+#: Angstrom per unit, spellings in lower case with blanks taken out.
+_LENGTHS = _table(
+    {
+        1.0: "a å ang angs angst angstrom angstroms aa angstroem ångström ångstrom angström ängström anstrom anstroms "
+        "0.1nm "
+        "10^-10m 1e-10m",
+        10.0: "nm nanometer nanometers nanometre nanometres millimicron mu 10a",
+        1e4: "um µm μm micron microns micrometer micrometers micrometre micrometres mum µ μ",
+        0.01: "pm",
+        1e7: "mm",
+        1e8: "cm",
+        1e10: "m meter meters metre metres",
+        1e13: "km",
+    }
+)
+#: Hz per unit.
+_FREQUENCIES = _table(
+    {
+        1.0: "hz hertz 1/s s-1 s^-1",
+        1e3: "khz",
+        1e6: "mhz",
+        1e9: "ghz",
+        1e12: "thz",
+        1e15: "phz",
+    }
+)
+#: Inverse centimetres per unit.
+_WAVENUMBERS = _table(
+    {
+        1.0: "cm-1 cm^-1 1/cm cm**-1 kayser",
+        0.01: "m-1 1/m m^-1",
+        1e4: "um-1 1/um micron-1 um^-1",
+    }
+)
+#: Electronvolt per unit.
+_ENERGIES = _table({1.0: "ev", 1e3: "kev", 1e-3: "mev"})
 
 
 @lru_cache(maxsize=512)
 def spectral_unit(text: str) -> SpectralUnit | None:
     """The spectral unit a string names in any usual spelling, or None."""
-    bare = text.strip().strip("'\"").strip("[](){}").strip().rstrip(".").lower()
-    bare = re.sub(r"^unit=", "", bare)
-    if bare in _LENGTHS:
-        return SpectralUnit("wavelength", _LENGTHS[bare])
-    if bare in _FREQUENCIES:
-        return SpectralUnit("frequency", _FREQUENCIES[bare])
-    squeezed = bare.replace(" ", "").replace("{", "").replace("}", "")
-    if squeezed in _WAVENUMBERS:
-        return SpectralUnit("wavenumber", _WAVENUMBERS[squeezed])
-    if bare in _ENERGIES:
-        return SpectralUnit("energy", _ENERGIES[bare])
-    return _LENGTH_WORD(bare)
-
-
-def _LENGTH_WORD(bare: str) -> SpectralUnit | None:
-    """Units buried in words, as in ``Angstroms (air)`` or ``log(Angstrom)``."""
+    bare = text.strip().strip("'\"").strip("[](){}").strip().rstrip(".").lower().removeprefix("unit=")
+    squeezed = re.sub(r"[\s{}]", "", bare)
+    kinds: tuple[tuple[SpectralKind, dict[str, float]], ...] = (
+        ("wavelength", _LENGTHS),
+        ("frequency", _FREQUENCIES),
+        ("wavenumber", _WAVENUMBERS),
+        ("energy", _ENERGIES),
+    )
+    for kind, table in kinds:
+        if squeezed in table:
+            return SpectralUnit(kind, table[squeezed])
+    # units among words, as in "Angstroms (air)"; short ones could be anything
     for word in re.split(r"[^a-zåäöµμ]+", bare[:80]):
         if len(word) >= 2 and word in _LENGTHS and word not in ("mu", "mm", "cm", "km", "pm"):
             return SpectralUnit("wavelength", _LENGTHS[word])
@@ -61,13 +85,15 @@ def _LENGTH_WORD(bare: str) -> SpectralUnit | None:
 
 
 #: Ways of stating brightness. "f_lambda" needs nothing; the others are turned into it up to a constant.
-FluxKind = Literal["f_lambda", "f_nu", "nu_f_nu", "counts", "photons", "normalised", "mag_ab", "mag_st", "mag", "unknown"]
+FluxKind = Literal[
+    "f_lambda", "f_nu", "nu_f_nu", "counts", "photons", "normalised", "mag_ab", "mag_st", "mag", "unknown"
+]
 
 
 @lru_cache(maxsize=512)
 def flux_kind(text: str) -> FluxKind:
     """What kind of flux a unit string (or a column heading) stands for."""
-    t = text.strip().lower().replace("ångström", "angstrom").replace("å", "a").replace("**", "^").replace("{", "").replace("}", "")
+    t = re.sub(r"[{}]", "", text.strip().lower().replace("ångström", "angstrom").replace("å", "a").replace("**", "^"))
     if not t:
         return "unknown"
     if re.search(r"\bst[ _]?mag|\bmag(nitude)?s?[ _(\[]*st\b", t):
@@ -80,12 +106,11 @@ def flux_kind(text: str) -> FluxKind:
         return "f_nu"
     if re.search(r"photlam|photon|\bph\b|\bphot\b", t):
         return "photons"
-    energy = re.search(r"\b(erg|ergs|w|mw|kw|watt|watts|j|joule|joules)\b|\d(erg|w)", t.replace("e-17erg", "1 erg"))
+    energy = re.search(r"\b(erg|ergs|w|mw|kw|watt|watts|j|joule|joules)\b|\d(erg|w)", t)
     per_hz = re.search(r"hz|/\s*ghz", t)
     if energy and per_hz:
         return "f_nu"
-    per_length = re.search(
-        r"\b(a|aa|ang|angs|angstrom|angstroms|nm|um|µm|μm|micron|microns|cm-3|cm\^-3|cm3|cm\^3)\b|\ba-1|\ba\^|nm-1|um-1|ang", t)
+    per_length = re.search(r"\b(a|aa|nm|um|µm|μm|microns?|cm-3|cm\^-3|cm3|cm\^3)\b|\ba-1|\ba\^|nm-1|um-1|ang", t)
     if energy and per_length:
         return "f_lambda"
     if energy and re.search(r"cm|m2|m\^2|m-2", t):

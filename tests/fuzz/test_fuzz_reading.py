@@ -35,19 +35,37 @@ def good_files() -> list[bytes]:
     stack = fits.PrimaryHDU(np.stack([FLUX, FLUX, FLUX, 0.01 * FLUX])[:, None, :])
     stack.header["CRVAL1"], stack.header["CD1_1"], stack.header["BANDID1"] = 3800.0, WAVE[1] - WAVE[0], "spectrum"
     multi = fits.PrimaryHDU(FLUX[None])
-    multi.header["CTYPE1"], multi.header["WAT0_001"], multi.header["WAT1_001"] = "MULTISPE", "system=multispec", "units=angstroms"
+    multi.header["CTYPE1"], multi.header["WAT0_001"], multi.header["WAT1_001"] = (
+        "MULTISPE",
+        "system=multispec",
+        "units=angstroms",
+    )
     text = 'wtype=multispec spec1 = "1 1 2 3800. 24. 150 0. 1. 2. 1. 0. 1 3 1. 150. 5600. 1800. 3.5"'
     for i in range(0, len(text), 68):
         multi.header[f"WAT2_{i // 68 + 1:03d}"] = text[i : i + 68]
-    table = fits.BinTableHDU.from_columns([
-        fits.Column("loglam", "E", array=np.log10(WAVE)), fits.Column("flux", "E", array=FLUX),
-        fits.Column("ivar", "E", array=1 / FLUX), fits.Column("and_mask", "J", array=np.zeros(N, int))])
+    table = fits.BinTableHDU.from_columns(
+        [
+            fits.Column("loglam", "E", array=np.log10(WAVE)),
+            fits.Column("flux", "E", array=FLUX),
+            fits.Column("ivar", "E", array=1 / FLUX),
+            fits.Column("and_mask", "J", array=np.zeros(N, int)),
+        ]
+    )
     rows = "\n".join(f"{w:.3f},{f:.5e},{0.01 * f:.3e}" for w, f in zip(WAVE, FLUX))
-    return [as_bytes(linear), as_bytes(stack), as_bytes(multi), as_bytes(fits.PrimaryHDU(), table),
-            ("wave [A],flux,err\n" + rows).encode(), rows.replace(",", " ").encode(),
-            "\n".join(f"{w:.3f}; {f:.3f}".replace(".", ",") for w, f in zip(WAVE, FLUX)).encode(),
-            ("# %ECSV 1.0\n# ---\n# datatype:\n# - {name: wave, unit: nm, datatype: float64}\n# - {name: flux, datatype: float64}\nwave flux\n"
-             + "\n".join(f"{w / 10:.4f} {f:.3f}" for w, f in zip(WAVE, FLUX))).encode()]
+    return [
+        as_bytes(linear),
+        as_bytes(stack),
+        as_bytes(multi),
+        as_bytes(fits.PrimaryHDU(), table),
+        ("wave [A],flux,err\n" + rows).encode(),
+        rows.replace(",", " ").encode(),
+        "\n".join(f"{w:.3f}; {f:.3f}".replace(".", ",") for w, f in zip(WAVE, FLUX)).encode(),
+        (
+            "# %ECSV 1.0\n# ---\n# datatype:\n"
+            "# - {name: wave, unit: nm, datatype: float64}\n# - {name: flux, datatype: float64}\n"
+            "wave flux\n" + "\n".join(f"{w / 10:.4f} {f:.3f}" for w, f in zip(WAVE, FLUX))
+        ).encode(),
+    ]
 
 
 GOOD = good_files()
@@ -62,7 +80,9 @@ def hold(content: bytes) -> None:
     except SpectrumError as error:
         text = str(error)
         assert text.endswith(".") and "\n" not in text and len(text) < 700, text
-        assert not isinstance(error.__cause__, (AttributeError, NameError, AssertionError, IndexError, TypeError)), repr(error.__cause__)
+        assert not isinstance(error.__cause__, (AttributeError, NameError, AssertionError, IndexError, TypeError)), (
+            repr(error.__cause__)
+        )
         assert time.perf_counter() - start < 10
         return
     assert time.perf_counter() - start < 10
@@ -80,8 +100,11 @@ def test_the_good_files_are_good():
     for content in GOOD:
         path = FOLDER / "star.dat"
         path.write_bytes(content)
-        np.testing.assert_allclose(read_plain(path).wave_angstrom, WAVE if b"MULTISPE" not in content else read_plain(path).wave_angstrom,
-                                   rtol=1e-4)
+        np.testing.assert_allclose(
+            read_plain(path).wave_angstrom,
+            WAVE if b"MULTISPE" not in content else read_plain(path).wave_angstrom,
+            rtol=1e-4,
+        )
 
 
 @RELAXED
@@ -91,7 +114,10 @@ def test_random_bytes(content):
 
 
 @RELAXED
-@given(st.sampled_from(GOOD), st.lists(st.tuples(st.floats(0, 1, exclude_max=True), st.integers(0, 255)), min_size=1, max_size=12))
+@given(
+    st.sampled_from(GOOD),
+    st.lists(st.tuples(st.floats(0, 1, exclude_max=True), st.integers(0, 255)), min_size=1, max_size=12),
+)
 def test_changed_bytes(content, changes):
     data = bytearray(content)
     for where, value in changes:
@@ -100,7 +126,11 @@ def test_changed_bytes(content, changes):
 
 
 @RELAXED
-@given(st.sampled_from([g for g in GOOD if g.startswith(b"SIMPLE")]), st.integers(0, 60), st.text("0123456789.-+eEDTF' ", max_size=20))
+@given(
+    st.sampled_from([g for g in GOOD if g.startswith(b"SIMPLE")]),
+    st.integers(0, 60),
+    st.text("0123456789.-+eEDTF' ", max_size=20),
+)
 def test_changed_header_values(content, card, value):
     at = card * 80 + 10
     data = bytearray(content)
@@ -123,8 +153,16 @@ def test_text_of_table_characters(text):
 
 
 @RELAXED
-@given(st.lists(st.lists(st.sampled_from(["4000", "4001,5", "1.5", "nan", "", "-1", "1e400", "1e-400", "x", "0", "*", "#", "1D5"]), max_size=5),
-                max_size=200), st.sampled_from([" ", ",", ";", "\t", "|", ", ", ":"]))
+@given(
+    st.lists(
+        st.lists(
+            st.sampled_from(["4000", "4001,5", "1.5", "nan", "", "-1", "1e400", "1e-400", "x", "0", "*", "#", "1D5"]),
+            max_size=5,
+        ),
+        max_size=200,
+    ),
+    st.sampled_from([" ", ",", ";", "\t", "|", ", ", ":"]),
+)
 def test_tables_of_odd_cells(rows, separator):
     hold("\n".join(separator.join(row) for row in rows).encode())
 

@@ -1,4 +1,4 @@
-"""A made-up star for the reader tests: smooth light, a few lines, a little noise, and how to hold a result against it."""
+"""A made-up star for the reader tests (smooth light, a few lines, a little noise), to hold results against."""
 
 from __future__ import annotations
 

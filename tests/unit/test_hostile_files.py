@@ -16,7 +16,7 @@ import zipfile
 import numpy as np
 import pytest
 from astropy.io import fits
-from reading_star import FLUX, N, SIGMA, WAVE, lines, read, save
+from reading_star import FLUX, SIGMA, WAVE, N, lines, read, save
 
 from starfathom.classify.errors import RequestError, SpectrumError
 from starfathom.classify.reading import files, read_plain
@@ -70,8 +70,10 @@ def card(key: str, value: object) -> str:
 
 
 GOOD = linear(FLUX)
-TABLE = as_bytes(fits.PrimaryHDU(), fits.BinTableHDU.from_columns(
-    [fits.Column("WAVE", "D", array=WAVE), fits.Column("FLUX", "D", array=FLUX)]))
+TABLE = as_bytes(
+    fits.PrimaryHDU(),
+    fits.BinTableHDU.from_columns([fits.Column("WAVE", "D", array=WAVE), fits.Column("FLUX", "D", array=FLUX)]),
+)
 RNG = np.random.default_rng(5)
 
 BROKEN = {
@@ -101,7 +103,10 @@ BROKEN = {
     "one wavelength": (lines([0 * WAVE + 5000, FLUX]), "only 1 of|fit nothing|wavelength"),
     "negative wavelengths": (lines([-WAVE, FLUX]), "2000 A and 2.5 um"),
     "all masked": ("wave,flux,mask\n" + lines([WAVE, FLUX, 1 + 0 * WAVE], ","), "only 0 of"),
-    "too few left by the mask": ("wave,flux,mask\n" + lines([WAVE, FLUX, (np.arange(N) > 80) * 1.0], ","), "only 81 of"),
+    "too few left by the mask": (
+        "wave,flux,mask\n" + lines([WAVE, FLUX, (np.arange(N) > 80) * 1.0], ","),
+        "only 81 of",
+    ),
     "web page": ("<!DOCTYPE html><html><body>404</body></html>", "web page"),
     "PDF": (b"%PDF-1.4\n" + RNG.bytes(3000), "PDF"),
     "PNG": (b"\x89PNG\r\n\x1a\n" + RNG.bytes(3000), "PNG"),
@@ -124,7 +129,10 @@ BROKEN = {
     "FITS table cut in its header": (TABLE[: 2880 + 500], "no END|cut off"),
     "FITS word only": (b"SIMPLE  =                    T", "no END|cut off|END"),
     "FITS header of junk": (b"SIMPLE  =                    T" + RNG.bytes(6000), "END|cut off|damaged"),
-    "FITS header without an end": (b"SIMPLE  =                    T".ljust(80) + b"COMMENT x".ljust(80) * 4000, "no END"),
+    "FITS header without an end": (
+        b"SIMPLE  =                    T".ljust(80) + b"COMMENT x".ljust(80) * 4000,
+        "no END",
+    ),
     "FITS without data": (as_bytes(fits.PrimaryHDU()), "no data"),
     "FITS picture": (linear(np.tile(FLUX, (50, 1))), "1200 x 50 image"),
     "FITS cube": (linear(np.tile(FLUX, (9, 9, 1))), "image"),
@@ -143,43 +151,171 @@ BROKEN = {
     "FITS negative": (linear(-FLUX), "negative throughout"),
     "FITS short": (linear(FLUX[:60]), "only 60 of 60"),
     "FITS of one pixel": (linear(FLUX[:1]), "."),
-    "FITS catalogue": (as_bytes(fits.PrimaryHDU(), fits.BinTableHDU.from_columns(
-        [fits.Column("RA", "D", array=RNG.uniform(0, 360, 500)), fits.Column("VMAG", "D", array=RNG.uniform(5, 9, 500))])),
-        "without a"),
-    "FITS table of words": (as_bytes(fits.PrimaryHDU(), fits.BinTableHDU.from_columns(
-        [fits.Column("NAME", "9A", array=np.array(["a"] * 200))])), "without a flux column"),
-    "FITS table of wavelengths only": (as_bytes(fits.PrimaryHDU(), fits.BinTableHDU.from_columns(
-        [fits.Column("WAVE", "D", array=WAVE)])), "without a flux column"),
-    "FITS table of flux only": (as_bytes(fits.PrimaryHDU(), fits.BinTableHDU.from_columns(
-        [fits.Column("FLUX", "D", array=FLUX)])), "without a wavelength column"),
-    "FITS table without rows": (as_bytes(fits.PrimaryHDU(), fits.BinTableHDU.from_columns(
-        [fits.Column("WAVE", "D", array=np.empty(0)), fits.Column("FLUX", "D", array=np.empty(0))])), "no rows|no data|missing"),
-    "FITS absurd NAXIS1": (cards(card("SIMPLE", "T"), card("BITPIX", -32), card("NAXIS", 1), card("NAXIS1", 10**12), card("CRVAL1", 4000.0),
-                                 card("CDELT1", 1.0), data=b"\0" * 5760), "announces 4000000000000 bytes"),
-    "FITS absurd NAXIS": (cards(card("SIMPLE", "T"), card("BITPIX", -32), card("NAXIS", 999), *(card(f"NAXIS{i + 1}", 2) for i in range(999)),
-                                card("CRVAL1", 4000.0), card("CDELT1", 1.0)), "image|announces"),
-    "FITS absurd everything": (cards(card("SIMPLE", "T"), card("BITPIX", -64), card("NAXIS", 10**30), card("NAXIS1", 10**30)), "."),
-    "FITS negative NAXIS1": (cards(card("SIMPLE", "T"), card("BITPIX", -32), card("NAXIS", 1), card("NAXIS1", -5)), "not allowed"),
-    "FITS odd BITPIX": (cards(card("SIMPLE", "T"), card("BITPIX", 7), card("NAXIS", 1), card("NAXIS1", 5)), "not allowed"),
-    "FITS table of absurd rows": (as_bytes(fits.PrimaryHDU()) + cards(
-        "XTENSION= 'BINTABLE'", card("BITPIX", 8), card("NAXIS", 2), card("NAXIS1", 16), card("NAXIS2", 10**12), card("PCOUNT", 0),
-        card("GCOUNT", 1), card("TFIELDS", 2), "TTYPE1  = 'WAVE    '", "TFORM1  = 'D       '", "TTYPE2  = 'FLUX    '", "TFORM2  = 'D       '"),
-        "too many|announces"),
-    "FITS table of odd form": (as_bytes(fits.PrimaryHDU()) + cards(
-        "XTENSION= 'BINTABLE'", card("BITPIX", 8), card("NAXIS", 2), card("NAXIS1", 16), card("NAXIS2", 3), card("PCOUNT", 0),
-        card("GCOUNT", 1), card("TFIELDS", 1), "TTYPE1  = 'WAVE    '", "TFORM1  = 'Q7!     '", data=b"\0" * 48), "TFORM1|wider"),
-    "FITS table wider than its rows": (as_bytes(fits.PrimaryHDU()) + cards(
-        "XTENSION= 'BINTABLE'", card("BITPIX", 8), card("NAXIS", 2), card("NAXIS1", 8), card("NAXIS2", 300), card("PCOUNT", 0),
-        card("GCOUNT", 1), card("TFIELDS", 2), "TTYPE1  = 'WAVE    '", "TFORM1  = 'D       '", "TTYPE2  = 'FLUX    '", "TFORM2  = 'D       '",
-        data=b"\0" * 2400), "wider than its rows"),
-    "FITS table pointing outside": (as_bytes(fits.PrimaryHDU()) + cards(
-        "XTENSION= 'BINTABLE'", card("BITPIX", 8), card("NAXIS", 2), card("NAXIS1", 16), card("NAXIS2", 1), card("PCOUNT", 0),
-        card("GCOUNT", 1), card("TFIELDS", 2), "TTYPE1  = 'WAVE    '", "TFORM1  = 'PD(999) '", "TTYPE2  = 'FLUX    '", "TFORM2  = 'PD(999) '",
-        data=np.array([2**31 - 1, 2**31 - 1] * 2, ">i4").tobytes()), "beyond the end"),
-    "FITS compressed image of absurd size": (as_bytes(fits.PrimaryHDU()) + cards(
-        "XTENSION= 'BINTABLE'", card("BITPIX", 8), card("NAXIS", 2), card("NAXIS1", 8), card("NAXIS2", 1), card("PCOUNT", 0), card("GCOUNT", 1),
-        card("TFIELDS", 1), "TTYPE1  = 'COMPRESSED_DATA'", "TFORM1  = '1PB(0)  '", card("ZIMAGE", "T"), "ZCMPTYPE= 'RICE_1  '",
-        card("ZBITPIX", 16), card("ZNAXIS", 1), card("ZNAXIS1", 10**10), data=b"\0" * 8), "too many pixels"),
+    "FITS catalogue": (
+        as_bytes(
+            fits.PrimaryHDU(),
+            fits.BinTableHDU.from_columns(
+                [
+                    fits.Column("RA", "D", array=RNG.uniform(0, 360, 500)),
+                    fits.Column("VMAG", "D", array=RNG.uniform(5, 9, 500)),
+                ]
+            ),
+        ),
+        "without a",
+    ),
+    "FITS table of words": (
+        as_bytes(
+            fits.PrimaryHDU(), fits.BinTableHDU.from_columns([fits.Column("NAME", "9A", array=np.array(["a"] * 200))])
+        ),
+        "without a flux column",
+    ),
+    "FITS table of wavelengths only": (
+        as_bytes(fits.PrimaryHDU(), fits.BinTableHDU.from_columns([fits.Column("WAVE", "D", array=WAVE)])),
+        "without a flux column",
+    ),
+    "FITS table of flux only": (
+        as_bytes(fits.PrimaryHDU(), fits.BinTableHDU.from_columns([fits.Column("FLUX", "D", array=FLUX)])),
+        "without a wavelength column",
+    ),
+    "FITS table without rows": (
+        as_bytes(
+            fits.PrimaryHDU(),
+            fits.BinTableHDU.from_columns(
+                [fits.Column("WAVE", "D", array=np.empty(0)), fits.Column("FLUX", "D", array=np.empty(0))]
+            ),
+        ),
+        "no rows|no data|missing",
+    ),
+    "FITS absurd NAXIS1": (
+        cards(
+            card("SIMPLE", "T"),
+            card("BITPIX", -32),
+            card("NAXIS", 1),
+            card("NAXIS1", 10**12),
+            card("CRVAL1", 4000.0),
+            card("CDELT1", 1.0),
+            data=b"\0" * 5760,
+        ),
+        "announces 4000000000000 bytes",
+    ),
+    "FITS absurd NAXIS": (
+        cards(
+            card("SIMPLE", "T"),
+            card("BITPIX", -32),
+            card("NAXIS", 999),
+            *(card(f"NAXIS{i + 1}", 2) for i in range(999)),
+            card("CRVAL1", 4000.0),
+            card("CDELT1", 1.0),
+        ),
+        "image|announces",
+    ),
+    "FITS absurd everything": (
+        cards(card("SIMPLE", "T"), card("BITPIX", -64), card("NAXIS", 10**30), card("NAXIS1", 10**30)),
+        ".",
+    ),
+    "FITS negative NAXIS1": (
+        cards(card("SIMPLE", "T"), card("BITPIX", -32), card("NAXIS", 1), card("NAXIS1", -5)),
+        "not allowed",
+    ),
+    "FITS odd BITPIX": (
+        cards(card("SIMPLE", "T"), card("BITPIX", 7), card("NAXIS", 1), card("NAXIS1", 5)),
+        "not allowed",
+    ),
+    "FITS table of absurd rows": (
+        as_bytes(fits.PrimaryHDU())
+        + cards(
+            "XTENSION= 'BINTABLE'",
+            card("BITPIX", 8),
+            card("NAXIS", 2),
+            card("NAXIS1", 16),
+            card("NAXIS2", 10**12),
+            card("PCOUNT", 0),
+            card("GCOUNT", 1),
+            card("TFIELDS", 2),
+            "TTYPE1  = 'WAVE    '",
+            "TFORM1  = 'D       '",
+            "TTYPE2  = 'FLUX    '",
+            "TFORM2  = 'D       '",
+        ),
+        "too many|announces",
+    ),
+    "FITS table of odd form": (
+        as_bytes(fits.PrimaryHDU())
+        + cards(
+            "XTENSION= 'BINTABLE'",
+            card("BITPIX", 8),
+            card("NAXIS", 2),
+            card("NAXIS1", 16),
+            card("NAXIS2", 3),
+            card("PCOUNT", 0),
+            card("GCOUNT", 1),
+            card("TFIELDS", 1),
+            "TTYPE1  = 'WAVE    '",
+            "TFORM1  = 'Q7!     '",
+            data=b"\0" * 48,
+        ),
+        "TFORM1|wider",
+    ),
+    "FITS table wider than its rows": (
+        as_bytes(fits.PrimaryHDU())
+        + cards(
+            "XTENSION= 'BINTABLE'",
+            card("BITPIX", 8),
+            card("NAXIS", 2),
+            card("NAXIS1", 8),
+            card("NAXIS2", 300),
+            card("PCOUNT", 0),
+            card("GCOUNT", 1),
+            card("TFIELDS", 2),
+            "TTYPE1  = 'WAVE    '",
+            "TFORM1  = 'D       '",
+            "TTYPE2  = 'FLUX    '",
+            "TFORM2  = 'D       '",
+            data=b"\0" * 2400,
+        ),
+        "wider than its rows",
+    ),
+    "FITS table pointing outside": (
+        as_bytes(fits.PrimaryHDU())
+        + cards(
+            "XTENSION= 'BINTABLE'",
+            card("BITPIX", 8),
+            card("NAXIS", 2),
+            card("NAXIS1", 16),
+            card("NAXIS2", 1),
+            card("PCOUNT", 0),
+            card("GCOUNT", 1),
+            card("TFIELDS", 2),
+            "TTYPE1  = 'WAVE    '",
+            "TFORM1  = 'PD(999) '",
+            "TTYPE2  = 'FLUX    '",
+            "TFORM2  = 'PD(999) '",
+            data=np.array([2**31 - 1, 2**31 - 1] * 2, ">i4").tobytes(),
+        ),
+        "beyond the end",
+    ),
+    "FITS compressed image of absurd size": (
+        as_bytes(fits.PrimaryHDU())
+        + cards(
+            "XTENSION= 'BINTABLE'",
+            card("BITPIX", 8),
+            card("NAXIS", 2),
+            card("NAXIS1", 8),
+            card("NAXIS2", 1),
+            card("PCOUNT", 0),
+            card("GCOUNT", 1),
+            card("TFIELDS", 1),
+            "TTYPE1  = 'COMPRESSED_DATA'",
+            "TFORM1  = '1PB(0)  '",
+            card("ZIMAGE", "T"),
+            "ZCMPTYPE= 'RICE_1  '",
+            card("ZBITPIX", 16),
+            card("ZNAXIS", 1),
+            card("ZNAXIS1", 10**10),
+            data=b"\0" * 8,
+        ),
+        "too many pixels",
+    ),
 }
 
 
@@ -266,7 +402,7 @@ def test_path_of_the_wrong_kind():
 def test_huge_file_is_not_read(tmp_path):
     path = tmp_path / "huge.fits"
     with path.open("wb") as out:
-        out.truncate(40 << 30)   # sparse: no disk is used
+        out.truncate(40 << 30)  # sparse: no disk is used
     start = time.perf_counter()
     with pytest.raises(SpectrumError, match="too large"):
         read_plain(path)
@@ -364,6 +500,11 @@ def test_control_characters_do_not_reach_the_terminal(tmp_path):
 
 def test_lengths_that_do_not_agree(tmp_path):
     """Columns of different lengths in one row."""
-    unit = fits.BinTableHDU.from_columns([fits.Column("WAVE", f"{N}D", array=WAVE[None]), fits.Column("FLUX", "200D", array=FLUX[None, :200]),
-                                          fits.Column("ERR", "7D", array=SIGMA[None, :7])])
+    unit = fits.BinTableHDU.from_columns(
+        [
+            fits.Column("WAVE", f"{N}D", array=WAVE[None]),
+            fits.Column("FLUX", "200D", array=FLUX[None, :200]),
+            fits.Column("ERR", "7D", array=SIGMA[None, :7]),
+        ]
+    )
     fails(tmp_path, as_bytes(fits.PrimaryHDU(), unit), "1200 wavelengths for 200 flux values")

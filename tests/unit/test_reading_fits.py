@@ -14,7 +14,7 @@ import zipfile
 import numpy as np
 import pytest
 from astropy.io import fits
-from reading_star import FLUX, N, SIGMA, WAVE, flux_at, read, same_star
+from reading_star import FLUX, SIGMA, WAVE, N, flux_at, read, same_star
 
 from starfathom.classify.errors import SpectrumError
 
@@ -41,8 +41,14 @@ def image(data: np.ndarray, cls: type = fits.PrimaryHDU, name: str = "", **cards
 LINEAR = {"CRVAL1": WAVE[0], "CDELT1": STEP, "CRPIX1": 1.0}
 
 
-def table(columns: dict[str, np.ndarray], units: dict[str, str] | None = None, header: dict[str, object] | None = None,
-          primary: dict[str, object] | None = None, formats: dict[str, str] | None = None, name: str = "") -> bytes:
+def table(
+    columns: dict[str, np.ndarray],
+    units: dict[str, str] | None = None,
+    header: dict[str, object] | None = None,
+    primary: dict[str, object] | None = None,
+    formats: dict[str, str] | None = None,
+    name: str = "",
+) -> bytes:
     made = []
     for key, values in columns.items():
         values = np.asarray(values)
@@ -77,8 +83,16 @@ IMAGES = {
     "unit um": image(FLUX, CUNIT1="um", CRVAL1=WAVE[0] / 1e4, CDELT1=STEP / 1e4),
     "unit m": image(FLUX, CUNIT1="m", CTYPE1="WAVE", CRVAL1=WAVE[0] / 1e10, CDELT1=STEP / 1e10),
     "no unit, m": image(FLUX, CTYPE1="AWAV", CRVAL1=WAVE[0] / 1e10, CDELT1=STEP / 1e10),
-    "IRAF linear": image(FLUX, WCSDIM=1, CTYPE1="LINEAR", WAT0_001="system=equispec",
-                         WAT1_001="wtype=linear label=Wavelength units=angstroms", DC__FLAG=0, CRVAL1=WAVE[0], CD1_1=STEP),
+    "IRAF linear": image(
+        FLUX,
+        WCSDIM=1,
+        CTYPE1="LINEAR",
+        WAT0_001="system=equispec",
+        WAT1_001="wtype=linear label=Wavelength units=angstroms",
+        DC__FLAG=0,
+        CRVAL1=WAVE[0],
+        CD1_1=STEP,
+    ),
     "1 x N": image(FLUX[None, :], **LINEAR),
     "1 x 1 x N": image(FLUX[None, None, :], **LINEAR),
     "N x 1, axis 2": image(FLUX[:, None], CRVAL2=WAVE[0], CDELT2=STEP, CRPIX2=1.0),
@@ -98,16 +112,28 @@ def test_linear_images(tmp_path, name):
 
 LOG_IMAGES = {
     "DC-FLAG": image(FLUX_LOG, CRVAL1=LOG_WAVE[0], CDELT1=2.4e-4, CRPIX1=1.0, DC__FLAG=1),
-    "DC-FLAG, CD1_1, WAT": image(FLUX_LOG, CRVAL1=LOG_WAVE[0], CD1_1=2.4e-4, DC__FLAG=1, CTYPE1="LINEAR",
-                                 WAT1_001="wtype=linear label=Wavelength units=Angstroms"),
+    "DC-FLAG, CD1_1, WAT": image(
+        FLUX_LOG,
+        CRVAL1=LOG_WAVE[0],
+        CD1_1=2.4e-4,
+        DC__FLAG=1,
+        CTYPE1="LINEAR",
+        WAT1_001="wtype=linear label=Wavelength units=Angstroms",
+    ),
     "no flag": image(FLUX_LOG, CRVAL1=LOG_WAVE[0], CDELT1=2.4e-4),
     "no flag but unit": image(FLUX_LOG, CRVAL1=LOG_WAVE[0], CDELT1=2.4e-4, CUNIT1="Angstrom"),
     "CTYPE1 LOGLAM": image(FLUX_LOG, CRVAL1=LOG_WAVE[0], CDELT1=2.4e-4, CTYPE1="LOGLAM"),
     "unit log(Angstrom)": image(FLUX_LOG, CRVAL1=LOG_WAVE[0], CDELT1=2.4e-4, CUNIT1="log(Angstrom)"),
     "unit log(nm)": image(FLUX_LOG, CRVAL1=LOG_WAVE[0] - 1, CDELT1=2.4e-4, CUNIT1="log(nm)"),
     "natural": image(FLUX_LOG, CRVAL1=LOG_WAVE[0] * np.log(10), CDELT1=2.4e-4 * np.log(10)),
-    "WAVE-LOG": image(FLUX_LOG, CTYPE1="WAVE-LOG", CUNIT1="Angstrom", CRVAL1=10 ** LOG_WAVE[0],
-                      CDELT1=10 ** LOG_WAVE[0] * 2.4e-4 * np.log(10), CRPIX1=1.0),
+    "WAVE-LOG": image(
+        FLUX_LOG,
+        CTYPE1="WAVE-LOG",
+        CUNIT1="Angstrom",
+        CRVAL1=10 ** LOG_WAVE[0],
+        CDELT1=10 ** LOG_WAVE[0] * 2.4e-4 * np.log(10),
+        CRPIX1=1.0,
+    ),
     "COEFF0": image(FLUX_LOG, COEFF0=LOG_WAVE[0], COEFF1=2.4e-4),
 }
 
@@ -121,7 +147,9 @@ def test_frequency_axis(tmp_path):
     hz = np.linspace(4.1e14, 7.7e14, N)
     w = 2.99792458e18 / hz
     f = flux_at(w)
-    spec = read(tmp_path, as_bytes(image(f * w**2, CTYPE1="FREQ", CUNIT1="Hz", CRVAL1=hz[0], CDELT1=hz[1] - hz[0], BUNIT="Jy")))
+    spec = read(
+        tmp_path, as_bytes(image(f * w**2, CTYPE1="FREQ", CUNIT1="Hz", CRVAL1=hz[0], CDELT1=hz[1] - hz[0], BUNIT="Jy"))
+    )
     same_star(spec, w[::-1], f[::-1])
     assert spec.medium == "vacuum"
 
@@ -154,10 +182,16 @@ def test_nan_pixels(tmp_path):
     assert spec.valid.sum() == N - 11 and np.isfinite(spec.flux).all()
 
 
-@pytest.mark.parametrize("pack,name", [
-    (gzip.compress, "a.fits.gz"), (bz2.compress, "a.fits.bz2"), (lzma.compress, "a.fits.xz"),
-    (lambda b: gzip.compress(gzip.compress(b)), "a"), (lambda b: gzip.compress(b[:4000]) + gzip.compress(b[4000:]), "a"),
-])
+@pytest.mark.parametrize(
+    "pack,name",
+    [
+        (gzip.compress, "a.fits.gz"),
+        (bz2.compress, "a.fits.bz2"),
+        (lzma.compress, "a.fits.xz"),
+        (lambda b: gzip.compress(gzip.compress(b)), "a"),
+        (lambda b: gzip.compress(b[:4000]) + gzip.compress(b[4000:]), "a"),
+    ],
+)
 def test_packed(tmp_path, pack, name):
     same_star(read(tmp_path, pack(as_bytes(IMAGES["CDELT1"])), name))
 
@@ -177,9 +211,12 @@ def test_missing_padding_is_no_harm(tmp_path):
 
 # --- stacks of rows -------------------------------------------------------------------------------------------------
 
-IRAF_BANDS = {"BANDID1": "spectrum - background fit, weights variance, clean yes",
-              "BANDID2": "raw - background fit, weights none, clean no",
-              "BANDID3": "background - background fit", "BANDID4": "sigma - background fit, weights variance, clean yes"}
+IRAF_BANDS = {
+    "BANDID1": "spectrum - background fit, weights variance, clean yes",
+    "BANDID2": "raw - background fit, weights none, clean no",
+    "BANDID3": "background - background fit",
+    "BANDID4": "sigma - background fit, weights variance, clean yes",
+}
 STACKS = {
     "flux and error": (image(np.vstack([FLUX, SIGMA]), **LINEAR), True),
     "wavelength and flux": (image(np.vstack([WAVE, FLUX])), False),
@@ -205,8 +242,22 @@ def test_old_sdss_image(tmp_path):
     """spSpec files of the first data releases: flux, continuum-subtracted flux, error, mask over log10 wavelength."""
     error = 0.01 * FLUX_LOG
     rows = np.stack([FLUX_LOG, FLUX_LOG - 100, error, np.zeros(N), np.zeros(N)])
-    unit = image(rows.astype(">f4"), COEFF0=LOG_WAVE[0], COEFF1=2.4e-4, TELESCOP="SDSS 2.5-M", PLATEID=1, FIBERID=2, DC__FLAG=1,
-                 CRVAL1=LOG_WAVE[0], CD1_1=2.4e-4, BUNIT="1.0E-17 erg/cm/s/Ang", RAOBJ=150.1, DECOBJ=2.2, Z=-1e-4, NAME="spec")
+    unit = image(
+        rows.astype(">f4"),
+        COEFF0=LOG_WAVE[0],
+        COEFF1=2.4e-4,
+        TELESCOP="SDSS 2.5-M",
+        PLATEID=1,
+        FIBERID=2,
+        DC__FLAG=1,
+        CRVAL1=LOG_WAVE[0],
+        CD1_1=2.4e-4,
+        BUNIT="1.0E-17 erg/cm/s/Ang",
+        RAOBJ=150.1,
+        DECOBJ=2.2,
+        Z=-1e-4,
+        NAME="spec",
+    )
     spec = read(tmp_path, as_bytes(unit))
     same_star(spec, 10**LOG_WAVE, FLUX_LOG, error)
     assert spec.medium == "vacuum" and "SDSS" in spec.medium_source
@@ -240,9 +291,21 @@ def test_old_lamost_image(tmp_path, cards):
 # --- several image extensions ---------------------------------------------------------------------------------------
 
 
-@pytest.mark.parametrize("name,values", [
-    ("ERR", SIGMA), ("SIGMA", SIGMA), ("error", SIGMA), ("VAR", SIGMA**2), ("VARIANCE", SIGMA**2), ("IVAR", SIGMA**-2.0),
-    ("STDEV", SIGMA), ("UNCERT", SIGMA), ("SNR", FLUX / SIGMA), ("NOISE", SIGMA)])
+@pytest.mark.parametrize(
+    "name,values",
+    [
+        ("ERR", SIGMA),
+        ("SIGMA", SIGMA),
+        ("error", SIGMA),
+        ("VAR", SIGMA**2),
+        ("VARIANCE", SIGMA**2),
+        ("IVAR", SIGMA**-2.0),
+        ("STDEV", SIGMA),
+        ("UNCERT", SIGMA),
+        ("SNR", FLUX / SIGMA),
+        ("NOISE", SIGMA),
+    ],
+)
 def test_error_extension(tmp_path, name, values):
     spec = read(tmp_path, as_bytes(image(FLUX, **LINEAR), image(values, fits.ImageHDU, name)))
     same_star(spec, sigma=SIGMA)
@@ -251,19 +314,34 @@ def test_error_extension(tmp_path, name, values):
 def test_flux_in_an_extension_with_mask_and_error(tmp_path):
     mask = np.zeros(N, np.int16)
     mask[3:6] = 2
-    spec = read(tmp_path, as_bytes(fits.PrimaryHDU(), image(FLUX, fits.ImageHDU, "SCI", **LINEAR),
-                                   image(SIGMA, fits.ImageHDU, "ERR"), image(mask, fits.ImageHDU, "DQ")))
+    spec = read(
+        tmp_path,
+        as_bytes(
+            fits.PrimaryHDU(),
+            image(FLUX, fits.ImageHDU, "SCI", **LINEAR),
+            image(SIGMA, fits.ImageHDU, "ERR"),
+            image(mask, fits.ImageHDU, "DQ"),
+        ),
+    )
     assert spec.valid.sum() == N - 3 and spec.sigma is not None
 
 
 def test_error_before_flux(tmp_path):
-    spec = read(tmp_path, as_bytes(fits.PrimaryHDU(), image(SIGMA, fits.ImageHDU, "ERR", **LINEAR),
-                                   image(FLUX, fits.ImageHDU, "FLUX", **LINEAR)))
+    spec = read(
+        tmp_path,
+        as_bytes(
+            fits.PrimaryHDU(),
+            image(SIGMA, fits.ImageHDU, "ERR", **LINEAR),
+            image(FLUX, fits.ImageHDU, "FLUX", **LINEAR),
+        ),
+    )
     same_star(spec, sigma=SIGMA)
 
 
-@pytest.mark.parametrize("name,values,unit", [
-    ("WAVELENGTH", WAVE, "Angstrom"), ("WAVE", WAVE / 10, "nm"), ("LAMBDA", WAVE, ""), ("LOGLAM", np.log10(WAVE), "")])
+@pytest.mark.parametrize(
+    "name,values,unit",
+    [("WAVELENGTH", WAVE, "Angstrom"), ("WAVE", WAVE / 10, "nm"), ("LAMBDA", WAVE, ""), ("LOGLAM", np.log10(WAVE), "")],
+)
 def test_wavelength_extension(tmp_path, name, values, unit):
     other = image(values, fits.ImageHDU, name)
     if unit:
@@ -303,8 +381,16 @@ def test_row_asked_for(tmp_path):
 
 def multispec(spec: str, n: int = N, extra: dict[str, object] | None = None, strip: bool = False) -> bytes:
     text = f'wtype=multispec spec1 = "{spec}"'
-    cards: dict[str, object] = {"WCSDIM": 2, "CTYPE1": "MULTISPE", "CTYPE2": "MULTISPE", "CDELT1": 1.0, "CD1_1": 1.0, "CD2_2": 1.0,
-                                "WAT0_001": "system=multispec", "WAT1_001": "wtype=multispec label=Wavelength units=angstroms"}
+    cards: dict[str, object] = {
+        "WCSDIM": 2,
+        "CTYPE1": "MULTISPE",
+        "CTYPE2": "MULTISPE",
+        "CDELT1": 1.0,
+        "CD1_1": 1.0,
+        "CD2_2": 1.0,
+        "WAT0_001": "system=multispec",
+        "WAT1_001": "wtype=multispec label=Wavelength units=angstroms",
+    }
     unit = image(np.zeros((1, n)), **cards, **(extra or {}))
     for i in range(0, len(text), 68):
         piece = text[i : i + 68]
@@ -319,7 +405,9 @@ def read_multispec(tmp_path, spec, w, **kwargs):
 
 
 def test_multispec_linear(tmp_path):
-    read_multispec(tmp_path, f"1 1 0 {WAVE[0]!r} {STEP!r} {N} 0. 1. 10.".replace("np.float64(", "").replace(")", ""), WAVE)
+    read_multispec(
+        tmp_path, f"1 1 0 {WAVE[0]!r} {STEP!r} {N} 0. 1. 10.".replace("np.float64(", "").replace(")", ""), WAVE
+    )
 
 
 def test_multispec_logarithmic(tmp_path):
@@ -398,14 +486,17 @@ def test_multispec_section_of_a_longer_image(tmp_path):
     read_multispec(tmp_path, spec, w, extra={"LTV1": -100.0, "LTM1_1": 1.0})
 
 
-@pytest.mark.parametrize("spec,why", [
-    ("1 1 2 3800. 3. 1200 0. 1. 10. 1. 0. 1 5 1. 1200. 1. 2.", "cut off"),
-    ("1 1 2 3800. 3. 1200 0. 1. 10. 1. 0. 9 5 1. 1200. 1. 2.", "not known"),
-    ("1 1 7 3800. 3. 1200 0. 1. 10.", "not known"),
-    ("1 1 2 3800. x. 1200 0. 1. 10.", "not a number"),
-    ("1 1 2", "cut off"),
-    ("1 1 2 3800. 3. 1200 0. 1. 10. 1. 0. 1 2 5. 5. 1. 2.", "empty pixel range"),
-])
+@pytest.mark.parametrize(
+    "spec,why",
+    [
+        ("1 1 2 3800. 3. 1200 0. 1. 10. 1. 0. 1 5 1. 1200. 1. 2.", "cut off"),
+        ("1 1 2 3800. 3. 1200 0. 1. 10. 1. 0. 9 5 1. 1200. 1. 2.", "not known"),
+        ("1 1 7 3800. 3. 1200 0. 1. 10.", "not known"),
+        ("1 1 2 3800. x. 1200 0. 1. 10.", "not a number"),
+        ("1 1 2", "cut off"),
+        ("1 1 2 3800. 3. 1200 0. 1. 10. 1. 0. 1 2 5. 5. 1. 2.", "empty pixel range"),
+    ],
+)
 def test_broken_multispec(tmp_path, spec, why):
     unit = multispec(spec)
     unit.data = FLUX[None, :]
@@ -415,10 +506,21 @@ def test_broken_multispec(tmp_path, spec, why):
 
 # --- tables ---------------------------------------------------------------------------------------------------------
 
-NAMES = [("WAVELENGTH", "FLUX", "ERROR"), ("wave", "flux", "sigma"), ("Lambda", "Flux", "Flux_Err"), ("LAMBDA", "F_LAMBDA", "STAT"),
-         ("wl", "fl", "er"), ("wavelength", "flux", "uncertainty"), ("WAVE", "FLUX_REDUCED", "ERR_FLUX"), ("Wave", "Counts", "Noise"),
-         ("spectral_axis", "flux", "std"), ("LAM", "SPEC", "E_SPEC"), ("wvl", "intensity", "stddev"), ("WAVELENGTH", "FLUX", "STATERROR"),
-         ("ANGSTROM", "Flux Density", "Error")]
+NAMES = [
+    ("WAVELENGTH", "FLUX", "ERROR"),
+    ("wave", "flux", "sigma"),
+    ("Lambda", "Flux", "Flux_Err"),
+    ("LAMBDA", "F_LAMBDA", "STAT"),
+    ("wl", "fl", "er"),
+    ("wavelength", "flux", "uncertainty"),
+    ("WAVE", "FLUX_REDUCED", "ERR_FLUX"),
+    ("Wave", "Counts", "Noise"),
+    ("spectral_axis", "flux", "std"),
+    ("LAM", "SPEC", "E_SPEC"),
+    ("wvl", "intensity", "stddev"),
+    ("WAVELENGTH", "FLUX", "STATERROR"),
+    ("ANGSTROM", "Flux Density", "Error"),
+]
 
 
 @pytest.mark.parametrize("names", NAMES, ids=lambda n: n[0] + "-" + n[1])
@@ -428,22 +530,48 @@ def test_table_names(tmp_path, names, vector):
     same_star(read(tmp_path, table(columns)), sigma=SIGMA)
 
 
-@pytest.mark.parametrize("name,values", [("IVAR", SIGMA**-2.0), ("InvVar", SIGMA**-2.0), ("VAR", SIGMA**2), ("variance", SIGMA**2),
-                                         ("SNR", FLUX / SIGMA)])
+@pytest.mark.parametrize(
+    "name,values",
+    [("IVAR", SIGMA**-2.0), ("InvVar", SIGMA**-2.0), ("VAR", SIGMA**2), ("variance", SIGMA**2), ("SNR", FLUX / SIGMA)],
+)
 def test_table_error_kinds(tmp_path, name, values):
     same_star(read(tmp_path, table({"wave": WAVE, "flux": FLUX, name: values})), sigma=SIGMA)
 
 
-@pytest.mark.parametrize("unit,values", [("Angstrom", WAVE), ("nm", WAVE / 10), ("um", WAVE / 1e4), ("micron", WAVE / 1e4), ("m", WAVE / 1e10),
-                                         ("0.1 nm", WAVE), ("Angstroms", WAVE), ("log(Angstrom)", np.log10(WAVE)), ("Hz", 2.99792458e18 / WAVE)])
+@pytest.mark.parametrize(
+    "unit,values",
+    [
+        ("Angstrom", WAVE),
+        ("nm", WAVE / 10),
+        ("um", WAVE / 1e4),
+        ("micron", WAVE / 1e4),
+        ("m", WAVE / 1e10),
+        ("0.1 nm", WAVE),
+        ("Angstroms", WAVE),
+        ("log(Angstrom)", np.log10(WAVE)),
+        ("Hz", 2.99792458e18 / WAVE),
+    ],
+)
 def test_table_wavelength_units(tmp_path, unit, values):
     same_star(read(tmp_path, table({"wave": values, "flux": FLUX}, {"wave": unit})))
 
 
-@pytest.mark.parametrize("unit,values,calibrated", [
-    ("erg/s/cm2/A", FLUX, True), ("erg s**-1 cm**-2 Angstrom**-1", FLUX, True), ("1e-17 erg/cm^2/s/Ang", FLUX, True), ("W/m2/um", FLUX, True),
-    ("Jy", FLUX * WAVE**2, True), ("erg/s/cm2/Hz", FLUX * WAVE**2, True), ("W m-2 Hz-1", FLUX * WAVE**2, True),
-    ("count", FLUX, False), ("ADU", FLUX, False), ("electron", FLUX, False), ("ph/s/cm2/A", FLUX * WAVE, True)])
+@pytest.mark.parametrize(
+    "unit,values,calibrated",
+    [
+        ("erg/s/cm2/A", FLUX, True),
+        ("erg s**-1 cm**-2 Angstrom**-1", FLUX, True),
+        ("1e-17 erg/cm^2/s/Ang", FLUX, True),
+        ("W/m2/um", FLUX, True),
+        ("Jy", FLUX * WAVE**2, True),
+        ("erg/s/cm2/Hz", FLUX * WAVE**2, True),
+        ("W m-2 Hz-1", FLUX * WAVE**2, True),
+        ("count", FLUX, False),
+        ("ADU", FLUX, False),
+        ("electron", FLUX, False),
+        ("ph/s/cm2/A", FLUX * WAVE, True),
+    ],
+)
 def test_table_flux_units(tmp_path, unit, values, calibrated):
     spec = read(tmp_path, table({"wave": WAVE, "flux": values}, {"flux": unit, "wave": "Angstrom"}))
     same_star(spec)
@@ -466,8 +594,9 @@ def test_columns_asked_for_in_a_table(tmp_path):
 def test_integer_scaling_and_null(tmp_path):
     counts = np.round(FLUX * 100).astype(np.int32)
     counts[4:8] = -99
-    unit = fits.BinTableHDU.from_columns([
-        fits.Column("wave", "E", array=WAVE.astype(np.float32)), fits.Column("flux", "J", array=counts, null=-99)])
+    unit = fits.BinTableHDU.from_columns(
+        [fits.Column("wave", "E", array=WAVE.astype(np.float32)), fits.Column("flux", "J", array=counts, null=-99)]
+    )
     spec = read(tmp_path, as_bytes(fits.PrimaryHDU(), unit))
     assert not spec.valid[4:8].any() and spec.valid.sum() == N - 4
 
@@ -480,13 +609,24 @@ def test_scaled_column(tmp_path):
 
 
 def test_variable_length_arrays(tmp_path):
-    made = [fits.Column(k, "PD()", array=np.array([v], dtype=object)) for k, v in (("WAVE", WAVE), ("FLUX", FLUX), ("ERR", SIGMA))]
+    made = [
+        fits.Column(k, "PD()", array=np.array([v], dtype=object))
+        for k, v in (("WAVE", WAVE), ("FLUX", FLUX), ("ERR", SIGMA))
+    ]
     same_star(read(tmp_path, as_bytes(fits.PrimaryHDU(), fits.BinTableHDU.from_columns(made))), sigma=SIGMA)
 
 
 def test_header_wavelengths_for_a_table(tmp_path):
-    same_star(read(tmp_path, table({"flux": FLUX_LOG}, header={"COEFF0": LOG_WAVE[0], "COEFF1": 2.4e-4})), 10**LOG_WAVE, FLUX_LOG)
-    same_star(read(tmp_path, table({"flux": FLUX_LOG}, primary={"COEFF0": LOG_WAVE[0], "COEFF1": 2.4e-4})), 10**LOG_WAVE, FLUX_LOG)
+    same_star(
+        read(tmp_path, table({"flux": FLUX_LOG}, header={"COEFF0": LOG_WAVE[0], "COEFF1": 2.4e-4})),
+        10**LOG_WAVE,
+        FLUX_LOG,
+    )
+    same_star(
+        read(tmp_path, table({"flux": FLUX_LOG}, primary={"COEFF0": LOG_WAVE[0], "COEFF1": 2.4e-4})),
+        10**LOG_WAVE,
+        FLUX_LOG,
+    )
 
 
 def test_sdss_spec_file(tmp_path):
@@ -495,10 +635,19 @@ def test_sdss_spec_file(tmp_path):
     ivar[300:310] = 0
     and_mask = np.zeros(N, np.int32)
     and_mask[5] = 1 << 20
-    columns = [fits.Column("flux", "E", array=FLUX_LOG), fits.Column("loglam", "E", array=LOG_WAVE), fits.Column("ivar", "E", array=ivar),
-               fits.Column("and_mask", "J", array=and_mask), fits.Column("or_mask", "J", array=np.full(N, 4)),
-               fits.Column("wdisp", "E", array=np.full(N, 1.2)), fits.Column("sky", "E", array=FLUX_LOG), fits.Column("model", "E", array=FLUX_LOG)]
-    row = fits.BinTableHDU.from_columns([fits.Column("Z", "E", array=[0.0]), fits.Column("CLASS", "6A", array=["STAR"])])
+    columns = [
+        fits.Column("flux", "E", array=FLUX_LOG),
+        fits.Column("loglam", "E", array=LOG_WAVE),
+        fits.Column("ivar", "E", array=ivar),
+        fits.Column("and_mask", "J", array=and_mask),
+        fits.Column("or_mask", "J", array=np.full(N, 4)),
+        fits.Column("wdisp", "E", array=np.full(N, 1.2)),
+        fits.Column("sky", "E", array=FLUX_LOG),
+        fits.Column("model", "E", array=FLUX_LOG),
+    ]
+    row = fits.BinTableHDU.from_columns(
+        [fits.Column("Z", "E", array=[0.0]), fits.Column("CLASS", "6A", array=["STAR"])]
+    )
     first = fits.PrimaryHDU()
     first.header["TELESCOP"], first.header["PLUG_RA"], first.header["PLUG_DEC"] = "SDSS 2.5-M", 10.0, -1.0
     spec = read(tmp_path, as_bytes(first, fits.BinTableHDU.from_columns(columns, name="COADD"), row))
@@ -515,9 +664,17 @@ def test_new_lamost_table(tmp_path):
     """One row of arrays: FLUX, IVAR, WAVELENGTH, ANDMASK, ORMASK."""
     mask = np.zeros((1, N), np.int16)
     mask[0, 9] = 1
-    data = table({"FLUX": FLUX_LOG[None], "IVAR": (0.01 * FLUX_LOG[None]) ** -2.0, "WAVELENGTH": 10 ** LOG_WAVE[None], "ANDMASK": mask,
-                  "ORMASK": np.ones((1, N), np.int16)}, primary={"TELESCOP": "LAMOST", "OBJECT": "LAMOST J000", "RA": 12.5, "DEC": 41.0},
-                 formats={"ANDMASK": "I", "ORMASK": "I"})
+    data = table(
+        {
+            "FLUX": FLUX_LOG[None],
+            "IVAR": (0.01 * FLUX_LOG[None]) ** -2.0,
+            "WAVELENGTH": 10 ** LOG_WAVE[None],
+            "ANDMASK": mask,
+            "ORMASK": np.ones((1, N), np.int16),
+        },
+        primary={"TELESCOP": "LAMOST", "OBJECT": "LAMOST J000", "RA": 12.5, "DEC": 41.0},
+        formats={"ANDMASK": "I", "ORMASK": "I"},
+    )
     spec = read(tmp_path, data)
     assert spec.valid.sum() == N - 1 and not spec.valid[9]
     assert spec.medium == "vacuum" and spec.meta["object"] == "LAMOST J000"
@@ -527,9 +684,18 @@ def test_new_lamost_table(tmp_path):
 def test_flux_standard_table(tmp_path):
     """A table with statistical and systematic errors, resolution and exposure columns, over 1150 A to 3 um."""
     w = np.geomspace(1150, 29999, 3000)
-    data = table({"WAVELENGTH": w, "FLUX": flux_at(w) * 1e-13, "STATERROR": flux_at(w) * 2e-15, "SYSERROR": flux_at(w) * 9e-15,
-                  "FWHM": np.full(w.size, 5.0), "DATAQUAL": np.zeros(w.size, np.int16), "TOTEXP": np.ones(w.size)},
-                 {"WAVELENGTH": "ANGSTROMS", "FLUX": "FLAM", "STATERROR": "FLAM"})
+    data = table(
+        {
+            "WAVELENGTH": w,
+            "FLUX": flux_at(w) * 1e-13,
+            "STATERROR": flux_at(w) * 2e-15,
+            "SYSERROR": flux_at(w) * 9e-15,
+            "FWHM": np.full(w.size, 5.0),
+            "DATAQUAL": np.zeros(w.size, np.int16),
+            "TOTEXP": np.ones(w.size),
+        },
+        {"WAVELENGTH": "ANGSTROMS", "FLUX": "FLAM", "STATERROR": "FLAM"},
+    )
     spec = read(tmp_path, data)
     assert spec.wave_angstrom[0] >= 2000 and spec.wave_angstrom[-1] <= 25000
     np.testing.assert_allclose(spec.sigma / spec.flux, 0.02, rtol=1e-6)
@@ -538,9 +704,21 @@ def test_flux_standard_table(tmp_path):
 
 def test_spectrograph_row(tmp_path):
     """One row with gross, background, net and flux arrays beside scalar columns."""
-    data = table({"SPORDER": np.array([1]), "NELEM": np.array([N]), "WAVELENGTH": WAVE[None], "GROSS": 3 * FLUX[None],
-                  "BACKGROUND": FLUX[None], "NET": 2 * FLUX[None], "FLUX": FLUX[None], "ERROR": SIGMA[None],
-                  "DQ": np.zeros((1, N), np.int16)}, {"WAVELENGTH": "Angstroms", "FLUX": "erg/s/cm**2/Angstrom"}, formats={"DQ": "I"})
+    data = table(
+        {
+            "SPORDER": np.array([1]),
+            "NELEM": np.array([N]),
+            "WAVELENGTH": WAVE[None],
+            "GROSS": 3 * FLUX[None],
+            "BACKGROUND": FLUX[None],
+            "NET": 2 * FLUX[None],
+            "FLUX": FLUX[None],
+            "ERROR": SIGMA[None],
+            "DQ": np.zeros((1, N), np.int16),
+        },
+        {"WAVELENGTH": "Angstroms", "FLUX": "erg/s/cm**2/Angstrom"},
+        formats={"DQ": "I"},
+    )
     same_star(read(tmp_path, data), sigma=SIGMA)
 
 
@@ -552,13 +730,19 @@ def test_several_rows_of_arrays_need_a_row(tmp_path):
 
 
 def test_catalogue_before_the_spectrum(tmp_path):
-    other = fits.BinTableHDU.from_columns([fits.Column("NAME", "5A", array=["a", "b"]), fits.Column("MAG", "E", array=[1.0, 2.0])], name="INFO")
-    main = fits.BinTableHDU.from_columns([fits.Column("WAVE", "D", array=WAVE), fits.Column("FLUX", "D", array=FLUX)], name="SPECTRUM")
+    other = fits.BinTableHDU.from_columns(
+        [fits.Column("NAME", "5A", array=["a", "b"]), fits.Column("MAG", "E", array=[1.0, 2.0])], name="INFO"
+    )
+    main = fits.BinTableHDU.from_columns(
+        [fits.Column("WAVE", "D", array=WAVE), fits.Column("FLUX", "D", array=FLUX)], name="SPECTRUM"
+    )
     same_star(read(tmp_path, as_bytes(fits.PrimaryHDU(), other, main)))
 
 
 def test_ascii_table_extension(tmp_path):
-    unit = fits.TableHDU.from_columns([fits.Column("WAVELENGTH", "F12.4", array=WAVE), fits.Column("FLUX", "E16.8", array=FLUX)])
+    unit = fits.TableHDU.from_columns(
+        [fits.Column("WAVELENGTH", "F12.4", array=WAVE), fits.Column("FLUX", "E16.8", array=FLUX)]
+    )
     same_star(read(tmp_path, as_bytes(fits.PrimaryHDU(), unit)))
 
 
@@ -579,12 +763,26 @@ def test_table_masked_by_a_logical_column(tmp_path):
 # --- headers --------------------------------------------------------------------------------------------------------
 
 
-@pytest.mark.parametrize("cards,medium", [
-    ({"CTYPE1": "AWAV"}, "air"), ({"CTYPE1": "WAVE"}, "vacuum"), ({"CTYPE1": "WAVE-LOG", "CUNIT1": "Angstrom"}, "vacuum"),
-    ({"AIRORVAC": "air"}, "air"), ({"AIRORVAC": "vac"}, "vacuum"), ({"VACUUM": True}, "vacuum"), ({"VACUUM": 1}, "vacuum"),
-    ({"VACUUM": False}, "air"), ({"COMMENT": "Wavelengths are in vacuum"}, "vacuum"), ({"HISTORY": "air wavelength scale"}, "air"),
-    ({"CTYPE1": "LINEAR"}, "unknown"), ({"AIRMASS": 1.2}, "unknown"), ({"COMMENT": "dewar vacuum pressure fine"}, "unknown"),
-    ({"TELESCOP": "LAMOST"}, "vacuum"), ({"CRVAL1": (WAVE[0], "first wavelength [Angstrom, air]")}, "air")])
+@pytest.mark.parametrize(
+    "cards,medium",
+    [
+        ({"CTYPE1": "AWAV"}, "air"),
+        ({"CTYPE1": "WAVE"}, "vacuum"),
+        ({"CTYPE1": "WAVE-LOG", "CUNIT1": "Angstrom"}, "vacuum"),
+        ({"AIRORVAC": "air"}, "air"),
+        ({"AIRORVAC": "vac"}, "vacuum"),
+        ({"VACUUM": True}, "vacuum"),
+        ({"VACUUM": 1}, "vacuum"),
+        ({"VACUUM": False}, "air"),
+        ({"COMMENT": "Wavelengths are in vacuum"}, "vacuum"),
+        ({"HISTORY": "air wavelength scale"}, "air"),
+        ({"CTYPE1": "LINEAR"}, "unknown"),
+        ({"AIRMASS": 1.2}, "unknown"),
+        ({"COMMENT": "dewar vacuum pressure fine"}, "unknown"),
+        ({"TELESCOP": "LAMOST"}, "vacuum"),
+        ({"CRVAL1": (WAVE[0], "first wavelength [Angstrom, air]")}, "air"),
+    ],
+)
 def test_air_or_vacuum_from_the_header(tmp_path, cards, medium):
     spec = read(tmp_path, as_bytes(image(FLUX, **{**LINEAR, **cards})))
     assert spec.medium == medium
@@ -592,11 +790,35 @@ def test_air_or_vacuum_from_the_header(tmp_path, cards, medium):
 
 
 def test_header_hints(tmp_path):
-    spec = read(tmp_path, as_bytes(image(
-        FLUX, OBJECT="BD-99 77", EXPTIME=900.0, RA="10:30:00.0", DEC="-20:15:00", SNR=55.0, VRAD=-31.5,
-        SPEC_RES=(2000.0, "resolving power"), FWHM=(2.7, "line spread FWHM [Angstrom]"), BUNIT="erg/cm2/s/A", **LINEAR)))
-    assert spec.meta == {"object": "BD-99 77", "exptime_s": 900.0, "ra_deg": 157.5, "dec_deg": -20.25, "snr": 55.0, "velocity_kms": -31.5,
-                         "resolution": 2000.0, "fwhm_angstrom": 2.7, "flux_calibrated": True}
+    spec = read(
+        tmp_path,
+        as_bytes(
+            image(
+                FLUX,
+                OBJECT="BD-99 77",
+                EXPTIME=900.0,
+                RA="10:30:00.0",
+                DEC="-20:15:00",
+                SNR=55.0,
+                VRAD=-31.5,
+                SPEC_RES=(2000.0, "resolving power"),
+                FWHM=(2.7, "line spread FWHM [Angstrom]"),
+                BUNIT="erg/cm2/s/A",
+                **LINEAR,
+            )
+        ),
+    )
+    assert spec.meta == {
+        "object": "BD-99 77",
+        "exptime_s": 900.0,
+        "ra_deg": 157.5,
+        "dec_deg": -20.25,
+        "snr": 55.0,
+        "velocity_kms": -31.5,
+        "resolution": 2000.0,
+        "fwhm_angstrom": 2.7,
+        "flux_calibrated": True,
+    }
 
 
 def test_seeing_is_not_resolution(tmp_path):
@@ -604,9 +826,18 @@ def test_seeing_is_not_resolution(tmp_path):
     assert "fwhm_angstrom" not in spec.meta
 
 
-@pytest.mark.parametrize("text,hours,degrees", [
-    ("12:00:00", True, 180.0), ("-00:30:00", False, -0.5), ("12 30 36", True, 187.65), ("1h30m00s", True, 22.5), ("45.5", True, 45.5),
-    ("+12d15m00s", False, 12.25), ("nowhere", True, None)])
+@pytest.mark.parametrize(
+    "text,hours,degrees",
+    [
+        ("12:00:00", True, 180.0),
+        ("-00:30:00", False, -0.5),
+        ("12 30 36", True, 187.65),
+        ("1h30m00s", True, 22.5),
+        ("45.5", True, 45.5),
+        ("+12d15m00s", False, 12.25),
+        ("nowhere", True, None),
+    ],
+)
 def test_angles(text, hours, degrees):
     from starfathom.classify.reading.hints import angle
 
