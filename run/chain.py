@@ -20,6 +20,7 @@ from starfathom.targets import Target
 if TYPE_CHECKING:
     from starfathom.classify.assignment import Assignment
     from starfathom.classify.mktype import MKType
+    from starfathom.classify.spectrum import PlainSpectrum
     from starfathom.distance import Fathoming
     from starfathom.tables import Column
 
@@ -142,7 +143,8 @@ def _classify(targets: Sequence[Target], settings: RunSettings) -> list[Assignme
     from starfathom.classify.reading import read_plain
 
     classifier = Classifier.load(without_libraries=settings.without_libraries, without_stars=settings.without_stars)
-    spectra, asked = [], []
+    spectra: list[PlainSpectrum | SpectrumError] = []
+    asked: list[Settings] = []
     for target in targets:
         try:
             spectra.append(read_plain(target.spectrum, medium=settings.medium))

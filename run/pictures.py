@@ -84,14 +84,16 @@ def main(run_dir: str, folder: str, star: str = "TH17-10") -> None:
 
     place = Path(folder)
     place.mkdir(parents=True, exist_ok=True)
-    ax = hr_diagram(run_dir)
-    ax.figure.savefig(place / "hr_diagram.png", dpi=110, metadata={"Software": None})
+    figure, ax = plt.subplots(figsize=(7.0, 7.4), layout="constrained")
+    hr_diagram(run_dir, ax)
+    figure.savefig(place / "hr_diagram.png", dpi=110, metadata={"Software": None})
     with open_record(run_dir) as record:
         path = next((row["file"] for row in record.rows() if row["name"] == star), "")
     if not path:
         raise RequestError(f"{run_dir}: has no spectrum of a star called {star}.")
-    _, ax = plt.subplots(figsize=(10.0, 3.8), layout="constrained")
-    over_template(path, ax).figure.savefig(place / "spectrum.png", dpi=110, metadata={"Software": None})
+    figure, ax = plt.subplots(figsize=(10.0, 3.8), layout="constrained")
+    over_template(path, ax)
+    figure.savefig(place / "spectrum.png", dpi=110, metadata={"Software": None})
 
 
 if __name__ == "__main__":

@@ -106,7 +106,9 @@ def run_survey(
         when the disk is full or the scheduler cannot be reached; the run can be resumed.
     """
     if work is None:
-        from starfathom.chain import work_batch as work
+        from starfathom.chain import work_batch
+
+        work = work_batch
     if workers is not None and workers < 1:
         raise RequestError(f"--workers {workers}: at least one worker is needed.")
     for suffix in formats or ():
@@ -228,7 +230,9 @@ def _one_by_one(work: Work, number: int, batch: list[Target], settings: RunSetti
 
 
 def _merged(number: int, parts: Iterable[BatchResult]) -> BatchResult:
-    rows, budget, details = [], [], []
+    rows: list[dict[str, Any]] = []
+    budget: list[dict[str, Any]] = []
+    details: list[dict[str, Any] | None] = []
     for part in parts:
         rows += part.rows
         budget += part.budget
@@ -376,7 +380,7 @@ def on_dask(jobs: Iterator[Job], work: Work, settings: RunSettings, address: str
     recorded once whatever comes back twice.
     """
     try:
-        from distributed import Client, KilledWorker, as_completed
+        from distributed import Client, as_completed
     except ImportError as fault:
         raise RequestError(
             "--scheduler needs Dask, which is not installed; install it with: pip install 'starfathom[survey]'."
@@ -387,7 +391,7 @@ def on_dask(jobs: Iterator[Job], work: Work, settings: RunSettings, address: str
         raise StarfathomError(
             f"{address}: no Dask scheduler answers there ({fault}); start one, or leave out --scheduler."
         ) from fault
-    jobs_of: dict[str, Job] = {}
+    jobs_of: dict[Any, Job] = {}
     tries: dict[int, int] = {}
 
     def submit(job: Job) -> Any:
@@ -421,7 +425,7 @@ def on_dask(jobs: Iterator[Job], work: Work, settings: RunSettings, address: str
             job = jobs_of.pop(future.key)
             try:
                 if future.status == "cancelled":
-                    raise KilledWorker(future.key, None, None, None)
+                    raise ConnectionError("cancelled")
                 result = future.result()
             except Exception as fault:
                 if tries[job[0]] < TRIES:

@@ -279,13 +279,12 @@ class TargetList:
                 place = self._place(chunk.start + i, chunk.text["name"][i])
                 raise RequestError(f"{place}: {what % f'{values[i]:g}'}.")
         if "parallax" in chunk.numbers:
-            value, error = chunk.numbers["parallax"], chunk.numbers["e_parallax"]
-            bad = np.isfinite(value) & ~(error > 0)
-            if bad.any():
-                i = int(np.argmax(bad))
+            orphan = np.isfinite(chunk.numbers["parallax"]) & ~(chunk.numbers["e_parallax"] > 0)
+            if orphan.any():
+                i = int(np.argmax(orphan))
                 raise RequestError(
-                    f"{self._place(chunk.start + i, chunk.text['name'][i])}: the parallax "
-                    "has no error; give e_parallax above 0, or leave both cells empty."
+                    f"{self._place(chunk.start + i, chunk.text['name'][i])}: the parallax has no error; "
+                    "give e_parallax above 0, or leave both cells empty."
                 )
 
     @staticmethod

@@ -13,7 +13,7 @@ import shutil
 import sys
 import textwrap
 from collections.abc import Iterable, Mapping, Sequence
-from typing import IO, Any
+from typing import IO, Any, TypeGuard
 
 Row = Mapping[str, Any]
 
@@ -48,7 +48,7 @@ def _styled(text: str, style: str, colour: bool) -> str:
     return f"\x1b[{_STYLES[style]}m{text}\x1b[0m" if colour else text
 
 
-def _is_number(value: Any) -> bool:
+def _is_number(value: Any) -> TypeGuard[float]:
     return isinstance(value, int | float) and not isinstance(value, bool) and math.isfinite(value)
 
 
@@ -102,10 +102,10 @@ def _with_error(row: Row, key: str, digits: int = 2, sign: bool = False) -> str:
     value, error = row.get(key), row.get(f"{key}_err")
     if not _is_number(value):
         return ""
-    text = significant(value, error, digits)  # type: ignore[arg-type]
+    text = significant(value, error, digits)
     if sign and value > 0:
         text = f"+{text}"
-    return f"{text} ± {significant(error, error, digits)}" if _is_number(error) else text  # type: ignore[arg-type]
+    return f"{text} ± {significant(error, error, digits)}" if _is_number(error) else text
 
 
 def _wrapped(label: str, text: str, width: int) -> list[str]:
@@ -130,6 +130,11 @@ def _joined(label: str, pieces: Iterable[str], width: int) -> list[str]:
 
 def _type_given(row: Row) -> bool:
     return GIVEN_FLAG in str(row.get("flags") or "").split(",")
+
+
+def _harmless(row: Row) -> dict[str, Any]:
+    """The row without control characters: a name out of a file must not steer the terminal."""
+    return {k: re.sub(r"[\x00-\x1f\x7f-\x9f]+", " ", v) if isinstance(v, str) else v for k, v in row.items()}
 
 
 def _headline(row: Row, width: int, colour: bool) -> str:
@@ -157,7 +162,7 @@ def _spectrum_lines(row: Row, width: int) -> list[str]:
         pieces.append(f"FWHM {row['fwhm_angstrom']:.1f} Å")
     if _is_number(row.get("velocity_kms")):
         error = row.get("velocity_err_kms")
-        known = f" ± {error:.0f}" if _is_number(error) else ""  # type: ignore[str-format]
+        known = f" ± {error:.0f}" if _is_number(error) else ""
         pieces.append(f"{row['velocity_kms']:+.0f}{known} km/s")
     if row.get("wave_medium"):
         pieces.append(str(row["wave_medium"]))
@@ -185,7 +190,7 @@ def _parallax_line(row: Row, width: int) -> list[str]:
     sigma = row.get("parallax_sigma")
     if not _is_number(sigma):
         return []
-    size = abs(float(sigma))  # type: ignore[arg-type]
+    size = abs(float(sigma))
     words = "agrees" if size < 2 else "is in tension" if size < 3 else "disagrees"
     return _wrapped("parallax", f"{words} ({sigma:+.1f} sigma)", width)
 
@@ -223,7 +228,7 @@ def _finding_lines(row: Row, width: int) -> list[str]:
     lines: list[str] = []
     if not _type_given(row):
         error = row.get("t_code_err")
-        subtype = f"subtype ± {significant(error, error)}" if _is_number(error) else ""  # type: ignore[arg-type]
+        subtype = f"subtype ± {significant(error, error)}" if _is_number(error) else ""
         lines += _joined("class", [class_sentence(row), subtype], width)
     if row.get("remark"):
         lines += _wrapped("seen", str(row["remark"]), width)
@@ -263,6 +268,7 @@ def star_block(row: Row, budget: Sequence[Row] = (), *, width: int = 80, colour:
     colour : whether to use ANSI colour
     said : cautions told elsewhere, to be left out here
     """
+    row = _harmless(row)
     typed = row.get("status") == "typed"
     lines = [_headline(row, width, colour)]
     if row.get("reason"):
@@ -284,11 +290,12 @@ def star_block(row: Row, budget: Sequence[Row] = (), *, width: int = 80, colour:
 
 def one_line(row: Row, *, width: int = 80, colour: bool = False) -> str:
     """One star on one line, for long lists: name, type or outcome, distance."""
+    row = _harmless(row)
     name = str(row.get("name") or row.get("file") or "")
     if row.get("status") == "typed":
         what, style = str(row.get("mk_type")), "bold"
         low, high = row.get("distance_lo_pc"), row.get("distance_hi_pc")
-        step = (high - low) / 2 if _is_number(low) and _is_number(high) else math.nan  # type: ignore[operator]
+        step = (high - low) / 2 if _is_number(low) and _is_number(high) else math.nan
         far = distance_text(row["distance_pc"], step) if _is_number(row.get("distance_pc")) else ""
     else:
         what, style, far = f"{row.get('status')}: {row.get('reason')}", "warn", ""

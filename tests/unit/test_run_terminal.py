@@ -66,7 +66,8 @@ def test_says_what_matters() -> None:
     for words in (
         "G8 III", "very likely III (88 %), possibly IV (10 %)", "subtype ± 0.62", "530 pc", "68 % 430 to 660 pc",
         "95 % 340 to 800 pc", "log L +1.72 ± 0.17", "R 9.8 ± 1.9 Rsun", "Teff 4990 ± 110 K",
-        "E(B-V) 0.121 ± 0.031", "A_V 0.38", "scale scatter 18 %, class 6 %", "in tension (+2.4 sigma)", "One colour cannot",
+        "E(B-V) 0.121 ± 0.031", "A_V 0.38", "scale scatter 18 %, class 6 %",
+        "in tension (+2.4 sigma)", "One colour cannot",
     ):  # fmt: skip
         assert words in block
 
@@ -133,9 +134,8 @@ def test_summary_counts() -> None:
 
 
 def test_a_caution_that_most_share_is_said_once() -> None:
-    rows = [ROW | {"cautions": "Common to all; with a semicolon. Own one."}] + [
-        ROW | {"cautions": "Common to all; with a semicolon."}
-    ] * 4
+    common = "Common to all; with a semicolon."
+    rows = [ROW | {"cautions": f"{common} Own one."}] + [ROW | {"cautions": common}] * 4
     said = terminal.common_cautions(rows)
     assert said == ("Common to all; with a semicolon.",)
     assert "Own one." in terminal.star_block(rows[0], said=said)
@@ -146,3 +146,9 @@ def test_a_number_and_its_unit_stay_together() -> None:
     for width in range(50, 80):
         for line in terminal.star_block(ROW, BUDGET, width=width).splitlines():
             assert not line.lstrip().startswith(("%", "pc", "Å", "K ", "km/s"))
+
+
+def test_a_name_cannot_steer_the_terminal() -> None:
+    row = ROW | {"name": "\x1b[2Jgone\x07", "remark": "a\x9bb"}
+    for text in (terminal.star_block(row), terminal.one_line(row)):
+        assert not set("\x1b\x07\x9b") & set(text) and "gone" in text
