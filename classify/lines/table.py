@@ -330,5 +330,5 @@ def _prefer(row: dict[str, Any], fits: BulkFits, c: int) -> None:
         return
     like_noise = fits.chi2[0, c] <= 2.0 * fits.dof[0, c]
     small = fits.residual_rms[0, c] <= 0.1 * abs(fits.depth[0, c])
-    if like_noise or small:
+    if like_noise or small or sharper:
         row |= {"ew_angstrom": row["ew_fit_angstrom"], "ew_err_angstrom": row["ew_fit_err_angstrom"], "ew_from": "fit"}
