@@ -46,6 +46,8 @@ def serve(paths: Sequence[str], port: int | None = None, open_browser: bool = Tr
         pass                                       # the way to stop; every decision is on the disk already
     kept = len(night.decisions())
     print(f"\n{kept} of {count} decided ({kept - before} now), kept in {night.log.path}.")
+    if night.afterwards and kept > before:
+        print(night.afterwards)
     return 0
 
 

@@ -71,4 +71,6 @@ def of_run(run_dir: Path) -> Night:
     classifier = Classifier.load(without_libraries=tuple(asked.get("without_libraries", ())),
                                  without_stars=tuple(asked.get("without_stars", ())))
     return Night(stars, classifier, DecisionLog(log_path(run_dir)), lambda path: read_plain(path, medium=medium),
-                 scaling={k: asked.get(k) for k in ("scale", "prior", "rv")})
+                 scaling={k: asked.get(k) for k in ("scale", "prior", "rv")},
+                 afterwards=f"To carry them into the distances: starfathom run {facts.get('targets', 'TARGETS')} "
+                            f"-o {run_dir} --resume")

@@ -54,15 +54,17 @@ class Night:
     read : reads one file, raising SpectrumError
     magnitudes : absolute magnitudes of the plane's cells, for the order of the queue
     scaling : ``scale``, ``prior`` and ``rv`` of the run, for distances
+    afterwards : what to do with the decisions, said at the end
     """
 
     def __init__(self, stars: Sequence[Star], classifier: Any, log: DecisionLog,
                  read: Callable[[str], PlainSpectrum], magnitudes: MagnitudeGrid | None = None,
-                 scaling: dict[str, Any] | None = None) -> None:
+                 scaling: dict[str, Any] | None = None, afterwards: str = "") -> None:
         self.stars = list(stars)
         self.classifier = classifier
         self.log = log
         self.magnitudes = magnitudes
+        self.afterwards = afterwards
         self._read = read
         self._scaling = scaling or {}
         self._far: dict[tuple[int, str], tuple[float, float, float] | None] = {}

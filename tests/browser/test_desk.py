@@ -4,6 +4,8 @@ from __future__ import annotations
 
 import json
 import statistics
+import subprocess
+import sys
 import time
 
 import pytest
@@ -224,7 +226,7 @@ def test_a_crash_loses_nothing(chromium, desk, night):
     assert page.run("return document.querySelector('#star .big').textContent") != star
     page.press("u", "said")
     assert log_of(night).current() == {}
-    assert page.severe() == []
+    assert [m for m in page.severe() if old not in m] == []    # the dead desk's page may well complain
 
 
 def test_ctrl_c_says_what_was_kept(night):
@@ -234,11 +236,10 @@ def test_ctrl_c_says_what_was_kept(night):
     assert "Traceback" not in last and "decided" in last
 
 
-@pytest.mark.parametrize("words", [[], ["no_such_file.fits"]])
-def test_nothing_to_show_is_one_sentence(words, tmp_path):
-    import subprocess
-    import sys
-
+@pytest.mark.parametrize("words", [[], ["no_such_file.fits"], ["PORT"]])
+def test_what_cannot_be_done_is_one_sentence(words, desk, night, tmp_path):
+    if words == ["PORT"]:
+        words = [str(night / "th17_09.fits"), "--port", desk.origin.rsplit(":", 1)[1]]
     command = [sys.executable, "-c", "from starfathom.cli import main; main()", "desk", *words, "--no-browser"]
     done = subprocess.run(command, capture_output=True, text=True, cwd=tmp_path)
     assert done.returncode == 2

@@ -9,7 +9,7 @@ from http.server import BaseHTTPRequestHandler, ThreadingHTTPServer
 from urllib.parse import urlparse
 
 import pytest
-from desk_driver import Page
+from desk_driver import DeskProcess, Page
 
 from starfathom.decisions import DecisionLog
 
@@ -62,6 +62,22 @@ def test_the_websocket_knows_its_own_page(desk):
     assert handshake(desk.address, path, "http://127.0.0.1:1", protocols) == 403
     assert handshake(desk.address, path, "https://evil.example", protocols) == 403
     assert handshake(desk.address, path, "null", protocols) == 403
+
+
+def test_settings_of_the_library_cannot_open_it(night, monkeypatch):
+    """Environment variables that would let any page in, or fetch scripts from elsewhere, are not listened to."""
+    monkeypatch.setenv("BOKEH_ALLOW_WS_ORIGIN", "*")
+    monkeypatch.setenv("BOKEH_RESOURCES", "cdn")
+    desk = DeskProcess(night / "th17_09.fits")
+    try:
+        path = urlparse(desk.address).path
+        status, page = ask(desk.address, path)
+        assert status == 200 and "https://" not in page.replace("http://www.w3.org", "")
+        protocols = f"bokeh, {session_token(desk.address)}"
+        assert handshake(desk.address, path + "ws", "https://evil.example", protocols) == 403
+        assert handshake(desk.address, path + "ws", desk.origin, protocols) == 101
+    finally:
+        desk.stop()
 
 
 EVIL = """<!DOCTYPE html><title>waiting</title><script>
