@@ -180,7 +180,10 @@ def _fits(data: bytes, name: str, shown: str, request: Request) -> RawSpectrum:
             raise SpectrumError(
                 f"{shown}: {beyond} and cannot be unpacked; save it as a plain image or table."
             ) from None
-        return general.read_with_specutils(name, shown, "")
+        try:
+            return general.read_with_specutils(name, shown, "")
+        except SpectrumError:
+            raise SpectrumError(f"{shown}: {beyond}; save it as a plain image or table.") from None
 
 
 def read_spectrum(

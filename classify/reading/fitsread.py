@@ -9,7 +9,7 @@ import numpy as np
 from starfathom.classify.errors import SpectrumError
 from starfathom.classify.reading import dispersion, fitsio, hints
 from starfathom.classify.reading.fitsio import FitsBeyond, FitsError, Hdu
-from starfathom.classify.reading.names import is_companion, log_of, role_of, split_unit
+from starfathom.classify.reading.names import is_companion, log_of, never_wavelength, role_of, split_unit
 from starfathom.classify.reading.raw import ErrorKind, RawSpectrum
 from starfathom.classify.reading.request import Request
 from starfathom.classify.reading.text import in_reach, is_steady
@@ -62,10 +62,13 @@ def read_fits(data: bytes, path: str, request: Request) -> RawSpectrum:
         raise beyond
     if broken:
         reasons.append((6, broken))
-    raise SpectrumError(
-        f"{path}: {max(reasons, default=(0, 'the FITS file holds no data'))[1]}; "
-        "check that this is an extracted, wavelength-calibrated spectrum."
+    weight, why = max(reasons, default=(0, "the FITS file holds no data"))
+    cure = (
+        "the file is cut off or damaged: get it again from its source."
+        if weight >= 6
+        else "check that this is an extracted, wavelength-calibrated spectrum."
     )
+    raise SpectrumError(f"{path}: {why}; {cure}")
 
 
 def _wanted(units: list[Hdu], request: Request, path: str) -> list[Hdu]:
@@ -391,7 +394,7 @@ def _pick_by_values(picked: dict[str, fitsio.Column], columns: list[fitsio.Colum
         return
     if "wave" not in picked and "COEFF0" not in hdu.header and "CRVAL1" not in hdu.header:
         for column in columns[:8]:
-            if column in picked.values() or column.pointer:
+            if column in picked.values() or column.pointer or never_wavelength(column.name):
                 continue
             values = fitsio.column_values(hdu, column)
             if min(values.shape) == 1 and values.size >= 10 and is_steady(values.ravel()) and in_reach(values.ravel()):

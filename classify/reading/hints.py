@@ -11,6 +11,8 @@ from starfathom.classify.spectrum import Medium
 
 #: Speed of light in km/s (exact).
 C_KMS = 299792.458
+#: Wavelength at which a resolving power is turned into a line width, angstrom.
+REFERENCE_ANGSTROM = 5000.0
 _OBJECT = ("OBJECT", "OBJNAME", "TARGNAME", "TARGET", "OBJ", "NAME", "STAR", "DESIG", "TITLE", "SPEC_NAME")
 _EXPTIME = (
     "EXPTIME",
@@ -256,6 +258,8 @@ def meta_of(headers: Iterable[Header]) -> dict[str, Any]:
         _put(meta, "snr", _first_number(header, _SNR, 0, 1e5))
         _put(meta, "resolution", _first_number(header, _RESOLVING, 50, 5e5))
         _put(meta, "fwhm_angstrom", _fwhm(header))
+        power = _first_number(header, ("SPEC_RES", "SPECRP", "RESPOW", "R_POWER"), 100, 5e5)
+        _put(meta, "fwhm_angstrom", None if power is None else REFERENCE_ANGSTROM / power)
         _put(meta, "velocity_kms", _velocity(header))
         _put(meta, "flux_calibrated", _calibrated(header))
     return meta

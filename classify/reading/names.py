@@ -58,6 +58,11 @@ _OTHER_WORDS = _set("""
     gross exptime exposure raw contsub disp fit bestfit template residual airmass width binwidth step tot totexp
     syserror sys syserr
 """)
+#: Columns of catalogues and light curves that run one way as wavelengths do.
+_NEVER_WAVE = _set("""
+    time date jd mjd hjd bjd phase ra dec teff temp temperature logg mag vmag bmag gmag z redshift velocity vel rv mass
+    age radius parallax plx distance dist altitude height order name
+""")
 #: Words that keep a name with "wave" in it from being the wavelength: "wave_err", "flux_per_wave".
 _NOT_WAVE = (_STD_WORDS | set(_FLUX)) - _set("data int i s y object spec")
 
@@ -123,6 +128,11 @@ def role_of(name: str) -> tuple[Role, int]:
 def is_companion(name: str) -> bool:
     """Whether a name says sky, model, response or the like: something beside the flux, never the flux itself."""
     return bool(set(_words(split_unit(name)[0])) & _OTHER_WORDS)
+
+
+def never_wavelength(name: str) -> bool:
+    """Whether a name says time, place, temperature or the like, so that steady values are no wavelengths."""
+    return bool(set(_words(split_unit(name)[0])) & _NEVER_WAVE)
 
 
 def log_of(name: str) -> str:

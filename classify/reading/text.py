@@ -13,7 +13,7 @@ import numpy as np
 from starfathom.classify.errors import SpectrumError
 from starfathom.classify.reading import hints
 from starfathom.classify.reading.finish import guess_spectral_unit
-from starfathom.classify.reading.names import log_of, role_of, split_unit
+from starfathom.classify.reading.names import log_of, never_wavelength, role_of, split_unit
 from starfathom.classify.reading.raw import ErrorKind, RawSpectrum
 from starfathom.classify.reading.request import Request
 from starfathom.classify.reading.units import flux_kind, spectral_unit
@@ -547,7 +547,7 @@ def assign_columns(table: Table, path: str, request: Request) -> RawSpectrum:
     named = bool(picked)
     notes = list(table.notes)
     if "wave" not in picked:
-        picked["wave"] = _find_wave(values, set(picked.values()))
+        picked["wave"] = _find_wave(values, set(picked.values()), names)
     if "flux" not in picked:
         taken = set(picked.values()) | {i for i, n in enumerate(names) if n and role_of(n)[0] == "index"}
         free = [i for i in range(n_columns) if i not in taken and i > picked["wave"]] or [
@@ -600,9 +600,9 @@ def assign_columns(table: Table, path: str, request: Request) -> RawSpectrum:
     return raw
 
 
-def _find_wave(values: FloatArray, taken: set[int]) -> int:
+def _find_wave(values: FloatArray, taken: set[int], names: list[str] | None = None) -> int:
     """The wavelength column by its values: the first steady one in a likely range, not a running number."""
-    free = [i for i in range(values.shape[1]) if i not in taken]
+    free = [i for i in range(values.shape[1]) if i not in taken and not (names and never_wavelength(names[i]))]
     steady = [i for i in free[:8] if is_steady(values[:, i])]
     for i in steady:
         if in_reach(values[:, i]):
