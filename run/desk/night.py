@@ -99,7 +99,11 @@ class Night:
             except SpectrumError as error:
                 spectra.append(error)
         with self._lock:
-            said = self.classifier.classify_many(spectra, [s.settings for s in batch])
+            try:
+                said = self.classifier.classify_many(spectra, [s.settings for s in batch])
+            except Exception as fault:             # a fault in one batch must not leave the rest of the night waiting
+                said = [Assignment(file=s.file, reason=f"could not be measured ({type(fault).__name__}: {fault})")
+                        for s in batch]
         for star, assignment in zip(batch, said):
             star.assignment = assignment
         self._order()

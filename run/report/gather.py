@@ -3,20 +3,36 @@
 from __future__ import annotations
 
 import csv
+import heapq
 import math
+from collections import Counter
+from collections.abc import Iterator
 from dataclasses import dataclass, field
 from functools import cached_property
 from pathlib import Path
 from typing import Any
 
+import numpy as np
+from numpy.typing import NDArray
+
 from starfathom.classify.assignment import Assignment
 from starfathom.decisions import Decision, DecisionLog, log_path
 from starfathom.desk.needs import Need, need
 
+FloatArray = NDArray[np.float64]
+
 #: A page a star up to this many stars; above it only for those that want a look.
 STAR_PAGES = 500
-#: So many stars are listed as wanting a look.
+#: So many stars are listed as wanting a look, and with what need at least.
 WANTED = 12
+WORTH_A_LOOK = 5.0
+#: The summary table lists so many stars; beyond that the tables beside it are the better tool.
+TABLE_ROWS = 5000
+#: Table files, by suffix, and what they are.
+KINDS = {".ecsv": "text with units and descriptions (astropy)", ".csv": "plain text", ".fits": "FITS binary table",
+         ".vot": "VOTable, with UCDs", ".parquet": "Parquet"}
+LOG_T_EDGES: FloatArray = np.linspace(3.3, 4.8, 121)
+LOG_L_EDGES: FloatArray = np.linspace(-4.0, 6.6, 107)
 
 
 @dataclass
@@ -84,23 +100,45 @@ class StarResult:
 
 
 @dataclass
+class Tally:
+    """What is counted over every star of a run, however many."""
+
+    status: Counter[str] = field(default_factory=Counter)
+    with_distance: int = 0
+    by_hand: int = 0
+    #: Stars a cell of the H-R diagram, edges :data:`LOG_T_EDGES` x :data:`LOG_L_EDGES`.
+    diagram: FloatArray = field(default_factory=lambda: np.zeros((len(LOG_T_EDGES) - 1, len(LOG_L_EDGES) - 1)))
+
+    def add(self, star: StarResult) -> None:
+        """Count one star in."""
+        self.status[star.text_of("status")] += 1
+        self.with_distance += math.isfinite(star.number_of("distance_pc"))
+        self.by_hand += star.decision is not None
+        t, lum = star.number_of("teff_k"), star.number_of("log_lum_lsun")
+        if t > 0 and math.isfinite(lum):
+            i = int(np.searchsorted(LOG_T_EDGES, math.log10(t), "right")) - 1
+            j = int(np.searchsorted(LOG_L_EDGES, lum, "right")) - 1
+            if 0 <= i < self.diagram.shape[0] and 0 <= j < self.diagram.shape[1]:
+                self.diagram[i, j] += 1
+
+
+@dataclass
 class RunResult:
-    """A whole run: ``facts`` are its settings and versions, ``tables`` the result files beside the report."""
+    """A whole run: ``facts`` are its settings and versions, ``tables`` the result files beside the report.
+
+    ``stars`` are the first :data:`TABLE_ROWS` of them, ``wanted`` those of all that want a look, neediest first.
+    """
 
     folder: Path
     facts: dict[str, Any]
     stars: list[StarResult]
+    wanted: list[StarResult]
+    tally: Tally
     tables: list[Path]
-
-    @property
-    def wanted(self) -> list[StarResult]:
-        """The stars that want a look, neediest first."""
-        worth = [s for s in self.stars if s.need.score >= 5.0]
-        return sorted(worth, key=lambda s: -s.need.score)[:WANTED]
 
 
 def read_run(run_dir: str | Path) -> RunResult:
-    """Everything the report needs.
+    """Everything the report needs, in memory that does not grow with the number of stars.
 
     Raises
     ------
@@ -109,29 +147,40 @@ def read_run(run_dir: str | Path) -> RunResult:
     from starfathom.record import open_record
 
     folder = Path(run_dir)
-    with open_record(folder) as record:
-        facts = record.facts()
-        details = record.details()
-        machine = {row["name"]: row for row in record.rows()} if details else {}
-        rows = _final_rows(folder) or list(record.rows())
-        budgets = _budgets(folder) or list(record.budget())
     log = DecisionLog(log_path(folder))
     history, holding = log.history(), log.current()
     told: dict[str, list[Decision]] = {}
     for d in history:
         told.setdefault(d.name, []).append(d)
-    parts: dict[str, list[dict[str, Any]]] = {}
-    for part in budgets:
-        parts.setdefault(str(part["name"]), []).append(part)
-    stars = []
-    for k, row in enumerate(rows):
-        name = str(row["name"])
-        detail = details.get(name)
-        if detail is not None:
-            detail = {**detail, "row": machine.get(name, row)}
-        stars.append(StarResult(k, row, parts.get(name, []), detail, told.get(name, []), holding.get(name)))
-    tables = sorted(p for stem in ("results", "budget") for p in folder.glob(f"{stem}.*") if p.is_file())
-    return RunResult(folder, facts, stars, tables)
+    tally = Tally()
+    stars: list[StarResult] = []
+    wanted: list[tuple[float, int, StarResult]] = []
+    with open_record(folder) as record:
+        facts = record.facts()
+        details = record.details() if record.counts()["rows"] <= STAR_PAGES else {}
+        machine = {row["name"]: row for row in record.rows()} if details else {}
+        # the results as written hold hand decisions and all; without them (no ECSV asked for), the record's own
+        for k, row in enumerate(_read_ecsv(folder / "results.ecsv") or record.rows()):
+            name = str(row["name"])
+            detail = details.get(name)
+            if detail is not None:
+                detail = {**detail, "row": machine.get(name, row)}
+            star = StarResult(k, row, [], detail, told.get(name, []), holding.get(name))
+            tally.add(star)
+            if len(stars) < TABLE_ROWS:
+                stars.append(star)
+            if star.need.score >= WORTH_A_LOOK:
+                heapq.heappush(wanted, (star.need.score, -k, star))
+                if len(wanted) > WANTED:
+                    heapq.heappop(wanted)
+        if len(stars) <= STAR_PAGES:
+            by_name = {s.name: s for s in stars}
+            for part in _read_ecsv(folder / "budget.ecsv") or record.budget():
+                if str(part["name"]) in by_name:
+                    by_name[str(part["name"])].budget.append(part)
+    tables = sorted(p for stem in ("results", "budget") for p in folder.glob(f"{stem}*")
+                    if p.suffix in KINDS or p.is_dir())
+    return RunResult(folder, facts, stars, [s for _, _, s in sorted(wanted, reverse=True)], tally, tables)
 
 
 def spectrum_path(facts: dict[str, Any], path: str) -> str:
@@ -142,18 +191,13 @@ def spectrum_path(facts: dict[str, Any], path: str) -> str:
     return str(beside) if beside.is_file() else path
 
 
-def _final_rows(folder: Path) -> list[dict[str, Any]]:
-    """Rows of the results as written, hand decisions and all; empty when the run was asked for no ECSV."""
-    return _read_ecsv(folder / "results.ecsv")
-
-
-def _budgets(folder: Path) -> list[dict[str, Any]]:
-    return _read_ecsv(folder / "budget.ecsv")
-
-
-def _read_ecsv(path: Path) -> list[dict[str, Any]]:
+def _read_ecsv(path: Path) -> Iterator[dict[str, Any]] | None:
+    """Rows one by one as text; None when there is no such file."""
     if not path.is_file():
-        return []
+        return None
+    return _rows_of(path)
+
+
+def _rows_of(path: Path) -> Iterator[dict[str, Any]]:
     with open(path, encoding="utf-8", newline="") as stream:
-        lines = (line for line in stream if not line.startswith("#"))
-        return [dict(row) for row in csv.DictReader(lines)]
+        yield from csv.DictReader(line for line in stream if not line.startswith("#"))

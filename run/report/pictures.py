@@ -13,7 +13,7 @@ from starfathom.classify.assignment import Assignment
 from starfathom.classify.prepared import Prepared
 from starfathom.desk import plane
 from starfathom.desk.windows import Mark, choose_marks, misfit
-from starfathom.report.gather import StarResult
+from starfathom.report.gather import LOG_L_EDGES, LOG_T_EDGES, StarResult
 from starfathom.report.svg import Plot, ticks_between
 from starfathom.templates.subtypes import CLASSES, SUBTYPES
 
@@ -32,11 +32,7 @@ def hr_diagram(stars: Sequence[StarResult], links: dict[int, str]) -> str:
             points.append((s, math.log10(t), lum))
     if not points:
         return ""
-    x = [p[1] for p in points]
-    y = [p[2] for p in points]
-    lo, hi = min(min(x), 3.58) - 0.04, max(max(x), 3.85) + 0.05
-    bottom, top = min(min(y), 0.0) - 0.5, max(max(y), 2.0) + 0.5
-    plot = Plot(600, 430, (hi, lo), (bottom, top), left=52, title="H-R diagram of the run")
+    plot = _hr_axes([p[1] for p in points], [p[2] for p in points])
     for s, a, b in points:
         e_t, e_l = s.number_of("teff_k_err"), s.number_of("log_lum_lsun_err")
         if len(points) <= 400:
@@ -49,10 +45,29 @@ def hr_diagram(stars: Sequence[StarResult], links: dict[int, str]) -> str:
         note = f"{s.name}: {s.text_of('mk_type')}, {10**a:.0f} K, log L {b:.2f}"
         plot.dot(a, b, "hollow" if s.cautions else "dot", 4 if len(points) <= 400 else 1.6, note,
                  links.get(s.number, ""))
-    temperatures = [3000, 4000, 5000, 6000, 8000, 10000, 15000, 20000, 30000, 40000]
-    plot.x_axis([(math.log10(t), str(t)) for t in temperatures if lo < math.log10(t) < hi], "effective temperature, K")
-    plot.y_axis([(v, f"{v:g}") for v in ticks_between(bottom, top, 6)], "log luminosity, Sun = 0")
     return str(plot)
+
+
+def crowded_hr_diagram(counts: FloatArray) -> str:
+    """The same of very many stars, as shade; ``counts`` over the cells of :class:`starfathom.report.gather.Tally`."""
+    seen = np.argwhere(counts > 0)
+    if len(seen) == 0:
+        return ""
+    t, lum = LOG_T_EDGES, LOG_L_EDGES
+    plot = _hr_axes([t[seen[:, 0].min()], t[seen[:, 0].max() + 1]], [lum[seen[:, 1].min()], lum[seen[:, 1].max() + 1]])
+    top = math.log1p(counts.max())
+    for i, j in seen:
+        plot.bar(t[i], t[i + 1], lum[j], lum[j + 1], "dot", 0.15 + 0.85 * math.log1p(counts[i, j]) / top)
+    return str(plot)
+
+
+def _hr_axes(log_t: Sequence[float], log_lum: Sequence[float]) -> Plot:
+    lo, hi = min(*log_t, 3.58) - 0.04, max(*log_t, 3.85) + 0.05
+    bottom, top = min(*log_lum, 0.0) - 0.5, max(*log_lum, 2.0) + 0.5
+    plot = Plot(600, 430, (hi, lo), (bottom, top), left=52, title="H-R diagram of the run")
+    temperatures = [2500, 3000, 4000, 5000, 6000, 8000, 10000, 15000, 20000, 30000, 40000]
+    plot.x_axis([(math.log10(t), str(t)) for t in temperatures if lo < math.log10(t) < hi], "effective temperature, K")
+    return plot.y_axis([(v, f"{v:g}") for v in ticks_between(bottom, top, 6)], "log luminosity, Sun = 0")
 
 
 def spectrum(ready: Prepared, template: FloatArray | None, marks: Sequence[Mark], letter: str) -> str:

@@ -15,13 +15,11 @@ from starfathom.desk.palette import DARK, LIGHT
 from starfathom.desk.texts import figures
 from starfathom.desk.windows import known_marks
 from starfathom.report import pictures
-from starfathom.report.gather import STAR_PAGES, RunResult, StarResult, read_run, spectrum_path
+from starfathom.report.gather import KINDS, STAR_PAGES, RunResult, StarResult, read_run, spectrum_path
 from starfathom.tables import write_text_aside
 
 PAGES = Path(__file__).parent / "pages"
 FOLDER = "stars"
-#: The summary table lists so many stars; beyond that the tables beside it are the better tool.
-TABLE_ROWS = 5000
 ACTIONS = {"accept": "✓ accepted", "amend": "✎ amended", "set aside": "✕ set aside", "undo": "↶ taken back"}
 
 
@@ -33,10 +31,7 @@ def write_report(run_dir: str | Path) -> Path:
     RequestError : the folder holds no run, or cannot be written
     """
     run = read_run(run_dir)
-    if len(run.stars) <= STAR_PAGES:
-        with_page = run.stars
-    else:
-        with_page = [s for s in run.wanted if s.detail is not None]
+    with_page = run.stars if len(run.stars) <= STAR_PAGES else []
     paged = {s.number for s in with_page}
     if with_page:
         (run.folder / FOLDER).mkdir(exist_ok=True)
@@ -101,21 +96,24 @@ def _hand(star: StarResult) -> str:
 
 def front_page(run: RunResult, paged: set[int]) -> str:
     """The first page, whole."""
-    stars = run.stars
-    states = [s.text_of("status") for s in stars]
-    far = sum(math.isfinite(s.number_of("distance_pc")) for s in stars)
-    counts = [(len(stars), "stars"), (states.count("typed"), "with an MK type"), (states.count("refused"), "refused"),
-              (states.count("failed"), "failed"), (far, "with a distance"),
-              (sum(s.decision is not None for s in stars), "decided by hand")]
+    stars, tally = run.stars, run.tally
+    total = tally.status.total()
+    counts = [(total, "stars"), (tally.status["typed"], "with an MK type"), (tally.status["refused"], "refused"),
+              (tally.status["failed"], "failed"), (tally.with_distance, "with a distance"),
+              (tally.by_hand, "decided by hand")]
     title = run.folder.resolve().name
     head = (f'<h1>{escape(title)} <small>report of a run</small></h1><ul class="numbers">'
             + "".join(f"<li><b>{n}</b>{escape(what)}</li>" for n, what in counts) + "</ul>")
-    links = {s.number: f"{FOLDER}/{s.page}" for s in stars if s.number in paged}
-    diagram = pictures.hr_diagram(stars[:TABLE_ROWS], links)
-    hint = '<p class="soft">Hollow: there is a caution. Bars: one standard deviation.</p>' if diagram else ""
+    if total <= len(stars):
+        diagram = pictures.hr_diagram(stars, {s.number: f"{FOLDER}/{s.page}" for s in stars if s.number in paged})
+        words = "Hollow: there is a caution. Bars: one standard deviation."
+    else:
+        diagram = pictures.crowded_hr_diagram(tally.diagram)
+        words = "The darker, the more stars."
+    hint = f'<p class="soft">{words}</p>' if diagram else ""
     body = (head + '<div class="pair">' + _section("Stars that want a look", _wanted(run, paged))
             + _section("H–R diagram", diagram + hint) + "</div>"
-            + _section("Every star", _table(stars[:TABLE_ROWS], paged, len(stars)), "table")
+            + _section("Every star", _table(stars, paged, total), "table")
             + _section("Tables", _tables(run)) + _section("Settings and versions", _facts(run.facts)))
     return _page(title, body, (PAGES / "report.js").read_text(encoding="utf-8"))
 
@@ -195,16 +193,12 @@ def _cell(value: float, digits: int = 3, text: str = "") -> str:
 def _tables(run: RunResult) -> str:
     if not run.tables:
         return ""
-    names = "".join(f'<dt><a href="{escape(p.name)}">{escape(p.name)}</a></dt><dd>{KINDS.get(p.suffix, "")}</dd>'
-                    for p in run.tables)
+    names = "".join(f'<dt><a href="{escape(p.name)}">{escape(p.name)}</a></dt>'
+                    f'<dd>{KINDS.get(p.suffix, "in parts")}</dd>' for p in run.tables)
     log = run.folder / FILE_NAME
     if log.is_file():
         names += f'<dt><a href="{FILE_NAME}">{FILE_NAME}</a></dt><dd>every hand decision, one JSON object a line</dd>'
     return f'<dl class="facts">{names}</dl>'
-
-
-KINDS = {".ecsv": "text with units and descriptions (astropy)", ".csv": "plain text", ".fits": "FITS binary table",
-         ".vot": "VOTable, with UCDs", ".parquet": "Parquet"}
 
 
 def _facts(facts: dict[str, Any]) -> str:

@@ -139,14 +139,23 @@ def test_no_run_no_report(tmp_path):
         write_report(tmp_path)
 
 
-def test_large_runs_get_a_summary_alone(tmp_path):
-    rows = [star(f"s{k}") for k in range(600)]
+def test_large_runs_get_a_summary_alone(tmp_path, monkeypatch):
+    from starfathom.report import gather
+
+    monkeypatch.setattr(gather, "TABLE_ROWS", 550)
+    rows = [star(f"s{k}", distance_hi_pc=130.0 + 5 * (k == 580), mk_type="G2 V" if k % 2 else "K0 III",
+                 log_lum_lsun=0.01 * k) for k in range(600)]
     with create_record(tmp_path / "run") as record:
         record.set_facts({"settings": {}, "versions": {}})
         record.add(BatchResult(0, rows, []))
     write_report(tmp_path / "run")
     assert not list((tmp_path / "run").glob("stars/*.html"))
-    assert (tmp_path / "run" / "report.html").read_text(encoding="utf-8").count("<tr data-is") == 600
+    text = (tmp_path / "run" / "report.html").read_text(encoding="utf-8")
+    assert text.count("<tr data-is") == 550 and "The first 550 of 600" in text
+    run = read_run(tmp_path / "run")
+    assert run.wanted[0].name == "s580"                        # found, though it is not in the table
+    assert run.tally.status.total() == 600 and run.tally.diagram.sum() == 600
+    assert text.count('<rect class="dot"') == (run.tally.diagram > 0).sum()
 
 
 # the pictures --------------------------------------------------------------------------------------------------------
