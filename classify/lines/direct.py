@@ -371,8 +371,9 @@ def widths_at_depths(x: FloatArray, depth: FloatArray, noise: FloatArray, contin
             wide_l = _slope(x, depth, rows, il)
             random = np.hypot(noise[rows, ir] / wide_r, noise[rows, il] / wide_l)
             common = continuum_err * (1.0 - d) * (1.0 / np.abs(wide_r) + 1.0 / np.abs(wide_l))
+            width = hi - lo
         absent = top < d
-        widths[:, j] = np.where(absent, 0.0, np.where(found, hi - lo, np.nan))
+        widths[:, j] = np.where(absent, 0.0, np.where(found, width, np.nan))
         errors[:, j] = np.where(absent, np.nan, np.where(found, np.hypot(random, common), np.nan))
         widths[~np.isfinite(top), j] = np.nan
     return widths, errors

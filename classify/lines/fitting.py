@@ -25,6 +25,7 @@ _MAX_STEPS = 40
 # stop when a step gains less than this times chi2 per degree of freedom: no parameter then moves by more than
 # 0.3 per cent of the error that the residuals allow it
 _GAIN = 1e-5
+_TINY = 1e-9
 _PATIENCE = 5
 _MAX_ROUNDS = 15
 _LOSS_TOLERANCE = 1e-4
@@ -234,13 +235,13 @@ def _descend(problem: _Problem, start: FloatArray,
         new_hessian, new_gradient, new_chi2 = part.normal(trial)
         better = new_chi2 <= old
         gain = old - new_chi2
-        small = (np.abs(gain) <= _GAIN * old / freedom[live]) & (damp <= 0.01)
+        small = (np.abs(gain) <= np.maximum(_GAIN * old / freedom[live], _TINY)) & (damp <= 0.01)
         accepted = np.flatnonzero(better)
         at = live[accepted]
         fitted[at], chi2[at] = trial[accepted], new_chi2[accepted]
         hessian[accepted], gradient[accepted] = new_hessian[accepted], new_gradient[accepted]
         damping[live] = np.where(better, np.maximum(damp * 0.1, 1e-9), damp * 8.0)
-        finished = (better & small) | (damp > 1e7)
+        finished = small | (damp > 1e7)
         converged[live[finished]] = True
         if attempt >= _PATIENCE:
             # centre or width still pressed against its bound: no line of this kind in the window, give up

@@ -531,7 +531,7 @@ def test_read_as_text_reads_what_looks_like_something_else(tmp_path):
 def test_air_or_vacuum_in_words(tmp_path, text, medium):
     spec = read(tmp_path, text + TWO)
     assert spec.medium == medium
-    assert any("air or vacuum" in n for n in spec.notes) is (medium == "unknown")
+    assert (spec.medium_source == "not stated") is (medium == "unknown")
 
 
 def test_hints_in_comments():
