@@ -14,9 +14,9 @@ DUST_HEIGHT_PC = 125.0
 #: Inside the Local Bubble (about 80 pc; Lallement et al. 2003 A&A 411 447) dust is scarce.
 BUBBLE_PC = 80.0
 #: Share of sightlines through a cloud, and mean excess behind one. Broad on purpose: zeta Oph has 0.32 at 112 pc.
-CLOUD_SHARE, CLOUD_EBV = 0.15, 0.6
-#: Latitude factor |sin b| taken when the direction is not known: the bright stars' median.
-SIN_B_UNKNOWN = 0.3
+CLOUD_SHARE, CLOUD_EBV = 0.4, 1.2
+#: Latitude factor |sin b| taken when the direction is not known: that of stars crowding to the plane.
+SIN_B_UNKNOWN = 0.25
 
 
 def galactic_latitude_sine(ra_deg: ArrayLike, dec_deg: ArrayLike) -> FloatArray:
@@ -46,9 +46,22 @@ def mean_cloud(distance_pc: ArrayLike, sin_b: ArrayLike) -> FloatArray:
     return CLOUD_EBV * (0.03 + 0.97 * inside) + 0.0 * np.asarray(sin_b, float)
 
 
+def smooth_width(distance_pc: ArrayLike, sin_b: ArrayLike) -> FloatArray:
+    """Width in mag of the half-normal distribution whose mean is :func:`mean_smooth`."""
+    return mean_smooth(distance_pc, sin_b) * np.sqrt(np.pi / 2.0)
+
+
 def log_density(ebv: ArrayLike, distance_pc: ArrayLike, sin_b: ArrayLike) -> FloatArray:
-    """Natural log of the prior density of E(B-V) >= 0 at a distance in pc: two exponentials, per mag."""
+    """Natural log of the prior density of E(B-V) >= 0 at a distance in pc, per mag.
+
+    A half-normal for the smooth layer and an exponential for clouds. The smooth part has no long tail: else a star with
+    much dust would be pushed to the distance where the layer alone could make it.
+    """
+    return np.log(density(ebv, smooth_width(distance_pc, sin_b), mean_cloud(distance_pc, sin_b)))
+
+
+def density(ebv: ArrayLike, width: FloatArray, cloud: FloatArray) -> FloatArray:
+    """Prior density of E(B-V) >= 0 per mag, for a half-normal of ``width`` and a cloud of mean ``cloud`` (mag)."""
     e = np.asarray(ebv, float)
-    smooth, cloud = mean_smooth(distance_pc, sin_b), mean_cloud(distance_pc, sin_b)
-    density = (1 - CLOUD_SHARE) / smooth * np.exp(-e / smooth) + CLOUD_SHARE / cloud * np.exp(-e / cloud)
-    return np.log(density)
+    smooth = (1 - CLOUD_SHARE) * np.sqrt(2 / np.pi) / width * np.exp(-0.5 * (e / width) ** 2)
+    return smooth + CLOUD_SHARE / cloud * np.exp(-e / cloud)

@@ -1,8 +1,8 @@
 """Extinction in each band per unit of the star's own colour excess, by temperature and R_V.
 
-``data/extinction.ecsv`` holds the curve of Gordon et al. (2023, ApJ 950, 86) integrated over the passbands and a
-spectrum of each temperature; ``extinction_recipe`` makes it. E(B-V) everywhere in this package is the excess of the
-star itself, A_B - A_V; R_V is A_V/E(B-V) of a hot star, so a cool star has a little more A_V for the same excess.
+``data/extinction.ecsv`` holds the curve of Gordon et al. (2023, ApJ 950, 86) integrated over the passbands and an
+observed spectrum of each temperature; ``extinction_recipe`` makes it. E(B-V) everywhere in this package is the excess of the
+star itself, A_B - A_V; R_V is A_V/E(B-V) of a B0 star, so a cool star has a little more A_V for the same excess.
 """
 
 from __future__ import annotations
@@ -29,9 +29,9 @@ def band_terms(band: str) -> FloatArray:
     """Coefficients of one band on the cells of the grid, shape (7, n_cells)."""
     table = read_table("extinction")
     mine = table["band"] == band
-    x = np.log(table["teff_k"][mine])
+    x = np.log(table["teff_k"][mine])[::-1]
     ln_teff = intrinsic().ln_teff
-    return np.stack([np.interp(ln_teff, x, table[term][mine]) for term in TERMS])
+    return np.stack([np.interp(ln_teff, x, table[term][mine][::-1]) for term in TERMS])
 
 
 def evaluate(terms: FloatArray, rv: ArrayLike, ebv: ArrayLike) -> FloatArray:
@@ -47,6 +47,6 @@ def ratio(band: str, teff_k: float, rv: float = RV_MEAN, ebv: float = 0.0) -> fl
         raise ValueError(f"no extinction coefficients for band {band!r}")
     table = read_table("extinction")
     mine = table["band"] == band
-    x = np.log(table["teff_k"][mine])
-    terms = np.array([np.interp(np.log(teff_k), x, table[term][mine]) for term in TERMS])
+    x = np.log(table["teff_k"][mine])[::-1]
+    terms = np.array([np.interp(np.log(teff_k), x, table[term][mine][::-1]) for term in TERMS])
     return float(evaluate(terms, rv, ebv))

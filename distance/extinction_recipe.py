@@ -1,8 +1,9 @@
 """Recipe of ``data/extinction.ecsv``: broad-band extinction from a curve integrated over the star's own light.
 
-Needs astropy, dust_extinction and the passbands of the package ``speclite`` (unpacked; only its data files are read):
+Needs astropy, dust_extinction, the passbands of the package ``speclite`` 1.0.0 and the atlas of Pickles (1998, PASP
+110, 863) as carried by ``Barak`` 0.3.2; both unpacked, and only their data files read:
 
-    python -m starfathom.distance.extinction_recipe --filters DIR/speclite/data/filters
+    python -m starfathom.distance.extinction_recipe --filters speclite/data/filters --atlas barak/data/templates/pickles
 """
 
 from __future__ import annotations
@@ -23,16 +24,16 @@ PASSBANDS = {
     "J": "twomass-J", "H": "twomass-H", "Ks": "twomass-Ks",
     "g": "sdss2010-g", "r": "sdss2010-r", "i": "sdss2010-i", "z": "sdss2010-z",
 }  # fmt: skip
-TEFF_K = np.array([2400, 2800, 3200, 3700, 4300, 5000, 5800, 6800, 8200, 10000, 13000, 18000, 26000, 45000], float)
+#: Spectra of the atlas that stand for each temperature: dwarfs down to G, giants and dwarfs below.
+ATLAS: tuple[tuple[str, str, float], ...] = (
+    ("O5V", "O5", 5), ("B0V", "B0", 5), ("B3V", "B3", 5), ("B8V", "B8", 5), ("A0V", "A0", 5), ("A3V", "A3", 5), ("A5V", "A5", 5),
+    ("F0V", "F0", 5), ("F5V", "F5", 5), ("G0V", "G0", 5), ("G5V", "G5", 5), ("K0V", "K0", 5), ("K0III", "K0", 3),
+    ("K5V", "K5", 5), ("K5III", "K5", 3), ("M0III", "M0", 3), ("M2V", "M2", 5), ("M4V", "M4", 5), ("M5V", "M5", 5),
+)  # fmt: skip
 CURVE_RV = np.linspace(2.35, 5.55, 9)
 A_V_GRID = np.array([0.02, 1.0, 2.5, 4.5, 7.0])
 #: Terms of the fit, powers of (R_V - 3.1) and of E(B-V).
 POWERS = ((0, 0), (1, 0), (2, 0), (3, 0), (0, 1), (1, 1), (0, 2))
-
-
-def planck(wave_angstrom: FloatArray, teff_k: float) -> FloatArray:
-    """Shape of the spectrum, a black body, per unit wavelength, arbitrary scale; shape of ``wave_angstrom``."""
-    return wave_angstrom**-5.0 / np.expm1(1.4387769e8 / (wave_angstrom * teff_k))
 
 
 def band_extinction(
@@ -50,7 +51,24 @@ def fit_terms(rv: FloatArray, ebv: FloatArray, ratio: FloatArray) -> tuple[Float
     return coefficients, float(np.abs(design @ coefficients - ratio).max())
 
 
-def build(filters: Path) -> list[list[object]]:
+def atlas_spectra(folder: Path, wave: FloatArray) -> list[tuple[float, FloatArray]]:
+    """Effective temperature (this package's scale) and flux per unit wavelength of :data:`ATLAS`, hot to cool."""
+    from astropy.io import fits
+
+    from starfathom.distance.grid import cell_of
+    from starfathom.distance.intrinsic import intrinsic
+    from starfathom.templates.subtypes import t_code_of
+
+    out = []
+    for name, subtype, lum in ATLAS:
+        with fits.open(folder / f"{name}.fits") as file:
+            data = file[1].data
+            flux = np.interp(wave, np.asarray(data["wa"], float), np.asarray(data["fl"], float))
+        out.append((float(np.exp(intrinsic().ln_teff[int(cell_of(t_code_of(subtype), lum))])), flux))
+    return sorted(out, key=lambda item: -item[0])
+
+
+def build(filters: Path, atlas: Path) -> list[list[object]]:
     """Rows (band, teff_k, coefficients...) of the table; R_V is that of a hot star in Johnson B and V."""
     import astropy.units as u
     from astropy.table import Table
@@ -64,14 +82,14 @@ def build(filters: Path) -> list[list[object]]:
             wave, np.asarray(table["wavelength"], float), np.asarray(table["response"], float), left=0, right=0
         )
     curves = [G23(Rv=float(rv))(wave * u.AA) for rv in CURVE_RV]
-    hot = planck(wave, 30000.0)
+    spectra = atlas_spectra(atlas, wave)
+    hot = next(flux for teff, flux in reversed(spectra) if teff > 30000)
     hot_rv = []
     for curve in curves:
         a_b, a_v = (band_extinction(wave, hot, response[b], curve, 0.05) for b in "BV")
         hot_rv.append(a_v / (a_b - a_v))
     rows: list[list[object]] = []
-    for teff in TEFF_K:
-        flux = planck(wave, float(teff))
+    for teff, flux in spectra:
         rv, ebv = [], []
         ratio: dict[str, list[float]] = {band: [] for band in PASSBANDS}
         for curve, r in zip(curves, hot_rv):
@@ -83,7 +101,7 @@ def build(filters: Path) -> list[list[object]]:
                     ratio[b].append(a[b] / ebv[-1])
         for band in PASSBANDS:
             coefficients, worst = fit_terms(np.array(rv), np.array(ebv), np.array(ratio[band]))
-            rows.append([band, int(teff), *(round(float(c), 5) for c in coefficients), round(worst, 3)])
+            rows.append([band, round(teff), *(round(float(c), 5) for c in coefficients), round(worst, 3)])
     return rows
 
 
@@ -91,7 +109,9 @@ def main() -> None:
     """Write the table."""
     parser = argparse.ArgumentParser(description=__doc__)
     parser.add_argument("--filters", type=Path, required=True, help="folder with the passband tables of speclite")
-    rows = build(parser.parse_args().filters)
+    parser.add_argument("--atlas", type=Path, required=True, help="folder with the spectra of Pickles 1998 as FITS tables")
+    args = parser.parse_args()
+    rows = build(args.filters, args.atlas)
     names = ["band", "teff_k", *(f"c{p}{q}" for p, q in POWERS), "worst"]
     with open(DATA / "extinction.ecsv", "w", encoding="utf-8") as file:
         file.write("# %ECSV 1.0\n# ---\n# datatype:\n")
@@ -103,8 +123,8 @@ def main() -> None:
             "# delimiter: ','\n# meta: !!omap\n# - title: 'Broad-band extinction per unit E(B-V) of the star itself'\n"
             "# - curve: 'Gordon et al. 2023 ApJ 950 86, as in dust_extinction'\n"
             "# - passbands: 'Bessell 1990, Gaia DR3, 2MASS, SDSS 2010, as carried by speclite 1.0.0'\n"
-            "# - shape: 'black body of teff_k'\n"
-            "# - rv: 'A_V/E(B-V) of a 30000 K star in these B and V, so that R_V = 3.1 keeps its usual meaning'\n"
+            "# - shape: 'spectra of Pickles 1998 PASP 110 863, as carried by Barak 0.3.2 (BSD-3-Clause)'\n"
+            "# - rv: 'A_V/E(B-V) of a B0 V star in these B and V, so that R_V = 3.1 keeps its usual meaning'\n"
             "# schema: astropy-2.0\n"
         )
         file.write(",".join(names) + "\n")

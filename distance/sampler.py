@@ -2,10 +2,11 @@
 
 Each sample of a star draws a type from its assignment, a place in the scatter of the scale, a companion and an R_V.
 Given these, apparent brightness, colour excess E and the deviation of the intrinsic colour follow from the magnitudes
-as a Gaussian in three dimensions, worked out in closed form; E is drawn from that Gaussian times the dust prior at the
-distance expected, cut at zero only there: a measured excess below zero is taken up by the errors and the intrinsic
-colour, so it neither is lost nor piles up at zero. Weights then set right what the draw took for granted: the colours'
-own verdict on the type, the dust at the distance found, and the prior on distance.
+as a Gaussian in three dimensions, worked out in closed form. E is drawn from that Gaussian times the dust prior at the
+distance the type leads to expect. E itself is never negative, but a measured excess below zero is taken up by the
+errors and the intrinsic colour, so it neither is lost nor piles up at zero. The dust prior speaks of E alone: it does not
+move a star to the distance where the layer would make up the dust it has, for dust is too patchy for that. Weights then
+bring in the colours' own verdict on the type, luminosities measured otherwise, and the prior on distance.
 
 All stars share one set of stratified numbers (a Latin hypercube), so that the answer for a star depends on its own
 data and the seed alone, not on its neighbours in the list.
@@ -240,23 +241,27 @@ def draw(stars: list[Star], scale: Scale, prior: str, n_samples: int, seed: int)
     base = mean + slope * follow_of(colour_guess)
     middle, _, _ = place(base, m0_guess)
     d_guess = 10 ** (0.2 * np.clip(m0_guess - base - middle + companion, -10, 30) + 1)
-    smooth, cloud = dust.mean_smooth(d_guess, sin_b), dust.mean_cloud(d_guess, sin_b)
+    layer, cloud = dust.smooth_width(d_guess, sin_b), dust.mean_cloud(d_guess, sin_b)
 
-    # --- E(B-V): Gaussian times two exponentials (or times nothing, where the user gave a prior of their own)
+    # --- E(B-V): the Gaussian times a half-normal or an exponential (or nothing, where the user gave a prior of their own)
     own_prior = np.array([v is not None for v in given_prior])[:, None]
-    log_part, shift_part = [], []
-    for amount, length in ((1 - dust.CLOUD_SHARE, smooth), (dust.CLOUD_SHARE, cloud)):
-        inverse = np.where(own_prior, 0.0, 1.0 / length)
-        moved = centre - inverse / precision
-        log_part.append(
-            np.log(amount) - np.where(own_prior, 0.0, np.log(length))
-            + inverse * (0.5 * inverse / precision - centre) + log_ndtr(moved / spread)
-        )  # fmt: skip
-        shift_part.append(moved)
-    log_sum = np.logaddexp(*log_part)
-    use_cloud = u[6] > np.exp(log_part[0] - log_sum)
-    moved = np.where(use_cloud, shift_part[1], shift_part[0])
-    ebv = moved - spread * ndtri_exp(np.log(u[7]) + log_ndtr(moved / spread))
+    tight = precision + 1.0 / layer**2
+    centre_layer, spread_layer = centre * precision / tight, 1.0 / np.sqrt(tight)
+    log_layer = (
+        np.log((1 - dust.CLOUD_SHARE) * np.sqrt(2 / np.pi) / layer)
+        - 0.5 * centre * centre_layer / layer**2
+        + np.log(spread_layer / spread)
+        + log_ndtr(centre_layer / spread_layer)
+    )
+    centre_cloud = centre - 1.0 / (cloud * precision)
+    log_cloud = (
+        np.log(dust.CLOUD_SHARE / cloud) + (0.5 / (cloud * precision) - centre) / cloud + log_ndtr(centre_cloud / spread)
+    )
+    log_sum = np.where(own_prior, log_ndtr(centre / spread), np.logaddexp(log_layer, log_cloud))
+    use_cloud = u[6] > np.exp(log_layer - log_sum)
+    middle_e = np.where(own_prior, centre, np.where(use_cloud, centre_cloud, centre_layer))
+    spread_e = np.where(use_cloud | own_prior, spread, spread_layer)
+    ebv = middle_e - spread_e * ndtri_exp(np.log(u[7]) + log_ndtr(middle_e / spread_e))
     ebv = np.maximum(ebv, 0.0)
     colour = (gy - kg * ebv) / gg + z[8] / np.sqrt(gg)
     v_noise = z[9] / np.sqrt(w_)
@@ -267,9 +272,7 @@ def draw(stars: list[Star], scale: Scale, prior: str, n_samples: int, seed: int)
     m_v = base + scatter
     modulus = np.clip(m0 - m_v + companion, -12.0, 30.0)
     distance = 10 ** (0.2 * modulus + 1)
-    in_proposal = (1 - dust.CLOUD_SHARE) / smooth * np.exp(-ebv / smooth) + dust.CLOUD_SHARE / cloud * np.exp(-ebv / cloud)
-    at_distance = dust.log_density(ebv, distance, sin_b)
-    log_w = log_w + log_sum + evidence + np.where(own_prior, 0.0, at_distance - np.log(np.maximum(in_proposal, 1e-300)))
+    log_w = log_w + log_sum + evidence
     log_w = log_w + priors.log_prior(prior, distance, sin_b, step)
 
     # --- equal weights
@@ -287,7 +290,7 @@ def draw(stars: list[Star], scale: Scale, prior: str, n_samples: int, seed: int)
 
     cell = np.take_along_axis(cell, pick, axis=1)
     colour, ebv, rv = taken(colour), taken(ebv), taken(rv)
-    prior_var = np.where(use_cloud, cloud, smooth) ** 2
+    prior_var = np.where(use_cloud, cloud, layer) ** 2
     by_data = kk + np.array([1.0 / max(v[1], 1e-3) ** 2 if v else 0.0 for v in given_prior])[:, None]
     prior_part = np.clip(taken(1.0 / (1.0 + by_data * prior_var)).mean(axis=1), 0, 1)
     limit = ODD_FOLLOW * scale.bv_scatter[cell]
