@@ -11,6 +11,7 @@ from starfathom.classify.reading.units import (
     HC_EV_ANGSTROM,
     SpectralUnit,
     flux_kind,
+    logarithm_of,
     spectral_unit,
 )
 from starfathom.classify.spectrum import BoolArray, FloatArray, PlainSpectrum
@@ -101,8 +102,6 @@ def finish(raw: RawSpectrum, path: str) -> PlainSpectrum:
         meta["flux_calibrated"] = True
     elif kind in ("counts", "normalised"):
         meta["flux_calibrated"] = False
-    if medium == "unknown":
-        notes.append("nothing says whether the wavelengths are in air or vacuum")
     return PlainSpectrum(wave, flux, sigma, valid, medium, medium_source, path, tuple(dict.fromkeys(notes)), meta)
 
 
@@ -111,12 +110,25 @@ def _to_angstrom(wave: FloatArray, raw: RawSpectrum, path: str, notes: list[str]
     if not np.isfinite(wave).any():
         raise SpectrumError(f"{path}: the wavelengths are all missing or not numbers; check the dispersion.")
     with np.errstate(over="ignore", divide="ignore", invalid="ignore"):
+        log, inner = logarithm_of(raw.wave_unit)
+        if log:
+            raw.wave_is_log, raw.wave_unit = raw.wave_is_log or log, inner
         unit = spectral_unit(raw.wave_unit) if raw.wave_unit else None
         if raw.wave_is_log:
             wave = 10.0**wave if raw.wave_is_log == "log10" else np.exp(wave)
             if unit is None:
                 inside = _share_inside(wave)
                 unit = SpectralUnit("wavelength", 1.0) if inside > 0 or _share_inside(wave * 10) == 0 else None
+        if (
+            unit is not None
+            and unit.kind == "wavelength"
+            and not raw.wave_is_log
+            and _share_inside(wave * unit.scale) == 0
+        ):
+            finite = wave[np.isfinite(wave)]
+            if finite.min() >= 3.3 and finite.max() <= 4.4:
+                notes.append(f"wavelengths stated in {raw.wave_unit} look like log10 of angstrom: taken so")
+                return 10.0**wave, False
         if unit is None:
             if raw.wave_unit:
                 notes.append(f"wavelength unit {raw.wave_unit!r} is not known: told from the values")

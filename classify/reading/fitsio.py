@@ -17,6 +17,8 @@ from numpy.typing import NDArray
 BLOCK, CARD = 2880, 80
 MAX_HEADER_BLOCKS = 4000
 MAX_HDUS = 400
+#: Most values read from one column or image, so that a few float64 copies stay well below 1 GB.
+MAX_CELLS = 5_000_000
 _END = re.compile(rb"END {77}")
 _NUMBER = re.compile(r"[-+]?(\d+\.?\d*|\.\d+)([EeDd][-+]?\d+)?")
 _IMAGE_TYPES = {8: "u1", 16: ">i2", 32: ">i4", 64: ">i8", -32: ">f4", -64: ">f8"}
@@ -347,6 +349,8 @@ def column_values(hdu: Hdu, column: Column) -> NDArray[np.float64]:
     if rows < 1:
         raise FitsError(f"{hdu} is a table with no rows")
     hdu.need(row_bytes * rows)
+    if rows * column.repeat > MAX_CELLS:
+        raise FitsError(f"column {column.name} of {hdu} has too many values for one spectrum")
     if column.pointer:
         values = _from_heap(hdu, column, kind, row_bytes, rows)
     else:

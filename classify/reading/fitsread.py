@@ -119,7 +119,7 @@ def _from_image(hdu: Hdu, units: list[Hdu], request: Request) -> RawSpectrum | t
         several = len(long) == 2 and ("COEFF0" in hdu.header or max(sizes) > 4 * min(sizes))
         hint = " (a row of it can be picked by its number)" if several else ""
         return 4, f"{hdu} is a {text} image, not a one-dimensional spectrum{hint}"
-    if max(sizes) > 5_000_000:
+    if max(sizes) > fitsio.MAX_CELLS:
         hdu.need()
         return 4, f"{hdu} has {max(sizes)} pixels along the spectrum, too many for one spectrum"
     values = fitsio.image(hdu)
@@ -308,7 +308,7 @@ def _from_table(hdu: Hdu, units: list[Hdu], request: Request) -> RawSpectrum | t
         return 2, f"{hdu} is a table with no rows"
     if flux is None:
         return 2, f"{hdu} is a table without a flux column (it has {names})"
-    if header.whole("NAXIS2") > 20_000_000:
+    if header.whole("NAXIS2") > fitsio.MAX_CELLS:
         hdu.need()
         return 4, f"{hdu} has {header.whole('NAXIS2')} rows, too many for one spectrum"
     flux_values = _cells(hdu, flux, request)
@@ -324,10 +324,6 @@ def _from_table(hdu: Hdu, units: list[Hdu], request: Request) -> RawSpectrum | t
         raw = RawSpectrum(
             _cells(hdu, wave, request), flux_values, wave.unit or split_unit(wave.name)[1], "", log_of(wave.name)
         )
-        if raw.wave_is_log and raw.wave_unit.lower().startswith("log"):
-            raw.wave_unit = split_unit(raw.wave_unit)[1]
-        elif raw.wave_unit.lower().startswith("log"):
-            raw.wave_is_log, raw.wave_unit = "log10", ""
     raw.flux_unit = flux.unit or _implied(flux.name)
     for role in ("std", "ivar", "var", "snr"):
         column = picked.get(role)

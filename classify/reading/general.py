@@ -21,6 +21,8 @@ from starfathom.classify.spectrum import Medium
 if TYPE_CHECKING:
     from specutils import Spectrum
 
+#: Largest VOTable that is parsed, in bytes.
+MAX_VOTABLE = 8 << 20
 #: Most pixels that are unpacked from a compressed image.
 _MAX_UNPACKED = 20_000_000
 
@@ -31,6 +33,9 @@ def plain_fits(data: bytes, path: str) -> bytes:
     Raises SpectrumError when it holds more than a spectrum needs, or cannot be unpacked.
     """
     for hdu in fitsio.hdus(data):
+        hdu.need()
+        if hdu.kind == "ascii table" and hdu.header.whole("NAXIS2") > fitsio.MAX_CELLS // 5:
+            raise SpectrumError(f"{path}: {hdu} has too many rows for one spectrum; extract the spectrum first.")
         sizes = [hdu.header.whole(f"ZNAXIS{i + 1}") for i in range(min(hdu.header.whole("ZNAXIS"), 9))]
         if sizes and int(np.prod(sizes, dtype=object)) > _MAX_UNPACKED:
             raise SpectrumError(
@@ -63,6 +68,8 @@ def plain_fits(data: bytes, path: str) -> bytes:
 
 def read_votable(data: bytes, path: str, request: Request) -> RawSpectrum:
     """The first table of a VOTable document that holds a spectrum."""
+    if len(data) > MAX_VOTABLE:
+        raise SpectrumError(f"{path}: {len(data) >> 20} MB of VOTable is too much for one spectrum; extract it first.")
     if b"<!ENTITY" in data:
         raise SpectrumError(f"{path}: the VOTable defines entities, which is not safe to read; write it without them.")
     from astropy.io.votable import parse

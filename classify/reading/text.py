@@ -249,6 +249,9 @@ def _slow(text: str, path: str) -> Table:
             raise SpectrumError(f"{path}: {_ONE_COLUMN}.")
         raise SpectrumError(f"{path}: {_NO_ROWS}.")
     _, separator, decimal = best
+    pairs = separator == "," and _paired(sample)
+    if pairs:
+        lines = [_PAIR.sub(r"\1.\2", line) if _may_be_data(line) else line for line in lines]
     rows: list[list[float]] = []
     remarks: list[str] = []
     heading: list[str] = []
@@ -283,9 +286,8 @@ def _slow(text: str, path: str) -> Table:
         table.notes.append(f"{len(rows) - len(kept)} short rows left out")
     if odd:
         table.notes.append(f"{odd} lines that hold no numbers left out")
-    if decimal == ",":
+    if decimal == "," or pairs:
         table.notes.append("decimal commas read")
-    table = _comma_pairs(table, separator)
     _headings(table, heading, table.values.shape[1], separator)
     return table
 
@@ -365,21 +367,24 @@ def _known_cell(text: str) -> bool:
     return True
 
 
-def _comma_pairs(table: Table, separator: str) -> Table:
-    """Undo "4000,5,1,25": decimal commas with commas between columns, seen by their halves being whole numbers."""
-    values = table.values
-    if separator != "," or values.shape[1] not in (4, 6) or not np.all(values == np.rint(values)):
-        return table
-    if np.all(np.diff(values[:, 0]) > 0) or np.any(values[:, 1::2] < 0):
-        return table
-    digits = [
-        10.0 ** np.maximum(np.ceil(np.log10(np.maximum(values[:, i], 1) + 1)), 1).max()
-        for i in range(1, values.shape[1], 2)
-    ]
-    merged = values[:, ::2] + values[:, 1::2] / np.array(digits)
-    if np.all(np.diff(merged[:, 0]) > 0):
-        return Table(merged, remarks=table.remarks, notes=[*table.notes, "decimal commas read between commas"])
-    return table
+_PAIRS = re.compile(r"\s*[-+]?\d+,\d+(,[-+]?\d+,\d+)+\s*")
+_PAIR = re.compile(r"([-+]?\d+),(\d+)")
+
+
+def _paired(sample: list[str]) -> bool:
+    """Whether rows such as "4000,05,1,25" are decimal commas with commas between the columns.
+
+    They are when zeros lead a second half, as no whole number is written, or when the first halves repeat while the
+    pairs run one way.
+    """
+    if len(sample) < 20 or not all(_PAIRS.fullmatch(line) for line in sample):
+        return False
+    first = [_PAIR.findall(line)[0] for line in sample]
+    if any(len(half) > 1 and half[0] == "0" for line in sample for _, half in _PAIR.findall(line)):
+        return True
+    whole = np.array([float(a) for a, _ in first])
+    merged = np.array([float(f"{a}.{b}") for a, b in first])
+    return not np.all(np.diff(whole) != 0) and bool(np.all(np.diff(merged) > 0) or np.all(np.diff(merged) < 0))
 
 
 # --- headings -------------------------------------------------------------------------------------------------------
@@ -573,9 +578,6 @@ def assign_columns(table: Table, path: str, request: Request) -> RawSpectrum:
     if not wave_unit:
         wave_unit = _unit_in_words(table.remarks, values[:, picked["wave"]])
     log = log_of(wave_name)
-    if wave_unit.lower().startswith(("log", "ln")):
-        log = log or ("ln" if wave_unit.lower().startswith("ln") else "log10")
-        wave_unit = split_unit(wave_unit)[1]
     flux_unit = request.flux_unit or (units[picked["flux"]] if units else "") or flux_name
     if flux_kind(flux_unit) == "unknown":
         flux_unit = next((x for x in (f"{flux_name} [{flux_unit}]", flux_name) if flux_kind(x) != "unknown"), flux_unit)

@@ -84,6 +84,14 @@ def spectral_unit(text: str) -> SpectralUnit | None:
     return None
 
 
+def logarithm_of(text: str) -> tuple[str, str]:
+    """ "log10" or "ln" and the unit inside, of a unit such as ``log(Angstrom)`` or ``dex(nm)``; ("", text) of others."""
+    match = re.fullmatch(r"\s*(log(?:10)?|lg|ln|dex)\s*[\s(\[]\s*([^)\]]*)[)\]]?\s*", text[:80], re.I)
+    if match is None:
+        return ("log10", "") if text.strip().lower() in ("log", "log10", "dex") else ("", text)
+    return "ln" if match.group(1).lower() == "ln" else "log10", match.group(2).strip()
+
+
 #: Ways of stating brightness. "f_lambda" needs nothing; the others are turned into it up to a constant.
 FluxKind = Literal[
     "f_lambda", "f_nu", "nu_f_nu", "counts", "photons", "normalised", "mag_ab", "mag_st", "mag", "unknown"

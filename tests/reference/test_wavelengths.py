@@ -42,7 +42,7 @@ def save(folder, *units):
 @pytest.mark.parametrize(
     "vacuum,air,what",
     [
-        # Stone et al., mise en pratique of the metre: 632.99121 nm in vacuum; 632.816 nm in standard air (common practice)
+        # mise en pratique of the metre: 632.99121 nm in vacuum; 632.816 nm in standard air (common practice)
         (6329.9121, 6328.16, "He-Ne laser"),
         # NIST Atomic Spectra Database, from memory
         (5891.5833, 5889.9510, "Na D2"),
@@ -320,7 +320,7 @@ def test_specutils_frequency_axis_and_errors():
     assert plain.medium == "vacuum" and plain.wave_angstrom[0] == pytest.approx(2997924.58 / 700)
     with pytest.raises(SpectrumError, match="not one spectrum"):
         plain_from_specutils(Spectrum(flux=np.ones((3, N)) * u.Jy, spectral_axis=np.linspace(400, 700, N) * u.nm))
-    with pytest.raises(SpectrumError, match="no\\s+wavelengths"):
+    with pytest.raises(SpectrumError, match="gives no wavelengths"):
         plain_from_specutils(Spectrum(flux=SHAPE * u.Jy, spectral_axis=np.arange(N) * u.pix))
 
 

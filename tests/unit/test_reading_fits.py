@@ -366,6 +366,54 @@ def test_hdu_asked_for(tmp_path):
         read(tmp_path, data, columns="hdu=7")
 
 
+def test_plate_of_spectra_by_row(tmp_path):
+    """Stacks of fibres with inverse variances and masks in extensions of the same shape."""
+    stack = np.stack([FLUX_LOG * (i + 1) for i in range(20)])
+    mask = np.zeros(stack.shape, np.int32)
+    mask[3, 8] = 1
+    data = as_bytes(
+        image(stack, COEFF0=LOG_WAVE[0], COEFF1=2.4e-4),
+        image((0.01 * stack) ** -2.0, fits.ImageHDU, "IVAR"),
+        image(mask, fits.ImageHDU, "ANDMASK"),
+    )
+    spec = read(tmp_path, data, columns="row=4")
+    assert spec.valid.sum() == N - 1 and not spec.valid[8]
+    keep = spec.valid
+    np.testing.assert_allclose(spec.flux[keep], stack[3][keep], rtol=1e-12)
+    np.testing.assert_allclose(spec.sigma[keep] / spec.flux[keep], 0.01, rtol=1e-9)
+    with pytest.raises(SpectrumError, match="row of it can be picked"):
+        read(tmp_path, data)
+
+
+def test_unnamed_extension_of_likely_errors(tmp_path):
+    spec = read(tmp_path, as_bytes(image(FLUX, **LINEAR), fits.ImageHDU(SIGMA)))
+    same_star(spec, sigma=SIGMA)
+    assert any("unnamed HDU 1 taken as one standard deviation" in n for n in spec.notes)
+    same_star(read(tmp_path, as_bytes(image(FLUX, **LINEAR), fits.ImageHDU(-SIGMA))))
+
+
+@pytest.mark.parametrize("name,medium", [("Wave_vac", "vacuum"), ("LAMBDA_AIR", "air"), ("WAVE", "unknown")])
+def test_air_or_vacuum_in_a_column_name(tmp_path, name, medium):
+    assert read(tmp_path, table({name: WAVE, "FLUX": FLUX})).medium == medium
+
+
+@pytest.mark.parametrize("name", ["TEFF", "TIME", "RA", "MJD"])
+def test_steady_columns_of_catalogues_are_no_wavelengths(tmp_path, name):
+    with pytest.raises(SpectrumError, match="without a wavelength column"):
+        read(tmp_path, table({name: WAVE, "FLUX": FLUX}))
+
+
+def test_resolving_power_gives_a_line_width(tmp_path):
+    """A resolving power of 2500 is an FWHM of 2 A at 5000 A."""
+    spec = read(tmp_path, as_bytes(image(FLUX, SPEC_RES=2500.0, **LINEAR)))
+    assert spec.meta["fwhm_angstrom"] == 2.0
+
+
+def test_table_coordinate_type_without_its_table(tmp_path):
+    with pytest.raises(SpectrumError, match="WAVE-TAB needs a general reader"):
+        read(tmp_path, as_bytes(image(FLUX, CTYPE1="WAVE-TAB", CRVAL1=1.0, CDELT1=1.0)))
+
+
 def test_row_asked_for(tmp_path):
     stack = np.stack([FLUX * (i + 1) + i * WAVE / 100 for i in range(12)])
     data = as_bytes(image(stack, **LINEAR))
@@ -549,6 +597,11 @@ def test_table_error_kinds(tmp_path, name, values):
         ("0.1 nm", WAVE),
         ("Angstroms", WAVE),
         ("log(Angstrom)", np.log10(WAVE)),
+        ("dex(Angstrom)", np.log10(WAVE)),
+        ("log(nm)", np.log10(WAVE / 10)),
+        ("log10 nm", np.log10(WAVE / 10)),
+        ("ln(Angstrom)", np.log(WAVE)),
+        ("Angstrom", np.log10(WAVE)),
         ("Hz", 2.99792458e18 / WAVE),
     ],
 )

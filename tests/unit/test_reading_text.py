@@ -7,7 +7,7 @@ import io
 
 import numpy as np
 import pytest
-from reading_star import FLUX, SIGMA, WAVE, lines, read, same_star
+from reading_star import FLUX, SIGMA, WAVE, flux_at, lines, read, same_star
 
 from starfathom.classify.errors import RequestError, SpectrumError
 from starfathom.classify.reading.text import cell, text_meta
@@ -85,6 +85,34 @@ TWO_COLUMNS = {
     "numbered header": "# column 1: wavelength (angstrom)\n# column 2: flux\n" + TWO,
     "cells that say nothing": "wave flux note\n" + "".join(f"{a:.6f} {b:.6f} good\n" for a, b in zip(WAVE, FLUX)),
     "form feed at the end": TWO + "\x1a",
+    "german, decimal comma": "Wellenlänge;Fluss\n" + comma(lines([WAVE, FLUX], ";")),
+    "spanish, nm": "Longitud de onda (nm);Flujo\n" + lines([WAVE / 10, FLUX], ";", "%.7f"),
+    "french, nm": "Longueur d'onde (nm)\tIntensité\n" + lines([WAVE / 10, FLUX], "\t", "%.7f"),
+    "index without a name": ",wave,flux\n"
+    + "".join(f"{i},{a:.6f},{b:.6f}\n" for i, (a, b) in enumerate(zip(WAVE, FLUX))),
+    "thousands commas": "".join(f"{a:,.3f} {b:.5f}\n" for a, b in zip(WAVE, FLUX)),
+    "quoted decimal commas": "".join(f'"{a:.4f}";"{b:.5f}"\n'.replace(".", ",") for a, b in zip(WAVE, FLUX)),
+    "decimal and dividing commas": "".join(
+        f"{a:.4f},{b:.5f}\n".replace(".", ";").replace(",", "\t").replace(";", ",").replace("\t", ",")
+        for a, b in zip(WAVE, FLUX)
+    ),
+    "separator named": "sep=;\nwave;flux\n" + lines([WAVE, FLUX], ";"),
+    "count line": f"{WAVE.size}\n" + TWO,
+    "count line of two": f"{WAVE.size} 2\n" + TWO,
+    "name line": "HD 12345\n" + TWO,
+    "name line with numbers": "BD+20 1234 V=9.5\n" + TWO,
+    "dashes": "-----\nWave  Flux\n-----\n" + TWO + "-----\n",
+    "begin and end": "BEGIN SPECTRUM\n" + TWO + "END SPECTRUM\n",
+    "markdown": "| wave | flux |\n|---|---|\n" + "".join(f"| {a:.6f} | {b:.6f} |\n" for a, b in zip(WAVE, FLUX)),
+    "typeset table": "".join(f"{a:.6f} & {b:.6f} \\\\\n" for a, b in zip(WAVE, FLUX)),
+    "columns as rows": lines([*np.stack([WAVE, FLUX]).T], " "),
+    "log of a quotient": "log10(lambda/nm) flux\n" + lines([np.log10(WAVE / 10), FLUX], fmt="%.12g"),
+    "log with its unit inside": "log(lambda [A]),flux\n" + lines([np.log10(WAVE), FLUX], ",", "%.12g"),
+    "wavelength error beside": "wave,wave_err,flux\n" + lines([WAVE, 0 * WAVE + 0.1, FLUX], ","),
+    "bin width beside": "lambda dlambda flux\n" + lines([WAVE, 0 * WAVE + 3, FLUX]),
+    "non-breaking blanks": TWO.replace(" ", "\u00a0"),
+    "unit among superscripts": "wave (Å)\tflux (10⁻¹⁶ erg/cm²/s/Å)\n" + lines([WAVE, FLUX], "\t"),
+    "a sentence with as many words": "# vac. wavelengths [A]\n" + TWO,
 }
 
 
@@ -351,6 +379,10 @@ def test_utf16(tmp_path):
     same_star(read(tmp_path, ("# wavelength flux\n" + TWO).encode("utf-16")))
 
 
+def test_utf16_without_a_mark(tmp_path):
+    same_star(read(tmp_path, TWO.encode("utf-16-le")))
+
+
 def test_latin1(tmp_path):
     same_star(read(tmp_path, "# longueur d'onde en \xc5, étoile\n".encode("latin-1") + TWO.encode()))
 
@@ -363,6 +395,25 @@ def test_the_name_does_not_matter(tmp_path):
     same_star(read(tmp_path, TWO, "star.fits"))
     same_star(read(tmp_path, TWO, "star.jpg"))
     same_star(read(tmp_path, lines([WAVE, FLUX], ";"), "star.csv"))
+
+
+def test_decimal_and_dividing_commas_without_leading_zeros(tmp_path):
+    """Half-angstrom steps: the whole angstroms repeat while the pairs run on."""
+    w = 4000 + 0.5 * np.arange(1000)
+    f = np.round(flux_at(w), 1)
+    rows = "".join(f"{int(a)},{round(a % 1 * 10)},{int(b)},{round(b % 1 * 10)}\n" for a, b in zip(w, f))
+    spec = read(tmp_path, rows)
+    same_star(spec, w, f)
+    assert "decimal commas read" in spec.notes
+
+
+def test_whole_numbers_between_commas_are_not_decimals(tmp_path):
+    w = 4000.0 + 3 * np.arange(1000)
+    f = np.round(100 * flux_at(w))
+    rows = "".join(f"{a:.0f},{b:.0f},{c:.0f},{d:.0f}\n" for a, b, c, d in zip(w, f, f / 50 + 1, f / 3))
+    spec = read(tmp_path, rows)
+    np.testing.assert_array_equal(spec.wave_angstrom, w)
+    np.testing.assert_array_equal(spec.flux, f)
 
 
 # --- ECSV, numpy ----------------------------------------------------------------------------------------------------
