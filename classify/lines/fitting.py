@@ -100,6 +100,7 @@ def tie(components: int, is_voigt: bool, shared: bool) -> Ties:
 class Fits:
     """Result of a batch: ``full`` (j, k, s) parameters, ``covariance`` (j, k s, k s), ``chi2``, ``dof``, ``free``.
 
+    ``evidence_chi2`` lets the side bands move within their errors and is what profiles are compared by.
     ``loss`` (j, 2) is the mean depth of the profiles in the blue and the red side band.
     ``converged`` is False where the steps ran out or a free parameter ended on its bound (zero excepted).
     """
@@ -107,6 +108,7 @@ class Fits:
     full: FloatArray
     covariance: FloatArray
     chi2: FloatArray
+    evidence_chi2: FloatArray
     dof: FloatArray
     free: int
     pixels: FloatArray
@@ -116,7 +118,7 @@ class Fits:
     @property
     def bic(self) -> FloatArray:
         """chi2 + (free parameters) ln(pixels), the Bayesian information criterion up to a constant."""
-        return self.chi2 + self.free * np.log(np.maximum(self.pixels, 1.0))
+        return self.evidence_chi2 + self.free * np.log(np.maximum(self.pixels, 1.0))
 
 
 def _depth(x: FloatArray, fitted: FloatArray, base: FloatArray, ties: Ties) -> tuple[FloatArray, FloatArray]:
@@ -369,13 +371,22 @@ def _finish(jobs: Jobs, fitted: FloatArray, loss: FloatArray, base: FloatArray, 
     covariance = inverse @ meat @ inverse.transpose(0, 2, 1)
     # the side bands' own errors move all pixels together
     seen = 1.0 - problem.target
-    for band, share in ((0, 1.0 - jobs.share_red), (1, jobs.share_red)):
-        push = np.matmul(weighted, (seen * share)[:, :, None])[:, :, 0]
-        shift = np.einsum("jab,jb->ja", inverse, push)
-        covariance = covariance + jobs.band_var[:, band, None, None] * shift[:, :, None] * shift[:, None, :]
+    modes = np.stack([seen * (1.0 - jobs.share_red), seen * jobs.share_red], axis=1)
+    push = np.matmul(weighted, modes.transpose(0, 2, 1))
+    shift = inverse @ push
+    covariance = covariance + np.matmul(shift * jobs.band_var[:, None, :], shift.transpose(0, 2, 1))
     full = (base + fitted @ ties.matrix).reshape(-1, ties.components, ties.per_component)
     pixels = (jobs.weight > 0).sum(axis=1).astype(float)
-    chi2 = (problem.weight * (problem.target - depth) ** 2).sum(axis=1)
+    residual = problem.target - depth
+    chi2 = (problem.weight * residual**2).sum(axis=1)
+    # what is left when the side bands may move within their errors and the line with them: a wrong pseudo-continuum
+    # is a pedestal that a profile with wings would otherwise explain better than one without
+    held = modes * problem.weight[:, None, :]
+    stiff = np.matmul(held, modes.transpose(0, 2, 1)) - np.matmul(push.transpose(0, 2, 1), shift)
+    stiff[:, [0, 1], [0, 1]] += 1.0 / np.maximum(jobs.band_var, 1e-30)
+    lean = np.matmul(held, residual[:, :, None])
+    gain = np.matmul(lean.transpose(0, 2, 1), np.linalg.solve(np.where(np.isfinite(stiff), stiff, np.eye(2)), lean))
+    evidence = np.clip(chi2 - np.nan_to_num(gain[:, 0, 0]), 0.0, chi2)
     return Fits(full=full, covariance=np.einsum("qa,jqr,rb->jab", ties.matrix, covariance, ties.matrix), chi2=chi2,
-                dof=np.maximum(pixels - size, 1.0), free=size, pixels=pixels, loss=loss,
+                evidence_chi2=evidence, dof=np.maximum(pixels - size, 1.0), free=size, pixels=pixels, loss=loss,
                 converged=converged & ~stuck & np.isfinite(chi2))

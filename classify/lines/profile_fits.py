@@ -346,7 +346,7 @@ class _Best:
     def __init__(self, jobs: int, components: int) -> None:
         self.full = np.full((jobs, components, 4), np.nan)
         self.covariance = np.full((jobs, components, 4, 4), np.nan)
-        self.chi2, self.dof, self.total_err = (np.full(jobs, np.nan) for _ in range(3))
+        self.chi2, self.evidence_chi2, self.dof, self.total_err = (np.full(jobs, np.nan) for _ in range(4))
         self.free = np.zeros(jobs)
         self.pixels = np.ones(jobs)
         self.voigt = np.zeros(jobs, bool)
@@ -391,13 +391,13 @@ class _Best:
         family = int(ties.is_voigt)
         log_n = np.log(np.maximum(fits.pixels, 1.0))
         leads = self.rival_chi2[rows, family] + self.rival_free[rows, family] * log_n
-        leads = fits.converged & (fits.chi2 + fits.free * log_n < leads)
+        leads = fits.converged & (fits.evidence_chi2 + fits.free * log_n < leads)
         self.rival_area[rows[leads], family] = fits.full[leads, :, 0]
-        self.rival_chi2[rows[leads], family] = fits.chi2[leads]
+        self.rival_chi2[rows[leads], family] = fits.evidence_chi2[leads]
         self.rival_free[rows[leads], family] = fits.free
         scale = np.maximum(np.fmin(fits.chi2 / fits.dof, self.chi2[rows] / self.dof[rows]), 1.0)
-        mine = fits.chi2 / scale + fits.free * log_n
-        known = self.chi2[rows] / scale + self.free[rows] * log_n
+        mine = fits.evidence_chi2 / scale + fits.free * log_n
+        known = self.evidence_chi2[rows] / scale + self.free[rows] * log_n
         wins = np.isnan(known) | (fits.converged & ~self.converged[rows])
         margin = np.where(fits.free > self.free[rows], _STRONG_EVIDENCE, 0.0)
         wins |= (mine < known - margin) & (fits.converged | ~self.converged[rows])
@@ -410,6 +410,7 @@ class _Best:
             self.covariance[at, i, :size, :size] = fits.covariance[wins, block, block]
         between = fits.covariance[wins][:, ::size, ::size]
         self.total_err[at] = np.sqrt(np.maximum(between.sum(axis=(1, 2)), 0.0))
+        self.evidence_chi2[at] = fits.evidence_chi2[wins]
         self.chi2[at], self.dof[at], self.free[at] = fits.chi2[wins], fits.dof[wins], fits.free
         self.pixels[at], self.converged[at] = fits.pixels[wins], fits.converged[wins]
         self.voigt[at] = ties.is_voigt
