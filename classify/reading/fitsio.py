@@ -168,7 +168,7 @@ class Hdu:
 
     @property
     def kind(self) -> str:
-        """ "image", "table", "ascii table" or the extension's own word."""
+        """One of "image", "table" and "ascii table", or the extension's own word."""
         if self.number == 0:
             return "image"
         word = self.header.word("XTENSION").upper()

@@ -161,7 +161,7 @@ def medium_of(headers: Iterable[Header]) -> tuple[Medium, str]:
 
 
 def survey_of(header: Header) -> str:
-    """ "SDSS" or "LAMOST" when the header is one of theirs, else ""."""
+    """Either "SDSS" or "LAMOST" when the header is one of theirs, else ""."""
     telescope = header.word("TELESCOP").upper()
     if "LAMOST" in telescope or "LAMOST" in header.word("DATA_V").upper() or "LAMOST" in header.word("ORIGIN").upper():
         return "LAMOST"

@@ -136,7 +136,7 @@ def never_wavelength(name: str) -> bool:
 
 
 def log_of(name: str) -> str:
-    """ "log10" or "ln" when a wavelength column's name says it holds logarithms, else ""."""
+    """Either "log10" or "ln" when a wavelength column's name says it holds logarithms, else ""."""
     words = _words(split_unit(name)[0])
     glued = "".join(words)
     if glued in _LOG_WAVE:

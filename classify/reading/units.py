@@ -85,7 +85,7 @@ def spectral_unit(text: str) -> SpectralUnit | None:
 
 
 def logarithm_of(text: str) -> tuple[str, str]:
-    """ "log10" or "ln" and the unit inside, of a unit such as ``log(Angstrom)`` or ``dex(nm)``; ("", text) of others."""
+    """Kind of logarithm ("log10", "ln") and unit inside, of ``log(Angstrom)`` or ``dex(nm)``; ("", text) of others."""
     match = re.fullmatch(r"\s*(log(?:10)?|lg|ln|dex)\s*[\s(\[]\s*([^)\]]*)[)\]]?\s*", text[:80], re.I)
     if match is None:
         return ("log10", "") if text.strip().lower() in ("log", "log10", "dex") else ("", text)
