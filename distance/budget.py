@@ -3,8 +3,8 @@
 The variance of the distance modulus over the posterior samples is shared out step by step, in a fixed order, by
 least squares: each step is charged with the variance it explains beyond the steps before it (sequential sums of
 squares), so no share is negative and together they are the whole. What is left once type, class, companion, scatter,
-intrinsic colour and R_V are accounted for is what is not known about the dust; it is charged to the measured colours, to
-their own scatter, and to the dust prior ("reddening") in the measure each leaves the excess open.
+intrinsic colour and R_V are accounted for is what is not known about the dust; it is charged to the measured colours,
+to their own scatter, and to the dust prior ("reddening") in the measure each leaves the excess open.
 """
 
 from __future__ import annotations
@@ -111,7 +111,7 @@ def _row(name: str, variance: float, total: float) -> BudgetRow:
     return BudgetRow(name, sigma, PER_CENT_PER_MAG * sigma, variance / total if total > 0 else 0.0)
 
 
-def draw_budget(rows: tuple[BudgetRow, ...], ax=None, title: str = ""):  # noqa: ANN001, ANN201
+def draw_budget(rows: tuple[BudgetRow, ...], ax=None, title: str = ""):
     """Bar picture of a budget on matplotlib axes ``ax`` (new ones when None); returns the axes."""
     import matplotlib.pyplot as plt
 
@@ -123,7 +123,9 @@ def draw_budget(rows: tuple[BudgetRow, ...], ax=None, title: str = ""):  # noqa:
     ax.axvline(rows[-1].per_cent, color="#bb5566", lw=1.5)
     ax.text(rows[-1].per_cent, len(steps) - 0.45, "total", color="#bb5566", ha="center", va="bottom", fontsize=9)
     for y, row in zip(place, steps):
-        ax.text(row.per_cent + 0.01 * rows[-1].per_cent, y, f"{row.sigma_mag:.2f} mag", va="center", fontsize=8, color="0.3")
+        ax.text(
+            row.per_cent + 0.01 * rows[-1].per_cent, y, f"{row.sigma_mag:.2f} mag", va="center", fontsize=8, color="0.3"
+        )
     ax.set_yticks(place, [r.step for r in steps])
     ax.set_xlim(0, 1.18 * rows[-1].per_cent)
     ax.set_xlabel("contribution to the distance, per cent (shares add in squares)")

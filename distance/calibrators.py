@@ -69,7 +69,8 @@ def library_stars() -> Calibrators:
     pick = np.sort(order[first])
     col = {k: v[pick] for k, v in t.items()}
     return Calibrators(
-        col["hip"].astype(int), col["library"].astype("U16"), col["label"].astype(str), step_of(col["t_code"]), col["t_code"],
+        col["hip"].astype(int), col["library"].astype("U16"), col["label"].astype(str),
+        step_of(col["t_code"]), col["t_code"],
         col["lum_code"], col["v_mag"], col["b_v"], np.maximum(np.nan_to_num(col["e_b_v"], nan=0.02), 0.005),
         col["parallax_mas"], col["e_parallax_mas"],
     )  # fmt: skip
@@ -92,12 +93,11 @@ def _catalogue() -> dict[str, NDArray]:
     return out
 
 
-def calibrators(
-    without_libraries: Collection[str] = (), without_stars: Collection[int] = ()
-) -> Calibrators:
+def calibrators(without_libraries: Collection[str] = (), without_stars: Collection[int] = ()) -> Calibrators:
     """All calibrators; a library star that is also a standard counts as the standard.
 
-    ``without_libraries`` leaves libraries out by name, ``without_stars`` stars by Hipparcos number, wherever they stand.
+    ``without_libraries`` leaves libraries out by name, ``without_stars`` stars by Hipparcos number, wherever they
+    stand.
     """
     first, second = standards(), library_stars()
     keep = ~np.isin(second.hip, first.hip) & ~np.isin(second.library, [n.lower() for n in without_libraries])

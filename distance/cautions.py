@@ -35,7 +35,8 @@ def cautions(
     if abs(result.routes_sigma) > ROUTES_LIMIT:
         brighter = "brighter" if result.routes_sigma < 0 else "fainter"
         said.append(
-            f"The spectrum reads an absolute magnitude {brighter} than the class by {abs(result.routes_sigma):.1f} sigma: "
+            f"The spectrum reads an absolute magnitude {brighter} than the class by "
+            f"{abs(result.routes_sigma):.1f} sigma: "
             "the class may be wrong, or the star peculiar."
         )
     if np.isfinite(result.parallax_sigma):
@@ -54,9 +55,10 @@ def cautions(
         said.append("Few or no parallaxes hold the scale at this type; it rests on published scales there.")
     elif not scale.fitted and weight < 0.5:
         said.append(f"The scale {scale.name} has no entry for this type; another published scale fills in.")
-    ebv_low, ebv_high = result.interval("ebv")
-    if ebv_low > 0.25 and star.rv is None:
-        said.append(f"The dust is thick here, and R_V alone may move V by {max(law_mag, 0.0):.2f} mag; unusual dust by more.")
+    if result.interval("ebv")[0] > 0.25 and star.rv is None:
+        said.append(
+            f"The dust is thick here, and R_V alone may move V by {max(law_mag, 0.0):.2f} mag; unusual dust by more."
+        )
     lum = _lum_code(source)
     if lum <= 2.0:
         said.append("Supergiants and bright giants of one class differ by a magnitude and more; many vary.")
@@ -72,7 +74,9 @@ def cautions(
     if any(w in ("p", "m", "var", "peculiar", "am", "ap") for w in _words(source)):
         said.append("The type is peculiar; colours and luminosity of normal stars serve only roughly.")
     if result.n_eff < 50:
-        said.append("Type, colours and dust agree badly, and few samples carry the answer; take the interval with care.")
+        said.append(
+            "Type, colours and dust agree badly, and few samples carry the answer; take the interval with care."
+        )
     return tuple(s for s in said if s)
 
 

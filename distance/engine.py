@@ -99,7 +99,12 @@ def prepare(request: Request) -> tuple[Star, Any]:
         if request.gaia is not None:
             parallax = (parallax[0] - gaia_zero_point_mas(request.gaia), parallax[1])
     abs_mag = (NAN, NAN, 0.0)
-    if isinstance(source, Assignment) and source.abs_mag_v_ok and source.abs_mag_v_err > 0 and np.isfinite(source.abs_mag_v):
+    if (
+        isinstance(source, Assignment)
+        and source.abs_mag_v_ok
+        and source.abs_mag_v_err > 0
+        and np.isfinite(source.abs_mag_v)
+    ):
         abs_mag = (float(source.abs_mag_v), float(source.abs_mag_v_err), ROUTE_CORRELATION)
     star = Star(
         cells=cells,
@@ -179,7 +184,9 @@ def _run(stars: list[Star], requests: list[Request], parsed: list[Any], job: _Jo
         )
         weight = float(job.scale.weight[draws.cell[i]].mean())
         spread = float(draws.ebv[i].mean() * draws.rv[i].std())
-        out.append(replace(result, cautions=caution_text.cautions(result, star, request, source, job.scale, weight, spread)))
+        out.append(
+            replace(result, cautions=caution_text.cautions(result, star, request, source, job.scale, weight, spread))
+        )
     return out
 
 
@@ -194,7 +201,10 @@ def _routes(stars: list[Star], job: _Job) -> list[tuple[float, float, float, Flo
         only = np.array([stars[i].abs_mag[0] for i in two]), np.array([stars[i].abs_mag[1] for i in two])
         # the spectrum route leaves the scale out: same dust and types, M_V from the spectrum alone
         wide = replace(
-            job.scale, sigma=np.full_like(job.scale.sigma, 30.0), tail=np.zeros_like(job.scale.tail), slope=np.zeros_like(job.scale.slope)
+            job.scale,
+            sigma=np.full_like(job.scale.sigma, 30.0),
+            tail=np.zeros_like(job.scale.tail),
+            slope=np.zeros_like(job.scale.slope),
         )
         by_spec = draw([replace(b, abs_mag=(v, e, 0.0)) for b, v, e in zip(blank, *only)], wide, job.prior, n, job.seed)
         for row, i in enumerate(two):
@@ -346,14 +356,23 @@ def _grouped(
         variance = decompose(again, job.scale, 1000) if job.with_budget else np.zeros((len(stars), 8))
         for i, (item, before) in enumerate(zip(items, first)):
             said = before.cautions
-            common = {"group_distance_pc": group.distance_pc, "group_distance_err_pc": group.distance_err_pc, "group_ebv": group.ebv}
+            common = {
+                "group_distance_pc": group.distance_pc,
+                "group_distance_err_pc": group.distance_err_pc,
+                "group_ebv": group.ebv,
+            }
             if not inside[i]:
-                said = (f"The star stands apart from the group {name} in distance or reddening and was left on its own.", *said)
+                said = (
+                    f"The star stands apart from the group {name} in distance or reddening and was left on its own.",
+                    *said,
+                )
                 done.append((item[0], replace(before, cautions=said, group_outlier=True, **common)))
                 continue
             own = {k: tuple(v[:, i].tolist()) for k, v in percentiles.items()}
             sigma = group.distance_err_pc / group.distance_pc
-            own["distance_pc"] = tuple(float(group.distance_pc * np.exp(z * sigma)) for z in (-1.96, -0.994, 0.0, 0.994, 1.96))
+            own["distance_pc"] = tuple(
+                float(group.distance_pc * np.exp(z * sigma)) for z in (-1.96, -0.994, 0.0, 0.994, 1.96)
+            )
             done.append(
                 (
                     item[0],

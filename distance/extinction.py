@@ -1,8 +1,8 @@
 """Extinction in each band per unit of the star's own colour excess, by temperature and R_V.
 
 ``data/extinction.ecsv`` holds the curve of Gordon et al. (2023, ApJ 950, 86) integrated over the passbands and an
-observed spectrum of each temperature; ``extinction_recipe`` makes it. E(B-V) everywhere in this package is the excess of the
-star itself, A_B - A_V; R_V is A_V/E(B-V) of a B0 star, so a cool star has a little more A_V for the same excess.
+observed spectrum of each temperature; ``extinction_recipe`` makes it. E(B-V) everywhere in this package is the excess
+of the star itself, A_B - A_V; R_V is A_V/E(B-V) of a B0 star, so a cool star has a little more A_V for the same excess.
 """
 
 from __future__ import annotations
@@ -19,7 +19,10 @@ from starfathom.distance.tables import read_table
 FloatArray = NDArray[np.float64]
 
 TERMS = ("c00", "c10", "c20", "c30", "c01", "c11", "c02")
-RV_MEAN, RV_SIGMA = 3.1, 0.18  #: prior of R_V: the usual mean, and its scatter between sightlines (Fitzpatrick & Massa 2007)
+RV_MEAN, RV_SIGMA = (
+    3.1,
+    0.18,
+)  #: prior of R_V: the usual mean, and its scatter between sightlines (Fitzpatrick & Massa 2007)
 RV_RANGE = (2.5, 5.7)
 _EBV_OF_TERMS_MAX = 2.5
 

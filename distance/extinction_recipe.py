@@ -26,7 +26,8 @@ PASSBANDS = {
 }  # fmt: skip
 #: Spectra of the atlas that stand for each temperature: dwarfs down to G, giants and dwarfs below.
 ATLAS: tuple[tuple[str, str, float], ...] = (
-    ("O5V", "O5", 5), ("B0V", "B0", 5), ("B3V", "B3", 5), ("B8V", "B8", 5), ("A0V", "A0", 5), ("A3V", "A3", 5), ("A5V", "A5", 5),
+    ("O5V", "O5", 5), ("B0V", "B0", 5), ("B3V", "B3", 5), ("B8V", "B8", 5), ("A0V", "A0", 5), ("A3V", "A3", 5),
+    ("A5V", "A5", 5),
     ("F0V", "F0", 5), ("F5V", "F5", 5), ("G0V", "G0", 5), ("G5V", "G5", 5), ("K0V", "K0", 5), ("K0III", "K0", 3),
     ("K5V", "K5", 5), ("K5III", "K5", 3), ("M0III", "M0", 3), ("M2V", "M2", 5), ("M4V", "M4", 5), ("M5V", "M5", 5),
 )  # fmt: skip
@@ -109,7 +110,9 @@ def main() -> None:
     """Write the table."""
     parser = argparse.ArgumentParser(description=__doc__)
     parser.add_argument("--filters", type=Path, required=True, help="folder with the passband tables of speclite")
-    parser.add_argument("--atlas", type=Path, required=True, help="folder with the spectra of Pickles 1998 as FITS tables")
+    parser.add_argument(
+        "--atlas", type=Path, required=True, help="folder with the spectra of Pickles 1998 as FITS tables"
+    )
     args = parser.parse_args()
     rows = build(args.filters, args.atlas)
     names = ["band", "teff_k", *(f"c{p}{q}" for p, q in POWERS), "worst"]
@@ -117,7 +120,10 @@ def main() -> None:
         file.write("# %ECSV 1.0\n# ---\n# datatype:\n")
         file.write("# - {name: band, datatype: string}\n# - {name: teff_k, unit: K, datatype: int64}\n")
         for p, q in POWERS:
-            file.write(f"# - {{name: c{p}{q}, datatype: float64, description: 'A_band/E(B-V), times (R_V-3.1)^{p} E(B-V)^{q}'}}\n")
+            file.write(
+                f"# - {{name: c{p}{q}, datatype: float64, "
+                f"description: 'A_band/E(B-V), times (R_V-3.1)^{p} E(B-V)^{q}'}}\n"
+            )
         file.write("# - {name: worst, datatype: float64, description: 'largest residual of the fit'}\n")
         file.write(
             "# delimiter: ','\n# meta: !!omap\n# - title: 'Broad-band extinction per unit E(B-V) of the star itself'\n"

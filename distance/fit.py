@@ -107,9 +107,7 @@ class _Colours:
     v_zero: FloatArray
 
 
-def _split_colour(
-    stars: Calibrators, distance_pc: FloatArray, bv_zero: FloatArray, scatter: FloatArray
-) -> _Colours:
+def _split_colour(stars: Calibrators, distance_pc: FloatArray, bv_zero: FloatArray, scatter: FloatArray) -> _Colours:
     """Share the excess of B-V between dust and the star, at a known distance."""
     x = stars.b_v - bv_zero
     grid = np.concatenate([np.arange(0, 0.1, 0.004), np.arange(0.1, 1.6, 0.02)])
@@ -137,7 +135,9 @@ def _components(lum_code: FloatArray, sigma: FloatArray, tail: float) -> tuple[F
     light = np.concatenate([[0.0], _COMPANION_NODES])
     one = np.concatenate([1 - share, np.repeat(share / 4, 4, axis=1)], axis=1)
     weight = np.concatenate([(1 - tail) * one, tail * one], axis=1)
-    width = np.concatenate([np.repeat(sigma[:, None], 5, axis=1), np.repeat(TAIL_WIDTH * sigma[:, None], 5, axis=1)], axis=1)
+    width = np.concatenate(
+        [np.repeat(sigma[:, None], 5, axis=1), np.repeat(TAIL_WIDTH * sigma[:, None], 5, axis=1)], axis=1
+    )
     return weight, np.tile(np.concatenate([light, light]), (len(sigma), 1)), width
 
 
@@ -180,7 +180,14 @@ def _expect(
         grid = np.linspace(-5.0, 5.0, 251)
         m = f[poor, None] + grid
         predicted = 10 ** (0.2 * (m - v_zero[poor, None] + 10))
-        like = -0.5 * ((stars.parallax[poor, None] - predicted) / np.hypot(stars.e_parallax[poor, None], 0.46 * v_err[poor, None] * predicted)) ** 2
+        like = (
+            -0.5
+            * (
+                (stars.parallax[poor, None] - predicted)
+                / np.hypot(stars.e_parallax[poor, None], 0.46 * v_err[poor, None] * predicted)
+            )
+            ** 2
+        )
         r = grid[None, None, :] + light[poor][:, :, None]
         s = width[poor][:, :, None]
         log_g = np.log(weight[poor])[:, :, None] - 0.5 * (r / s) ** 2 - np.log(s) + like[:, None, :]
@@ -238,7 +245,7 @@ def _bv_surface(
     return out[0], out[1], out[2], out[3]
 
 
-def fit(stars: Calibrators, recipe: Recipe = Recipe(), *, colour: bool = True) -> tuple[Scale, Scale]:  # noqa: B008
+def fit(stars: Calibrators, recipe: Recipe = Recipe(), *, colour: bool = True) -> tuple[Scale, Scale]:
     """Fit the scale to calibrators; returns the scale of standards, and that of published types at large.
 
     ``colour=False`` leaves the colour term out.
@@ -257,7 +264,6 @@ def fit(stars: Calibrators, recipe: Recipe = Recipe(), *, colour: bool = True) -
     delta = colours.deviation
     lib = (stars.library != "").astype(float)
     base = prior_mean + slope_cells[cell] * delta
-    amplitude = _amplitude(stars.lum_code, recipe)
 
     def covariance(a: tuple[FloatArray, FloatArray], b: tuple[FloatArray, FloatArray]) -> FloatArray:
         k = _kernel(a, b, recipe.length_step, recipe.length_lum)

@@ -14,7 +14,8 @@ FloatArray = NDArray[np.float64]
 
 #: A group needs this many members to speak; a member this many sigma off, in distance or reddening, is an outlier.
 FEWEST, OUTLIER_SIGMA = 3, 3.0
-#: Errors members share, which averaging does not remove: of the scale (mag of modulus) and of the colours (mag of E(B-V)).
+#: Errors members share, which averaging does not remove: of the scale (mag of modulus) and of the colours (mag of
+#: E(B-V)).
 SHARED_MODULUS, SHARED_EBV = 0.05, 0.01
 #: Patchy dust: how much E(B-V) may differ between members, mag (common practice for nearby clusters).
 PATCHY_EBV = 0.03
@@ -22,7 +23,7 @@ PATCHY_EBV = 0.03
 
 @dataclass(frozen=True)
 class GroupResult:
-    """Common distance (pc) and E(B-V) of a group, each with one standard deviation, its members and outliers by name."""
+    """Common distance (pc) and E(B-V) of a group, each with one standard deviation, its members and outliers."""
 
     name: str
     distance_pc: float
@@ -51,8 +52,10 @@ def weighted(values: FloatArray, errors: FloatArray) -> tuple[float, float]:
     return mean, error
 
 
-def find_outliers(modulus: FloatArray, modulus_err: FloatArray, ebv: FloatArray, ebv_err: FloatArray) -> NDArray[np.bool_]:
-    """Members off the others by more than :data:`OUTLIER_SIGMA`; the worst is dropped first, and half may go at most."""
+def find_outliers(
+    modulus: FloatArray, modulus_err: FloatArray, ebv: FloatArray, ebv_err: FloatArray
+) -> NDArray[np.bool_]:
+    """Members off the others by more than :data:`OUTLIER_SIGMA`; the worst goes first, and half at most."""
     off = np.zeros(len(modulus), bool)
     ebv_err = np.hypot(ebv_err, PATCHY_EBV)
     while (~off).sum() > max(FEWEST - 1, (len(off) + 1) // 2):
@@ -74,7 +77,12 @@ def find_outliers(modulus: FloatArray, modulus_err: FloatArray, ebv: FloatArray,
 
 
 def combine(
-    name: str, members: Sequence[str], modulus: FloatArray, modulus_err: FloatArray, ebv: FloatArray, ebv_err: FloatArray
+    name: str,
+    members: Sequence[str],
+    modulus: FloatArray,
+    modulus_err: FloatArray,
+    ebv: FloatArray,
+    ebv_err: FloatArray,
 ) -> GroupResult | None:
     """The common distance and reddening of a group from those of its members (mag); None for fewer than three."""
     if len(members) < FEWEST:
@@ -84,8 +92,8 @@ def combine(
     e, e_err = weighted(ebv[~off], np.hypot(ebv_err[~off], PATCHY_EBV))
     d = float(distance_pc(mu))
     return GroupResult(
-        name, d, d * 0.2 * np.log(10) * float(np.hypot(mu_err, SHARED_MODULUS)), max(e, 0.0), float(np.hypot(e_err, SHARED_EBV)),
-        tuple(members), tuple(m for m, o in zip(members, off) if o), tuple(bool(o) for o in off),
+        name, d, d * 0.2 * np.log(10) * float(np.hypot(mu_err, SHARED_MODULUS)), max(e, 0.0), float(np.hypot(e_err,
+        SHARED_EBV)), tuple(members), tuple(m for m, o in zip(members, off) if o), tuple(bool(o) for o in off),
     )  # fmt: skip
 
 
@@ -97,7 +105,10 @@ def without_one(
     mu, mu_err = weighted(modulus[rest], modulus_err[rest])
     e, e_err = weighted(ebv[rest], np.hypot(ebv_err[rest], PATCHY_EBV))
     plx = 1000.0 / float(distance_pc(mu))
-    return (plx, plx * 0.2 * np.log(10) * float(np.hypot(mu_err, SHARED_MODULUS))), (e, float(np.hypot(e_err, PATCHY_EBV)))
+    return (plx, plx * 0.2 * np.log(10) * float(np.hypot(mu_err, SHARED_MODULUS))), (
+        e,
+        float(np.hypot(e_err, PATCHY_EBV)),
+    )
 
 
 def modulus_of(low_pc: float, middle_pc: float, high_pc: float) -> tuple[float, float]:

@@ -20,14 +20,15 @@ FloatArray = NDArray[np.float64]
 
 #: Luminosity code and colour (a palette told apart by the colour-blind, Tol 2021) of each class drawn.
 CLASS_COLOURS: dict[str, str] = {
-    "Ia": "#aa3377", "Iab": "#aa3377", "Ib": "#aa3377", "II": "#ee6677", "III": "#ccbb44", "IV": "#228833", "V": "#4477aa",
+    "Ia": "#aa3377", "Iab": "#aa3377", "Ib": "#aa3377",
+    "II": "#ee6677", "III": "#ccbb44", "IV": "#228833", "V": "#4477aa",
 }  # fmt: skip
 _SEQUENCES = (("V", 5.0, 4.0, 64.0), ("III", 3.0, 20.0, 65.0), ("Ib", 1.6, 9.0, 62.0), ("Ia", 1.0, 9.0, 62.0))
 
 
 @dataclass(frozen=True)
 class HRPoints:
-    """Points of the diagram, one a star: log10 Teff (K), log10 L (solar), their errors, and class; counts and a note."""
+    """Points of the diagram, one a star: log10 Teff (K), log10 L (solar), their errors, class; counts, a note."""
 
     names: tuple[str, ...]
     classes: tuple[str, ...]
@@ -61,10 +62,14 @@ def sample_note(counts: dict[str, int]) -> str:
     share = evolved / total
     start = f"{evolved} of {total} stars are giants or brighter"
     if share > 0.4:
-        return f"{start}, as in a list of the brightest in the sky, which favours the luminous; a volume of space holds few."
+        return f"{start}, as in a list of the brightest in the sky, which favours the luminous; space holds few."
     if share < 0.1:
-        return f"{start}, as in a list of the nearest, which favours dwarfs; among the brightest in the sky half would be."
-    return f"{start}; lists of the brightest favour giants, lists of the nearest dwarfs, so the counts tell of the choice."
+        return (
+            f"{start}, as in a list of the nearest, which favours dwarfs; among the brightest in the sky half would be."
+        )
+    return (
+        f"{start}; lists of the brightest favour giants, lists of the nearest dwarfs, so the counts tell of the choice."
+    )
 
 
 def hr_points(fathomings: Iterable[Any]) -> HRPoints:
@@ -122,7 +127,9 @@ def draw_hr_diagram(fathomings: Iterable[Any], ax: Any = None) -> Any:
         at = min(hot - 0.015, np.log10(TEFF_SUN_K) + (top - 0.15 - 2 * np.log10(radius)) / 4)
         if cool + 0.1 < at and bottom + 0.1 < radius_line(radius, np.array(at)) < top:
             word = f"{radius:g} $R_\\odot$"
-            ax.text(at, float(radius_line(radius, np.array(at))), word, color="0.6", fontsize=7.5, ha="left", va="bottom")
+            ax.text(
+                at, float(radius_line(radius, np.array(at))), word, color="0.6", fontsize=7.5, ha="left", va="bottom"
+            )
     for word, code, first, last in _SEQUENCES:
         log_t, log_l = sequence(code, first, last)
         shown = (log_t < hot) & (log_t > cool) & (log_l < top) & (log_l > bottom)
@@ -137,9 +144,9 @@ def draw_hr_diagram(fathomings: Iterable[Any], ax: Any = None) -> Any:
         mine = np.array([c == word for c in points.classes], bool)
         if mine.any():
             ax.errorbar(
-                points.log_teff[mine], points.log_lum[mine], xerr=points.log_teff_err[mine], yerr=points.log_lum_err[mine],
-                fmt="o", ms=4.5, lw=0.7, color=CLASS_COLOURS.get(word, "0.4"), mec="white", mew=0.4, zorder=3,
-                label=f"{word or 'no class'}  ({int(mine.sum())})",
+                points.log_teff[mine], points.log_lum[mine], xerr=points.log_teff_err[mine],
+                yerr=points.log_lum_err[mine], fmt="o", ms=4.5, lw=0.7, color=CLASS_COLOURS.get(word, "0.4"),
+                mec="white", mew=0.4, zorder=3, label=f"{word or 'no class'}  ({int(mine.sum())})",
             )  # fmt: skip
     ax.set_xlim(hot, cool)
     ax.set_ylim(bottom, top)

@@ -174,13 +174,16 @@ def intrinsic() -> Intrinsic:
         x, y = b_v - b_v.mean(), offset[band][dwarf_line]
         response[band] = float((x * (y - y.mean())).sum() / (x * x).sum())
     step, lum = CELL_STEP, CELL_LUM
-    # scatter of ln Teff within a type at given B-V: 2 % from F to K, 4 % in O to A, 4 % for M and supergiants (common practice)
+    # scatter of ln Teff within a type at given B-V: 2 % from F to K, 4 % in O to A, 4 % for M and supergiants (common
+    # practice)
     scatter = np.where((step >= 30) & (step < 57), 0.02, 0.04)
     scatter = np.where(lum < 2.5, np.maximum(scatter, 0.04), scatter)
     warm = np.clip(np.minimum((step - 25) / 5, (57 - step) / 2), 0, 1)
     own = dict.fromkeys(BANDS, 0.02)
     own.update({"U": 0.06, "V": 0.0, "B": 0.0, "J": 0.03, "H": 0.03, "Ks": 0.03})
-    bv_scatter = np.interp(step, [2, 10, 18, 22, 30, 40, 50, 56, 66], [0.02, 0.02, 0.025, 0.035, 0.035, 0.035, 0.05, 0.06, 0.06])
+    bv_scatter = np.interp(
+        step, [2, 10, 18, 22, 30, 40, 50, 56, 66], [0.02, 0.02, 0.025, 0.035, 0.035, 0.035, 0.05, 0.06, 0.06]
+    )
     bv_scatter = np.where(lum < 4.5, np.interp(step, [2, 18, 25, 40, 66], [0.02, 0.03, 0.05, 0.05, 0.06]), bv_scatter)
     bv_scatter = np.where(lum < 2.5, np.maximum(bv_scatter, 0.05), bv_scatter)
     bv_scatter = np.where((lum < 2.5) & (step > 30), 0.10, bv_scatter)

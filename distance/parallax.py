@@ -42,7 +42,7 @@ def gaia_zero_point_mas(inputs: Mapping[str, Any]) -> float:
 
 
 def check_parallax(parallax: Any) -> tuple[float, float]:
-    """``(value, error)`` in mas as floats; raises RequestError where they are no numbers or the error is not positive."""
+    """``(value, error)`` in mas as floats; raises RequestError for no numbers or an error not positive."""
     try:
         value, error = (float(v) for v in parallax)
     except (TypeError, ValueError):
@@ -80,4 +80,7 @@ def meaning(sigma: float, per_cent: float) -> str:
         if far
         else "less luminous than its type says (a lower class, a subdwarf) or more reddened"
     )
-    return f"The parallax puts the star {'farther' if far else 'nearer'} by {abs(sigma):.1f} sigma{size}: it is {reasons}, or the parallax is disturbed by an orbit."
+    return (
+        f"The parallax puts the star {'farther' if far else 'nearer'} by {abs(sigma):.1f} sigma{size}: "
+        f"it is {reasons}, or the parallax is disturbed by an orbit."
+    )

@@ -23,7 +23,9 @@ def _number(value: Any, what: str) -> float:
     except (TypeError, ValueError):
         raise RequestError(f"{what} is {value!r}, which is not a number; give a magnitude such as 9.81.") from None
     if not math.isfinite(number):
-        raise RequestError(f"{what} is {value!r}, which is not a finite number; leave the band out if it was not measured.")
+        raise RequestError(
+            f"{what} is {value!r}, which is not a finite number; leave the band out if it was not measured."
+        )
     return number
 
 

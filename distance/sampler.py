@@ -4,9 +4,9 @@ Each sample of a star draws a type from its assignment, a place in the scatter o
 Given these, apparent brightness, colour excess E and the deviation of the intrinsic colour follow from the magnitudes
 as a Gaussian in three dimensions, worked out in closed form. E is drawn from that Gaussian times the dust prior at the
 distance the type leads to expect. E itself is never negative, but a measured excess below zero is taken up by the
-errors and the intrinsic colour, so it neither is lost nor piles up at zero. The dust prior speaks of E alone: it does not
-move a star to the distance where the layer would make up the dust it has, for dust is too patchy for that. Weights then
-bring in the colours' own verdict on the type, luminosities measured otherwise, and the prior on distance.
+errors and the intrinsic colour, so it neither is lost nor piles up at zero. The dust prior speaks of E alone: it does
+not move a star to the distance where the layer would make up the dust it has, for dust is too patchy for that. Weights
+then bring in the colours' own verdict on the type, luminosities measured otherwise, and the prior on distance.
 
 All stars share one set of stratified numbers (a Latin hypercube), so that the answer for a star depends on its own
 data and the seed alone, not on its neighbours in the list.
@@ -142,7 +142,9 @@ def draw(stars: list[Star], scale: Scale, prior: str, n_samples: int, seed: int)
     w_, k_, g_, y_, kk, kg, gg, ky, gy, yy = (np.zeros(shape) for _ in range(10))
     usable = [set(usable_bands(s)) for s in stars]
     # E(B-V) enters the coefficients weakly; a first look at B - V is good enough for that
-    first = column([s.magnitudes["B"][0] - s.magnitudes["V"][0] if {"B", "V"} <= set(s.magnitudes) else 0.0 for s in stars])
+    first = column(
+        [s.magnitudes["B"][0] - s.magnitudes["V"][0] if {"B", "V"} <= set(s.magnitudes) else 0.0 for s in stars]
+    )
     ebv_first = np.clip(first - look.offset["B"][cell], 0.0, 2.5) if first.any() else np.zeros(shape)
     a_v_terms = band_terms("V")[:, cell]
     k_v = evaluate(a_v_terms, rv, ebv_first)
@@ -243,7 +245,8 @@ def draw(stars: list[Star], scale: Scale, prior: str, n_samples: int, seed: int)
     d_guess = 10 ** (0.2 * np.clip(m0_guess - base - middle + companion, -10, 30) + 1)
     layer, cloud = dust.smooth_width(d_guess, sin_b), dust.mean_cloud(d_guess, sin_b)
 
-    # --- E(B-V): the Gaussian times a half-normal or an exponential (or nothing, where the user gave a prior of their own)
+    # --- E(B-V): the Gaussian times a half-normal or an exponential (or nothing, where the user gave a prior of their
+    # own)
     own_prior = np.array([v is not None for v in given_prior])[:, None]
     tight = precision + 1.0 / layer**2
     centre_layer, spread_layer = centre * precision / tight, 1.0 / np.sqrt(tight)
@@ -255,7 +258,9 @@ def draw(stars: list[Star], scale: Scale, prior: str, n_samples: int, seed: int)
     )
     centre_cloud = centre - 1.0 / (cloud * precision)
     log_cloud = (
-        np.log(dust.CLOUD_SHARE / cloud) + (0.5 / (cloud * precision) - centre) / cloud + log_ndtr(centre_cloud / spread)
+        np.log(dust.CLOUD_SHARE / cloud)
+        + (0.5 / (cloud * precision) - centre) / cloud
+        + log_ndtr(centre_cloud / spread)
     )
     log_sum = np.where(own_prior, log_ndtr(centre / spread), np.logaddexp(log_layer, log_cloud))
     use_cloud = u[6] > np.exp(log_layer - log_sum)

@@ -25,7 +25,8 @@ CODE_OF_CLASS: dict[str, tuple[float, ...]] = {
     "V": (5.0,), "IV": (4.0,), "III": (3.0,), "II": (2.0,), "Ib": (1.6,), "Iab": (1.3,), "Ia": (1.0,), "Ia0": (0.0,),
     "I": (1.6, 1.3, 1.0),
 }  # fmt: skip
-#: The scale fitted here, as standards have it; and as types of mixed origin in catalogues have it, wider and a little off.
+#: The scale fitted here, as standards have it; and as types of mixed origin in catalogues have it, wider and a little
+#: off.
 OWN, PUBLISHED_TYPES = "starfathom", "starfathom-published"
 PUBLISHED: dict[str, str] = {
     "mamajek": "Pecaut & Mamajek 2013 (V) and Mamajek's notes (IV, III)",
@@ -45,9 +46,9 @@ class Scale:
     """M_V over the cells of :mod:`starfathom.distance.grid`; every array has shape (n_cells,).
 
     ``mean`` is the middle of M_V and ``mean_err`` how well that is known; ``sigma`` is the width of a
-    star's scatter, of which a share ``tail`` is :data:`TAIL_WIDTH` times wider; ``slope`` is the change of M_V per mag of (B-V)_0 beyond the type's;
-    ``bv_shift`` is the mean (B-V)_0 of real stars less the tabulated one; ``bv_scatter`` its scatter. ``weight`` is
-    about how many parallaxes hold the cell, zero where only the published scales speak.
+    star's scatter, of which a share ``tail`` is :data:`TAIL_WIDTH` times wider; ``slope`` is the change of M_V per mag
+    of (B-V)_0 beyond the type's; ``bv_shift`` is the mean (B-V)_0 of real stars less the tabulated one; ``bv_scatter``
+    its scatter. ``weight`` is about how many parallaxes hold the cell, zero where only the published scales speak.
     """
 
     name: str
@@ -68,7 +69,7 @@ class Scale:
 
 
 def published_nodes(column_prefix: str) -> dict[float, FloatArray]:
-    """Columns of the table of published magnitudes along the steps, by luminosity code (NaN beyond the printed types)."""
+    """Columns of the table of published magnitudes along the steps, by luminosity code (NaN where not printed)."""
     table = read_table("absolute_magnitudes")
     steps = step_of(np.array([t_code_of(str(t)) for t in table["type"]]))
     nodes = {}

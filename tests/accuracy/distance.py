@@ -1,8 +1,8 @@
 """Measured quality of distances: cross-validation over the calibrators, simulated dust, routes and speed of recovery.
 
 ``tables()`` returns rows (dicts) with ``measure``, ``sample``, ``n``, the figure and the target; the accuracy run
-prints them. Held-out stars are predicted from type, V and B-V alone by a scale fitted without them; a star is never on both
-sides, whichever list it comes from.
+prints them. Held-out stars are predicted from type, V and B-V alone by a scale fitted without them; a star is never on
+both sides, whichever list it comes from.
 """
 
 from __future__ import annotations
@@ -18,7 +18,6 @@ from starfathom.distance.engine import Request, fathom_many
 from starfathom.distance.extinction import band_terms, evaluate
 from starfathom.distance.fathoming import Fathoming
 from starfathom.distance.fit import fit
-from starfathom.distance.grid import cell_of
 from starfathom.distance.intrinsic import intrinsic
 from starfathom.distance.scale import Scale, load_scale
 
@@ -86,12 +85,16 @@ def _rows(title: str, stars: Calibrators, got: NDArray, keep: NDArray, targets: 
         scatter = 50 * (high - low)
         rows.append(
             {
-                "measure": f"distance ratio, {title}", "sample": name, "n": int(mine.sum()),
-                "scatter_percent": round(float(scatter), 1), "median_percent": round(100 * (float(np.median(ratio)) - 1), 1),
+                "measure": f"distance ratio, {title}",
+                "sample": name,
+                "n": int(mine.sum()),
+                "scatter_percent": round(float(scatter), 1),
+                "median_percent": round(100 * (float(np.median(ratio)) - 1), 1),
                 "median_se": round(1.25 * float(scatter) / np.sqrt(mine.sum()), 1),
-                "inside_68": round(100 * float(got[mine, 1].mean())), "inside_95": round(100 * float(got[mine, 2].mean())),
+                "inside_68": round(100 * float(got[mine, 1].mean())),
+                "inside_95": round(100 * float(got[mine, 2].mean())),
                 "target": f"scatter <= {target:g}" if targets else "",
-            }  # fmt: skip
+            }
         )
     return rows
 
@@ -116,8 +119,13 @@ def simulate(
         magnitudes = {}
         for band in bands:
             extinction = evaluate(band_terms(band)[:, cell], rv, ebv) * ebv
-            own = (scale.bv_shift[cell] + deviation) * look.response[band] + look.own_scatter[band] * rng.standard_normal()
-            magnitudes[band] = (float(v + look.offset[band][cell] + own + extinction + 0.02 * rng.standard_normal()), 0.02)
+            own = (scale.bv_shift[cell] + deviation) * look.response[band] + look.own_scatter[
+                band
+            ] * rng.standard_normal()
+            magnitudes[band] = (
+                float(v + look.offset[band][cell] + own + extinction + 0.02 * rng.standard_normal()),
+                0.02,
+            )
         out.append((Request(text, magnitudes), ebv, float(d)))
     return out
 
@@ -125,18 +133,26 @@ def simulate(
 def _dust_rows() -> list[dict[str, object]]:
     rows: list[dict[str, object]] = []
     for bands in (("B", "V", "J", "H", "Ks"), ("B", "V")):
-        for kind, types in (("giants", ("G8 III", "K0 III", "K2 III", "K5 III")), ("dwarfs", ("A0 V", "F0 V", "F8 V", "G2 V"))):
+        for kind, types in (
+            ("giants", ("G8 III", "K0 III", "K2 III", "K5 III")),
+            ("dwarfs", ("A0 V", "F0 V", "F8 V", "G2 V")),
+        ):
             made = simulate(types, bands, n=200)
             got = fathom_many([m[0] for m in made], n_samples=1000, with_budget=False)
             off = np.array([g.median("ebv") - m[1] for g, m in zip(got, made) if isinstance(g, Fathoming)])
             ratio = np.array([g.median("distance_pc") / m[2] for g, m in zip(got, made) if isinstance(g, Fathoming)])
             rows.append(
                 {
-                    "measure": "simulated dust, E(B-V) 0 to 1.5", "sample": f"{kind}, {' '.join(bands)}", "n": len(off),
-                    "ebv_bias": round(float(np.median(off)), 3), "ebv_scatter": round(float(np.std(off)), 3),
+                    "measure": "simulated dust, E(B-V) 0 to 1.5",
+                    "sample": f"{kind}, {' '.join(bands)}",
+                    "n": len(off),
+                    "ebv_bias": round(float(np.median(off)), 3),
+                    "ebv_scatter": round(float(np.std(off)), 3),
                     "distance_bias_percent": round(100 * (float(np.median(ratio)) - 1), 1),
-                    "target": "bias of E(B-V) <= 0.03, of distance <= 3 %" if len(bands) > 2 else "what two bands allow",
-                }  # fmt: skip
+                    "target": "bias of E(B-V) <= 0.03, of distance <= 3 %"
+                    if len(bands) > 2
+                    else "what two bands allow",
+                }
             )
     return rows
 
@@ -152,7 +168,9 @@ def tables(seed: int = 1) -> list[dict[str, object]]:
     stars = calibrators()
     stars = stars.where((stars.library == "") & (stars.parallax > TRUTH_SNR * stars.e_parallax))
     for name in ("mamajek", "straizys"):
-        rows += _rows(f"standards, scale {name}", stars, _predict(stars, load_scale(name)), np.ones(len(stars), bool), False)
+        rows += _rows(
+            f"standards, scale {name}", stars, _predict(stars, load_scale(name)), np.ones(len(stars), bool), False
+        )
     return rows + _dust_rows()
 
 

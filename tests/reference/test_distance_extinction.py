@@ -120,7 +120,8 @@ def test_recipe_runs_from_passbands_and_an_atlas(tmp_path):
     for band, name in PASSBANDS.items():
         wave = np.linspace(centres[band] - 400, centres[band] + 400, 41)
         body = "\n".join(f"{w:g} {max(0.0, 1 - abs(w - centres[band]) / 400):g}" for w in wave)
-        head = "# %ECSV 1.0\n# ---\n# datatype:\n# - {name: wavelength, datatype: float64}\n# - {name: response, datatype: float64}\n"
+        head = "# %ECSV 1.0\n# ---\n# datatype:\n# - {name: wavelength, datatype: float64}\n"
+        head += "# - {name: response, datatype: float64}\n"
         (tmp_path / f"{name}.ecsv").write_text(f"{head}wavelength response\n{body}\n")
     wave = np.arange(1150.0, 25000.0, 5.0)
     for name, subtype, lum in ATLAS:

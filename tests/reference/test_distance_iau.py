@@ -57,7 +57,9 @@ def test_worked_chain(name, v, m_v, ebv, teff, bc, distance, log_lum, radius):
 def test_distance_modulus_five_is_a_hundred_parsec_and_back():
     assert nominal.distance_pc(5.0) == pytest.approx(100.0, rel=1e-14)
     assert nominal.distance_modulus(100.0) == pytest.approx(5.0, abs=1e-14)
-    assert nominal.distance_modulus(nominal.distance_pc(np.array([-3.2, 0.0, 14.7]))) == pytest.approx([-3.2, 0.0, 14.7])
+    assert nominal.distance_modulus(nominal.distance_pc(np.array([-3.2, 0.0, 14.7]))) == pytest.approx(
+        [-3.2, 0.0, 14.7]
+    )
 
 
 def test_vega_from_its_parallax():

@@ -1,8 +1,8 @@
 """Angular diameters, radii and temperatures of stars measured by interferometry; all values from memory.
 
-What is compared: the diameter predicted from type, V and B-V alone (it hardly depends on distance), the temperature, and
-the radius against the diameter and the Hipparcos parallax. Known offsets: Vega and Altair are rapid rotators, their diameters
-means over a flattened disc; alf Ori varies in V.
+What is compared: the diameter predicted from type, V and B-V alone (it hardly depends on distance), the temperature,
+and the radius against the diameter and the Hipparcos parallax. Known offsets: Vega and Altair are rapid rotators,
+their diameters means over a flattened disc; alf Ori varies in V.
 """
 
 import csv
@@ -24,7 +24,9 @@ def compared():
     requests = []
     for r in rows:
         v, b_v = float(r["v_mag"]), float(r["b_v"])
-        requests.append({"source": r["mk_type"], "photometry": {"V": (v, 0.01), "B": (v + b_v, 0.015)}, "name": r["star"]})
+        requests.append(
+            {"source": r["mk_type"], "photometry": {"V": (v, 0.01), "B": (v + b_v, 0.015)}, "name": r["star"]}
+        )
     answers = fathom_many(requests, n_samples=2000)
     radius = np.array([float(r["theta_mas"]) / float(r["parallax_mas"]) * 1000 / THETA_MAS_RSUN_PC for r in rows])
     return rows, answers, radius
@@ -51,9 +53,11 @@ def test_temperatures(compared):
 
 
 def test_radii_within_their_intervals(compared):
-    rows, answers, radius = compared
+    _, answers, radius = compared
     inside = [a.interval("radius_rsun")[0] < r < a.interval("radius_rsun")[1] for a, r in zip(answers, radius)]
-    inside95 = [a.interval("radius_rsun", 95)[0] < r < a.interval("radius_rsun", 95)[1] for a, r in zip(answers, radius)]
+    inside95 = [
+        a.interval("radius_rsun", 95)[0] < r < a.interval("radius_rsun", 95)[1] for a, r in zip(answers, radius)
+    ]
     # 26 stars: 68 % is 17.7 +- 2.4
     assert 0.5 <= np.mean(inside) <= 0.95
     assert np.mean(inside95) >= 0.85

@@ -49,7 +49,8 @@ def test_bolometric_corrections_are_on_the_iau_scale():
 
 
 def test_colours_of_a_g2_dwarf():
-    # Pecaut & Mamajek: U-B 0.133, V-Rc 0.363, V-Ic 0.713, V-Ks 1.564, J-H 0.293, H-Ks 0.073, G-V -0.155, Bp-Rp 0.823, G-Rp 0.459
+    # Pecaut & Mamajek: U-B 0.133, V-Rc 0.363, V-Ic 0.713, V-Ks 1.564, J-H 0.293, H-Ks 0.073, G-V -0.155, Bp-Rp 0.823,
+    # G-Rp 0.459
     off = {b: float(o[cell("G2", 5)]) for b, o in intrinsic().offset.items()}
     assert off["U"] - off["B"] == pytest.approx(0.133, abs=1e-9)
     assert off["R"] == pytest.approx(-0.363, abs=1e-9)
