@@ -16,6 +16,7 @@ from starfathom.classify.errors import RequestError, SpectrumError
 from starfathom.classify.prepared import Prepared
 from starfathom.desk.palette import LIGHT
 from starfathom.desk.plane import cell_name, cell_near
+from starfathom.desk.scatter import template_scatter
 from starfathom.desk.windows import Mark, Window, choose_marks, known_marks, misfit, rms, windows_for, within
 from starfathom.templates.subtypes import LETTERS, class_of, nearest_subtype
 
@@ -131,7 +132,10 @@ def draw(e: Evidence) -> Figure:
         figure = Figure(figsize=PAGE)
         grid = figure.add_gridspec(2, 2, width_ratios=(2.9, 1.0), height_ratios=(1.0, 1.42), left=0.05, right=0.985,
                                    top=0.885, bottom=0.075, wspace=0.11, hspace=0.2)
-        sigmas = misfit(e.prepared, e.template)
+        own = e.assignment.t_code if math.isfinite(e.assignment.t_code) else e.t_code
+        scatter = template_scatter(e.prepared.wave_angstrom, own if math.isfinite(own) else 45.0,
+                                   e.prepared.fwhm_angstrom)
+        sigmas = misfit(e.prepared, e.template, scatter)
         _heading(figure, e, sigmas)
         draw_spectrum(figure.add_subplot(grid[0, :]), e)
         draw_windows(figure, grid[1, 0], e, sigmas)

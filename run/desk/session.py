@@ -15,6 +15,7 @@ from starfathom.decisions import Action
 from starfathom.desk import plane
 from starfathom.desk.night import Night, Star
 from starfathom.desk.plane import Cell
+from starfathom.desk.scatter import template_scatter
 from starfathom.desk.windows import Mark, Window, misfit, rms, windows_for, windows_on, within
 
 FloatArray = NDArray[np.float64]
@@ -128,11 +129,18 @@ class Session:
         except StarfathomError:
             return plane.cell_near(40.0, 5.0)
         net = [(i, j) for i in range(0, plane.N_TYPES, 4) for j in (1, 5, 7)]
-        sizes = [rms(misfit(ready, np.asarray(self.night.classifier.template(*plane.cell_codes(c), ready), float)))
-                 for c in net]
+        scatter = self._scatter(ready)
+        sizes = [rms(misfit(ready, np.asarray(self.night.classifier.template(*plane.cell_codes(c), ready), float),
+                            scatter)) for c in net]
         if not np.isfinite(sizes).any():
             return plane.cell_near(40.0, 5.0)
         return net[int(np.nanargmin(sizes))]
+
+    def _scatter(self, ready: Prepared) -> FloatArray:
+        """Scatter of templates for the star's own type, wherever the cursor stands, so that misfits compare."""
+        best = self.best_cell()
+        types = [plane.cell_codes(best)[0]] if best is not None else [5.0, 15.0, 25.0, 35.0, 45.0, 55.0, 65.0]
+        return np.mean([template_scatter(ready.wave_angstrom, t, ready.fwhm_angstrom) for t in types], axis=0)
 
     def upcoming(self) -> int | None:
         """The star that is next in the queue, None at its end."""
@@ -179,7 +187,7 @@ class Session:
                 template = self.night.classifier.template(*plane.cell_codes(place.cell), ready)
             self._templates[key] = np.asarray(template, float)
         template = self._templates[key]
-        sigmas = misfit(ready, template)
+        sigmas = misfit(ready, template, self._scatter(ready))
         by_window = tuple(rms(sigmas[within(ready.wave_angstrom, w)]) for w in self.windows())
         return Comparison(place, template, sigmas, rms(sigmas), by_window)
 

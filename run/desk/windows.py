@@ -20,9 +20,6 @@ MOST_WIDTH_ANGSTROM = 60.0
 MOST_WINDOWS = 9
 #: All windows together; more would be too narrow to see on 1280 pixels.
 MOST_ANGSTROM = 420.0
-#: A template is never perfect: its share of the continuum, added to the noise in quadrature, where the classifier
-#: gives no scatter of its own. Common practice; near the scatter of good spectra of one type in the reference library.
-TEMPLATE_SCATTER = 0.012
 
 
 @dataclass(frozen=True)
@@ -113,8 +110,13 @@ def windows_on(marks: Sequence[Mark], ready: Prepared, template: FloatArray, lo:
     return [replace(w, criteria=()) for w in windows_for(stand_in, marks, lo, hi)]
 
 
-def misfit(prepared: Prepared, template: FloatArray, scatter: FloatArray | float = TEMPLATE_SCATTER) -> FloatArray:
-    """Star less template, in sigmas: noise of the star and imperfection of the template together.
+def misfit(prepared: Prepared, template: FloatArray, scatter: FloatArray | float) -> FloatArray:
+    """Star less template, in sigmas: noise of the star and imperfection of the template in quadrature.
+
+    Parameters
+    ----------
+    template : (m,) rectified like the star
+    scatter : one standard deviation of stars about their template, see :mod:`starfathom.desk.scatter`
 
     Returns
     -------

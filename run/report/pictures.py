@@ -12,10 +12,11 @@ from numpy.typing import NDArray
 from starfathom.classify.assignment import Assignment
 from starfathom.classify.prepared import Prepared
 from starfathom.desk import plane
+from starfathom.desk.scatter import template_scatter
 from starfathom.desk.windows import Mark, choose_marks, misfit
 from starfathom.report.gather import LOG_L_EDGES, LOG_T_EDGES, StarResult
 from starfathom.report.svg import Plot, ticks_between
-from starfathom.templates.subtypes import CLASSES, SUBTYPES
+from starfathom.templates.subtypes import CLASSES, LETTERS, SUBTYPES
 
 FloatArray = NDArray[np.float64]
 
@@ -70,8 +71,8 @@ def _hr_axes(log_t: Sequence[float], log_lum: Sequence[float]) -> Plot:
     return plot.y_axis([(v, f"{v:g}") for v in ticks_between(bottom, top, 6)], "log luminosity, Sun = 0")
 
 
-def spectrum(ready: Prepared, template: FloatArray | None, marks: Sequence[Mark], letter: str) -> str:
-    """The star over its template, names above, misfit in sigmas below."""
+def spectrum(ready: Prepared, template: FloatArray | None, t_code: float, marks: Sequence[Mark]) -> str:
+    """The star over its template of type ``t_code`` (NaN if it has none), names above, misfit in sigmas below."""
     reach = np.flatnonzero(ready.valid)
     if len(reach) == 0:
         return ""
@@ -86,10 +87,12 @@ def spectrum(ready: Prepared, template: FloatArray | None, marks: Sequence[Mark]
     plot.line(_thin(wave, step), _thin(star, step), "ink")
     if template is not None and np.isfinite(template).any():
         plot.line(_thin(wave, step), _thin(np.where(ready.valid, template, np.nan)[cut], step), "here")
-        z = np.clip(np.nan_to_num(_thin(misfit(ready, template)[cut], step)), -CLIP_SIGMA, CLIP_SIGMA)
+        scatter = template_scatter(ready.wave_angstrom, t_code, ready.fwhm_angstrom)
+        z = np.clip(np.nan_to_num(_thin(misfit(ready, template, scatter)[cut], step)), -CLIP_SIGMA, CLIP_SIGMA)
         middle = low - 0.22 * span
         plot.area(_thin(wave, step), middle + z / CLIP_SIGMA * 0.16 * span, middle)
         plot.text(float(wave[0]), middle, "misfit", "label", "end", dx=-6, dy=4)
+    letter = LETTERS[int(np.clip(t_code // 10, 0, len(LETTERS) - 1))] if math.isfinite(t_code) else "F"
     names = choose_marks(marks, ready.wave_angstrom, template if template is not None else ready.rectified,
                          float(wave[0]), float(wave[-1]), letter)
     for m in names:

@@ -248,8 +248,7 @@ class SpectrumArtist:
                 template = self._classifier.template(t, lum if math.isfinite(lum) else 5.0, ready)
         except StarfathomError as error:
             return f"<p>{escape(str(error))}</p>"
-        letter = star.text_of("mk_type")[:1]
-        return pictures.spectrum(ready, template, self._marks, letter if letter and letter in "OBAFGKM" else "F")
+        return pictures.spectrum(ready, template, t, self._marks)
 
 
 def star_page(star: StarResult, artist: SpectrumArtist, before: StarResult | None, after: StarResult | None) -> str:
