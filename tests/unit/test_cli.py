@@ -306,3 +306,51 @@ def test_output_survives_a_terminal_without_unicode(tmp_path: Path) -> None:
     done = subprocess.run(command,
                           capture_output=True, env=os.environ | {"PYTHONIOENCODING": "koi8-r"})  # fmt: skip
     assert done.returncode == 0 and b"+-" in done.stdout
+
+
+# Commands that other rooms carry out ---------------------------------------------------------------------------------
+
+
+def test_lines_sheet_and_desk_hand_their_options_on(monkeypatch: pytest.MonkeyPatch, spectrum: Path) -> None:
+    from starfathom import desk, lines_command, sheet
+
+    seen: list[Any] = []
+    monkeypatch.setattr(lines_command, "run", lambda *a, **k: seen.append((a, k)))
+    monkeypatch.setattr(sheet, "run", lambda *a, **k: seen.append((a, k)))
+    monkeypatch.setattr(desk, "serve", lambda *a: seen.append(a))
+    assert call("lines", "a.fits", "--fwhm", "5", "--vacuum", "--reference", "--json") == 0
+    assert call("sheet", "a.fits", "--with", "G2 V", "-o", "a.pdf", "--velocity", "12") == 0
+    assert call("desk", "a.fits", "b.fits", "--port", "8123", "--no-browser") == 0
+    lines, page, served = seen
+    assert lines[0] == ("a.fits",)
+    assert lines[1] | {"fwhm_angstrom": 5.0, "medium": "vacuum", "reference": True, "as_json": True} == lines[1]
+    assert page == (("a.fits", "G2 V", "a.pdf"), {"medium": None, "fwhm_angstrom": None, "velocity_kms": 12.0})
+    assert served == (["a.fits", "b.fits"], 8123, False)
+
+
+def test_lines_refuses_a_bad_output_before_the_work(spectrum: Path) -> None:
+    assert call("lines", str(spectrum), "-o", "lines.xlsx") == 2
+
+
+def test_demo_carries_its_targets_and_starts_afresh(
+    fake: type[FakeClassifier], tmp_path: Path, monkeypatch: pytest.MonkeyPatch, capsys: pytest.CaptureFixture[str]
+) -> None:
+    monkeypatch.setattr(cli, "_write_report", lambda run_dir: run_dir / "report.html")
+    folder = tmp_path / "demo_report"
+    for _ in range(2):
+        assert call("demo", "-o", str(folder)) == 0
+        out = capsys.readouterr().out
+        assert "TH17-01" in out and "19 stars" in out and str(folder / "report.html") in out
+    other = tmp_path / "precious"
+    other.mkdir()
+    (other / "file").write_text("x")
+    assert call("demo", "-o", str(other)) == 2
+    assert (other / "file").exists()
+
+
+def test_long_runs_are_summed_up(tmp_path: Path, capsys: pytest.CaptureFixture[str]) -> None:
+    listed = tmp_path / "list.csv"
+    listed.write_text("name,mk_type,V\n" + "".join(f"s{i},G2 V,9\n" for i in range(50)))
+    assert call("run", str(listed), "-o", str(tmp_path / "out"), "--no-report", "--formats", "csv") == 0
+    out = capsys.readouterr().out
+    assert out.splitlines()[0] == "50 stars: 50 typed." and "s17" not in out
