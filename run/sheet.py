@@ -17,7 +17,17 @@ from starfathom.classify.prepared import Prepared
 from starfathom.desk.palette import LIGHT
 from starfathom.desk.plane import cell_name, cell_near
 from starfathom.desk.scatter import template_scatter
-from starfathom.desk.windows import Mark, Window, choose_marks, known_marks, misfit, rms, windows_for, within
+from starfathom.desk.windows import (
+    Mark,
+    Window,
+    choose_marks,
+    known_marks,
+    misfit,
+    rms,
+    windows_for,
+    windows_on,
+    within,
+)
 from starfathom.templates.subtypes import LETTERS, class_of, nearest_subtype
 
 if TYPE_CHECKING:
@@ -191,8 +201,7 @@ def draw_spectrum(ax: Axes, e: Evidence) -> Axes:
     ax.set_ylim(low - 0.08 * span, high + 0.65 * span)
     ax.set_ylabel("flux over continuum")
     base = e.template if np.isfinite(e.template).any() else star
-    letter = LETTERS[int(np.clip(e.t_code // 10, 0, 6))] if math.isfinite(e.t_code) else "F"
-    for m in choose_marks(e.marks, wave, base, float(reach[0]), float(reach[-1]), letter):
+    for m in choose_marks(e.marks, wave, base, float(reach[0]), float(reach[-1]), _letter(e.t_code)):
         ax.plot([m.wave_angstrom] * 2, [high + 0.04 * span, high + 0.1 * span], color=LIGHT.soft, lw=0.5)
         ax.text(m.wave_angstrom, high + 0.12 * span, m.name.split(" (")[0], rotation=90, ha="center", va="bottom",
                 fontsize=6.5)
@@ -205,7 +214,15 @@ def _windows(e: Evidence) -> list[Window]:
     reach = e.prepared.wave_angstrom[e.prepared.valid]
     if len(reach) == 0:
         return []
-    return windows_for(e.assignment.evidence, e.marks, float(reach[0]), float(reach[-1]), MOST_WINDOWS)
+    lo, hi = float(reach[0]), float(reach[-1])
+    found = windows_for(e.assignment.evidence, e.marks, lo, hi, MOST_WINDOWS)
+    if found or not np.isfinite(e.template).any():
+        return found
+    return windows_on(e.marks, e.prepared, e.template, lo, hi, _letter(e.t_code))
+
+
+def _letter(t_code: float) -> str:
+    return LETTERS[int(np.clip(t_code // 10, 0, 6))] if math.isfinite(t_code) else "F"
 
 
 def draw_windows(figure: Figure, place: Any, e: Evidence, sigmas: FloatArray) -> None:
@@ -271,6 +288,8 @@ def draw_pointers(figure: Figure, place: Any, e: Evidence) -> None:
     criteria = sorted(said.evidence, key=lambda c: -c.weight)[:14]
     if not criteria:
         ax.axis("off")
+        words = "No criterion has a say here;\nthe windows are on the strongest\nfeatures of the type compared."
+        ax.text(0, 1, words, va="top", color=LIGHT.soft)
         return
     centre = e.t_code if math.isfinite(e.t_code) else said.t_code
     lo, hi = _reach(criteria, centre)

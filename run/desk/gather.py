@@ -67,7 +67,8 @@ def of_run(run_dir: Path) -> Night:
         settings = Settings(medium=medium, fwhm_angstrom=target.get("fwhm_angstrom"),
                             velocity_kms=target.get("velocity_kms"))
         said = None if detail is None else assignment_of(row, detail)
-        stars.append(Star(row["name"], spectrum_path(facts, row["file"]), settings, said, row=row, target=target))
+        path = spectrum_path(run_dir, facts, row["file"])
+        stars.append(Star(row["name"], path, settings, said, row=row, target=target))
     classifier = Classifier.load(without_libraries=tuple(asked.get("without_libraries", ())),
                                  without_stars=tuple(asked.get("without_stars", ())))
     return Night(stars, classifier, DecisionLog(log_path(run_dir)), lambda path: read_plain(path, medium=medium),

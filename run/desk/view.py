@@ -32,6 +32,9 @@ FloatArray = NDArray[np.float64]
 FONT = "system-ui, 'DejaVu Sans', sans-serif"
 CLIP_SIGMA = 6.0          # ribbons are cut off here
 SPECTRUM_POINTS = 2600    # more pixels than this are averaged in pairs for the overall picture
+SPECTRUM_SOURCES = ("star", "here", "pin", "rail", "rail_lines", "bands", "names", "name_ticks")
+STRIP_SOURCES = ("w_star", "w_here", "w_pin", "ribbon_here", "ribbon_pin", "cards", "levels", "marks", "titles",
+                 "tells", "size_here", "size_pin", "worst")
 PLANE_CELLS = 30          # subtypes on view
 
 
@@ -213,8 +216,14 @@ class View:
                 self._put_strip(here, pinned)
             except StarfathomError as error:
                 s.said = str(error)
+                self._blank()
         self._put_plane()
         self._put_words(here, pinned)
+
+    def _blank(self) -> None:
+        """Empty the pictures of the spectrum: better nothing than the star before under this one's name."""
+        for key in (*SPECTRUM_SOURCES, *STRIP_SOURCES):
+            self._put(key, {column: [] for column in self._sources[key].data})
 
     def words(self) -> dict[str, str]:
         """The words for the page as it is first sent."""

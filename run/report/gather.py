@@ -183,12 +183,14 @@ def read_run(run_dir: str | Path) -> RunResult:
     return RunResult(folder, facts, stars, [s for _, _, s in sorted(wanted, reverse=True)], tally, tables)
 
 
-def spectrum_path(facts: dict[str, Any], path: str) -> str:
-    """Where a run's spectrum is now: as the run named it, else beside the target list, wherever one stands."""
-    if Path(path).is_file():
-        return path
-    beside = Path(str(facts.get("targets", ""))).parent / Path(path).name
-    return str(beside) if beside.is_file() else path
+def spectrum_path(run_dir: Path, facts: dict[str, Any], path: str) -> str:
+    """Where a run's spectrum is, wherever one stands now: as the run named it, beside the target list, or that path
+    counted from one of the folders the run is in. The path itself when it is in none of these places."""
+    listed = Path(str(facts.get("targets", ""))).parent / Path(path).name
+    for place in (Path(path), listed, *(folder / path for folder in run_dir.resolve().parents)):
+        if place.is_file():
+            return str(place)
+    return path
 
 
 def _read_ecsv(path: Path) -> Iterator[dict[str, Any]] | None:

@@ -35,7 +35,7 @@ def write_report(run_dir: str | Path) -> Path:
     paged = {s.number for s in with_page}
     if with_page:
         (run.folder / FOLDER).mkdir(exist_ok=True)
-        artist = SpectrumArtist(run.facts)
+        artist = SpectrumArtist(run.folder, run.facts)
         for k, star in enumerate(with_page):
             before = with_page[k - 1] if k else None
             after = with_page[k + 1] if k + 1 < len(with_page) else None
@@ -218,7 +218,8 @@ def _facts(facts: dict[str, Any]) -> str:
 class SpectrumArtist:
     """Draws spectra over templates with the classifier of the run; loads it when the first is asked for."""
 
-    def __init__(self, facts: dict[str, Any]) -> None:
+    def __init__(self, folder: Path, facts: dict[str, Any]) -> None:
+        self._folder = folder
         self._asked: dict[str, Any] = facts.get("settings", {})
         self._facts = facts
         self._classifier: Any = None
@@ -240,7 +241,7 @@ class SpectrumArtist:
         settings = Settings(medium=self._asked.get("medium"), fwhm_angstrom=target.get("fwhm_angstrom"),
                             velocity_kms=target.get("velocity_kms"))
         try:
-            found = spectrum_path(self._facts, path)
+            found = spectrum_path(self._folder, self._facts, path)
             ready = self._classifier.prepare(read_plain(found, medium=self._asked.get("medium")), settings)
             t, lum = star.number_of("t_code"), star.number_of("lum_code")
             template = None

@@ -363,3 +363,51 @@ def test_orange_and_blue_stay_apart_for_every_eye(palette, eye):
     colours = [seen(c) for c in (palette.here, palette.pin, palette.ink)]
     for k in range(3):
         assert np.linalg.norm(colours[k] - colours[k - 1]) > 0.15
+
+
+# the pictures --------------------------------------------------------------------------------------------------------
+
+def test_pictures_follow_and_never_show_another_star(tmp_path):
+    from starfathom.desk.view import SPECTRUM_SOURCES, STRIP_SOURCES, View
+
+    night = make_night(tmp_path, "G2_V.txt", "K0_III.txt")
+    session = at(Session(night, known_marks()), "G2_V")
+    view = View(session)
+    view.refresh()
+    sources = {k: view._sources[k] for k in (*SPECTRUM_SOURCES, *STRIP_SOURCES)}
+    assert set(sources) <= set(view._sources)
+    assert len(sources["star"].data["x"]) > 500 and len(sources["ribbon_here"].data["left"]) > 50
+    template = np.array(sources["here"].data["y"])
+    session.do("move", {"right": 6})
+    view.refresh()
+    assert not np.array_equal(template, sources["here"].data["y"])
+    assert len(sources["pin"].data["x"]) == 0
+    night._prepared.clear()
+    for star in night.stars:
+        if star.name == "K0_III":
+            star.file = "broken.txt"                       # the file has gone since it was typed
+    at(session, "K0_III")
+    view.refresh()
+    assert "broken.txt" in session.said
+    assert all(len(column) == 0 for s in sources.values() for column in s.data.values())
+
+
+def test_the_plane_shows_the_posterior_where_it_is(tmp_path):
+    from starfathom.desk.view import View
+
+    session = at(Session(make_night(tmp_path, "G2_V.txt"), known_marks()), "G2_V")
+    view = View(session)
+    view.refresh()
+    image = view._sources["shade"].data["image"][0]
+    i, j = plane.cell_named("G2 V")
+    # rows count up from class V, columns are subtypes
+    assert image.shape == (plane.N_CLASSES, plane.N_TYPES) and image[plane.N_CLASSES - 1 - j, i] == image.max() == 1.0
+    cell = {k: v[0] for k, v in view._sources["here_cell"].data.items()}
+    assert cell["left"] < i + 0.5 < cell["right"] and cell["bottom"] < 0.0 < cell["top"]
+    low, high = view.plane.x_range.start, view.plane.x_range.end
+    assert low < i < high
+    for _ in range(30):
+        session.do("move", {"right": -5})
+        view.refresh()
+    assert view.plane.x_range.start <= 0 < view.plane.x_range.end          # the view goes with the cursor
+    assert view.plane.yaxis[0].major_label_overrides[0] == "V  70 %"
