@@ -22,7 +22,7 @@ if TYPE_CHECKING:
     from specutils import Spectrum
 
 #: Largest VOTable that is parsed, in bytes.
-MAX_VOTABLE = 8 << 20
+MAX_VOTABLE = 3 << 20
 #: Most pixels that are unpacked from a compressed image.
 _MAX_UNPACKED = 20_000_000
 

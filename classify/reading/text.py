@@ -19,10 +19,13 @@ from starfathom.classify.reading.request import Request
 from starfathom.classify.reading.units import flux_kind, spectral_unit
 from starfathom.classify.spectrum import FloatArray
 
-#: Largest text that is parsed as one spectrum, in bytes; most lines of one that is not plain columns; longest line.
+# Bounds that keep any text below ten seconds and 1 GB: bytes; rows of plain even columns; lines of any other text;
+# length of a line; length of the lines of a text of many lines.
 MAX_TEXT = 32 << 20
-MAX_LINES = 400_000
+MAX_ROWS = 1_000_000
+MAX_LINES = 150_000
 MAX_LINE = 1 << 20
+MAX_USUAL_LINE = 5000
 _LONG_HEADING = 500
 # digits are counted in all patterns here: without that, a long run of digits takes quadratic time
 _NUMBER = rb"[-+]?(?:\d{1,40}\.?\d{0,40}|\.\d{1,40})(?:[eEdD][-+]?\d{1,4})?"
@@ -164,11 +167,13 @@ def _quick(data: bytes) -> Table | None:
             return None
     else:
         columns = len(first.split())
+    rows = body.count(b"\n") + (not body.endswith(b"\n"))
+    if rows > MAX_ROWS or len(first) > MAX_USUAL_LINE:
+        return None
     try:
         values = np.fromstring(body, dtype=np.float64, sep=" ")
     except ValueError:
         return None
-    rows = body.count(b"\n") + (not body.endswith(b"\n"))
     if rows * columns != values.size or columns < 2 or rows < 5:
         return None
     values = values.reshape(rows, columns)
@@ -238,6 +243,8 @@ def _slow(text: str, path: str) -> Table:
     sample = [line for line in lines[:20000] if _may_be_data(line)][:400]
     if not sample:
         raise SpectrumError(f"{path}: {_NO_ROWS}.")
+    if len(sample) > 4 and sorted(map(len, sample))[len(sample) // 2] > MAX_USUAL_LINE:
+        raise SpectrumError(f"{path}: rows of more than {MAX_USUAL_LINE} characters are no spectrum; extract it first.")
     best: tuple[int, str, str] | None = None
     for separator, decimal in _SEPARATORS:
         score = _score(sample, separator, decimal)
