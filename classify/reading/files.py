@@ -10,7 +10,6 @@ import stat
 import zipfile
 import zlib
 from collections.abc import Callable, Iterator
-from pathlib import Path
 
 from starfathom.classify.errors import SpectrumError
 
@@ -151,4 +150,4 @@ def shown(path: str | os.PathLike[str]) -> str:
     return text if len(text) <= 200 else "..." + text[-197:]
 
 
-__all__ = ["MAX_BYTES", "Path", "load_bytes", "shown", "unpack"]
+__all__ = ["MAX_BYTES", "load_bytes", "shown", "unpack"]

@@ -13,6 +13,7 @@ from starfathom.classify.reading.names import is_companion, log_of, never_wavele
 from starfathom.classify.reading.raw import ErrorKind, RawSpectrum
 from starfathom.classify.reading.request import Request
 from starfathom.classify.reading.text import in_reach, is_steady
+from starfathom.classify.reading.units import flux_word
 from starfathom.classify.spectrum import FloatArray
 
 #: Most rows an image may have and still count as one spectrum with its companions (error, sky ...).
@@ -132,6 +133,8 @@ def _from_image(hdu: Hdu, units: list[Hdu], request: Request) -> RawSpectrum | t
     else:
         rows = values
     n = rows.shape[1]
+    if request.row is None and "APNUM2" in hdu.header and len(rows) > 1 and axis == 1 and shape[1:2] == (len(rows),):
+        return 5, f"{hdu} holds {len(rows)} apertures; pick one by its row number"
     pick = request.row or 0
     if request.row is not None:
         if not 0 <= pick < len(rows):
@@ -241,7 +244,7 @@ def _name_rows(rows: FloatArray, hdu: Hdu, found: dispersion.Axis | None) -> Raw
         raw.flux, raw.error, raw.error_kind = rows[0], rows[1], "ivar"
         raw.wave = rows[2]
         if len(rows) > 3:
-            raw.bad = rows[3] != 0
+            _mark(raw, rows[3])
         return raw
     if "COEFF0" in header and len(rows) >= 3:
         raw.flux, raw.error, raw.error_kind = rows[0], rows[2], "std"
@@ -277,6 +280,17 @@ def _row_word(header: fitsio.Header, i: int) -> str:
         if word and not word.replace(".", "").isdigit():
             return word
     return ""
+
+
+def _mark(raw: RawSpectrum, flags: FloatArray) -> None:
+    """Bad pixels from flags; bits that mark most of a spectrum are remarks on it, and then zero weight tells."""
+    bad = flags != 0
+    if raw.error is not None and raw.error_kind == "ivar" and np.mean(bad) > 0.5 and np.nanmax(flags) > 1:
+        raw.notes.append(
+            f"the mask marks {100 * np.mean(bad):.0f} % of the pixels: left out, zero weights tell the bad ones"
+        )
+        return
+    raw.bad = bad
 
 
 def _is_wave(row: FloatArray) -> bool:
@@ -324,14 +338,14 @@ def _from_table(hdu: Hdu, units: list[Hdu], request: Request) -> RawSpectrum | t
         raw = RawSpectrum(
             _cells(hdu, wave, request), flux_values, wave.unit or split_unit(wave.name)[1], "", log_of(wave.name)
         )
-    raw.flux_unit = flux.unit or _implied(flux.name)
+    raw.flux_unit = flux_word(flux.name, flux.unit or split_unit(flux.name)[1])
     for role in ("std", "ivar", "var", "snr"):
         column = picked.get(role)
         if column is not None:
             raw.error, raw.error_kind = _cells(hdu, column, request), _error_kind(role)
             break
     if "bad" in picked:
-        raw.bad = _cells(hdu, picked["bad"], request) != 0
+        _mark(raw, _cells(hdu, picked["bad"], request))
     elif "good" in picked:
         raw.bad = _cells(hdu, picked["good"], request) == 0
     raw.where = f"columns {wave.name if wave else 'of the header'} and {flux.name} of {hdu}"
@@ -341,11 +355,6 @@ def _from_table(hdu: Hdu, units: list[Hdu], request: Request) -> RawSpectrum | t
             raw.medium, raw.medium_source = found, f"column name {wave.name}"
     _wdisp(raw, hdu, all_columns)
     return raw
-
-
-def _implied(name: str) -> str:
-    """A column's name where it tells the kind of flux, as ``FNU`` or ``counts`` do."""
-    return split_unit(name)[1] or name
 
 
 def _wdisp(raw: RawSpectrum, hdu: Hdu, all_columns: list[fitsio.Column]) -> None:

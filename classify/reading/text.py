@@ -16,7 +16,7 @@ from starfathom.classify.reading.finish import guess_spectral_unit
 from starfathom.classify.reading.names import log_of, never_wavelength, role_of, split_unit
 from starfathom.classify.reading.raw import ErrorKind, RawSpectrum
 from starfathom.classify.reading.request import Request
-from starfathom.classify.reading.units import flux_kind, spectral_unit
+from starfathom.classify.reading.units import flux_kind, flux_word, spectral_unit
 from starfathom.classify.spectrum import FloatArray
 
 # Bounds that keep any text below ten seconds and 1 GB: bytes; rows of plain even columns; lines of any other text;
@@ -585,9 +585,7 @@ def assign_columns(table: Table, path: str, request: Request) -> RawSpectrum:
     if not wave_unit:
         wave_unit = _unit_in_words(table.remarks, values[:, picked["wave"]])
     log = log_of(wave_name)
-    flux_unit = request.flux_unit or (units[picked["flux"]] if units else "") or flux_name
-    if flux_kind(flux_unit) == "unknown":
-        flux_unit = next((x for x in (f"{flux_name} [{flux_unit}]", flux_name) if flux_kind(x) != "unknown"), flux_unit)
+    flux_unit = flux_word(flux_name, units[picked["flux"]] if units else "")
     if flux_kind(flux_unit) == "unknown":
         flux_unit = _flux_in_words(table.remarks) or flux_unit
     raw = RawSpectrum(

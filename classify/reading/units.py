@@ -130,3 +130,14 @@ def flux_kind(text: str) -> FluxKind:
     if re.search(r"normali[sz]ed|continuum|\bnorm\b|rectified", t):
         return "normalised"
     return "unknown"
+
+
+def flux_word(name: str, unit: str) -> str:
+    """First text that tells the kind of flux, of a flux column's unit, name and unit together, and name; else the unit."""
+    for text in (unit, f"{name} [{unit}]", name):
+        kind = flux_kind(text)
+        if kind == "mag" and flux_kind(f"{name} [{unit}]") != "unknown":
+            return f"{name} [{unit}]"
+        if kind != "unknown":
+            return text
+    return unit

@@ -385,6 +385,30 @@ def test_plate_of_spectra_by_row(tmp_path):
         read(tmp_path, data)
 
 
+def test_apertures_of_one_image_are_several_spectra(tmp_path):
+    unit = image(np.stack([FLUX, FLUX[::-1], FLUX + 5]), APNUM1="1 1", APNUM2="2 2", APNUM3="3 3", **LINEAR)
+    with pytest.raises(SpectrumError, match="3 apertures"):
+        read(tmp_path, as_bytes(unit))
+    same_star(read(tmp_path, as_bytes(unit), columns="row=2"), f=FLUX[::-1])
+
+
+def test_bits_that_mark_a_whole_survey_spectrum_are_left_out(tmp_path):
+    ivar = SIGMA**-2.0
+    ivar[:20] = 0
+    data = table({"wave": WAVE, "flux": FLUX, "ivar": ivar, "and_mask": np.full(N, 1 << 27)})
+    spec = read(tmp_path, data)
+    assert spec.valid.sum() == N - 20 and not spec.valid[:20].any()
+    assert any("marks 100 %" in n for n in spec.notes)
+
+
+@pytest.mark.parametrize(
+    "name,unit,power", [("STMAG", "mag", 0), ("MAG_ST", "mag", 0), ("ABMAG", "mag", 2), ("mag", "", 2)]
+)
+def test_magnitude_columns(tmp_path, name, unit, power):
+    mags = 15 - 2.5 * np.log10(FLUX * WAVE**power)
+    same_star(read(tmp_path, table({"wave": WAVE, name: mags}, {name: unit} if unit else None)))
+
+
 def test_unnamed_extension_of_likely_errors(tmp_path):
     spec = read(tmp_path, as_bytes(image(FLUX, **LINEAR), fits.ImageHDU(SIGMA)))
     same_star(spec, sigma=SIGMA)
