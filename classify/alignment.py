@@ -31,6 +31,7 @@ _TELLURIC = ((5860.0, 5920.0), (6865.0, 6935.0), (7160.0, 7330.0))
 #: Effective number of independent pieces in a spectrum, for weighing one velocity peak against another.
 _PIECES = 120.0
 _PRIOR_KMS = 300.0
+_PIECES_HOT, _HOT_STEP = 20.0, 27.0
 
 _CHUNKS = np.array([3800.0, 4050.0, 4300.0, 4600.0, 4950.0, 5350.0, 5850.0, 6500.0, 7100.0])
 _HALF_WIDTHS = np.array([130.0, 150.0, 170.0, 190.0, 220.0, 260.0, 330.0, 400.0, 350.0])
@@ -119,33 +120,40 @@ def first_velocity(flat: FloatArray, valid: BoolArray, nodes: Nodes) -> tuple[Fl
     return velocity, scatter, best, unexplained
 
 
-def line_spread(flux: FloatArray, flat: FloatArray, valid: BoolArray, best: NDArray[np.int64], nodes: Nodes
-                ) -> FloatArray:
+def line_spread(flux: FloatArray, flat: FloatArray, valid: BoolArray, best: NDArray[np.int64], nodes: Nodes,
+                pixel_angstrom: FloatArray) -> FloatArray:
     """FWHM (angstrom) of the line spread of (n, m) spectra at rest, from the blur that makes star and nodes agree.
 
-    Fast rotation counts as line spread, as it should when the templates are to be matched to the star.
+    ``pixel_angstrom`` (n,) is the spectrum's own sampling: spectrographs put 2 to 4 pixels on a resolution element,
+    and that is the prior, with a factor of 1.6 as its width. Among hot stars rotation widens the few lines there are,
+    so there the prior weighs more.
     """
     use = np.flatnonzero(nodes.valid & telluric_free(WAVE) & (WAVE > 3750) & (WAVE < 6800))[::2]
+    expected = np.log(np.clip(2.7 * pixel_angstrom, 1.0, 25.0))
+    hot = nodes.step[best[:, 0]] < _HOT_STEP
+    pieces = np.where(hot, _PIECES_HOT, _PIECES)
+
+    def settle(curves: list[FloatArray], trial: FloatArray, rows: NDArray[np.int64]) -> tuple[FloatArray, FloatArray]:
+        chi = np.maximum(np.array(curves).T, 1e-12)
+        score = pieces[rows, None] * np.log(chi) + ((np.log(trial)[None] - expected[rows, None]) / np.log(1.6)) ** 2
+        at = _parabola(score, np.arange(len(trial), dtype=float))[0]
+        return np.exp(np.interp(at, np.arange(len(trial)), np.log(trial))), score.argmin(axis=1)
+
     weight = valid[:, use]
     y = np.where(weight, flat[:, use] - 1.0, 0.0)
-    ln_ladder = np.log(np.array(LADDER))
-    curves = []
-    for f in range(len(LADDER)):
-        mean = nodes.rect[f][best[:, :3]][:, :, use].mean(axis=1)
-        curves.append((np.where(weight, y - mean, 0.0) ** 2).sum(axis=1))
-    chi = np.array(curves).T
-    out = np.exp(np.interp(_parabola(chi, np.arange(len(LADDER), dtype=float))[0], np.arange(len(LADDER)), ln_ladder))
-    fine = np.flatnonzero(chi.argmin(axis=1) == 0)
+    curves = [(np.where(weight, y - nodes.rect[f][best[:, :3]][:, :, use].mean(axis=1), 0.0) ** 2).sum(axis=1)
+              for f in range(len(LADDER))]
+    out, lowest = settle(curves, np.array(LADDER), np.arange(len(flat)))
+    fine = np.flatnonzero(lowest == 0)
     if fine.size:   # the star is as fine as the nodes or finer: blur the star instead
-        trial = np.array([0.8, 1.4, 2.0, 2.6, 3.2])
-        target = LADDER[2]
+        trial = np.array([0.8, 1.1, 1.6, 2.2, 2.7, 3.2])
         curves = []
+        mean = nodes.rect[2][best[fine, :3]][:, :, use].mean(axis=1)
         for f in trial:
-            blurred, ok = blur(flux[fine], valid[fine], float(np.sqrt(target ** 2 - f ** 2)))
+            blurred, ok = blur(flux[fine], valid[fine], float(np.sqrt(LADDER[2] ** 2 - f ** 2)))
             level, _ = rectify(blurred, ok)
-            mean = nodes.rect[2][best[fine, :3]][:, :, use].mean(axis=1)
             curves.append((np.where(ok[:, use], level[:, use] - 1.0 - mean, 0.0) ** 2).sum(axis=1))
-        out[fine] = np.clip(_parabola(np.array(curves).T, trial)[0], 0.8, 3.2)
+        out[fine] = np.clip(settle(curves, trial, fine)[0], 0.8, 3.2)
     return out
 
 

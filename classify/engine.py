@@ -120,9 +120,12 @@ class Classifier:
     without_libraries, without_stars : source libraries by name and stars by HIP number that nothing may be learned
         from. Names of libraries that are not in use are no error. Training takes about a minute a rung, kept in the
         user's cache directory.
+    vetted : False takes catalogue labels as they are, to measure what vetting them is worth.
     """
 
-    def __init__(self, without_libraries: Sequence[str] = (), without_stars: Sequence[int] = ()) -> None:
+    def __init__(self, without_libraries: Sequence[str] = (), without_stars: Sequence[int] = (), *,
+                 vetted: bool = True) -> None:
+        self.vetted = vetted
         self.without_libraries = tuple(sorted({str(s).strip().lower() for s in without_libraries if str(s).strip()}))
         try:
             self.without_stars = tuple(sorted({int(s) for s in without_stars if int(s) > 0}))
@@ -130,7 +133,7 @@ class Classifier:
             raise RequestError(f"stars are left out by HIP number: {error}") from None
         known = set(self.library_all.catalogue["library"].tolist())
         hips = set(self.library_all.catalogue["hip"].tolist())
-        self._default = not (known & set(self.without_libraries)) and not (hips & set(self.without_stars))
+        self._default = vetted and not (known & set(self.without_libraries)) and not (hips & set(self.without_stars))
         self._models: dict[float, Model] = {}
         self._nodes: Nodes | None = None
         self._aligned: Aligned | None = None
@@ -152,7 +155,7 @@ class Classifier:
     def _folder(self) -> Path:
         if self._default:
             return MODEL_DIR
-        key = hashlib.sha256(repr((self.without_libraries, self.without_stars)).encode()).hexdigest()[:12]
+        key = hashlib.sha256(repr((self.without_libraries, self.without_stars, self.vetted)).encode()).hexdigest()[:12]
         folder = _cache_dir() / f"{_recipe_fingerprint()}-{key}"
         folder.mkdir(exist_ok=True)
         return folder
@@ -163,7 +166,7 @@ class Classifier:
             if len(library) < 150:
                 raise RequestError(f"leaving out {', '.join(self.without_libraries)} leaves {len(library)} library "
                                    "stars, too few to learn from")
-            self._aligned = align_library(library)
+            self._aligned = align_library(library, vetted=self.vetted)
         return self._aligned
 
     @property
@@ -225,7 +228,8 @@ class Classifier:
         fwhm = np.where(has_f, given_f, 5.0)
         if (~has_f).any():
             rows = np.flatnonzero(~has_f)
-            fwhm[rows] = alignment.line_spread(flux[rows], flat[rows], valid[rows], best[rows], nodes)
+            fwhm[rows] = alignment.line_spread(flux[rows], flat[rows], valid[rows], best[rows], nodes,
+                                               np.array([natives[i].pixel_angstrom for i in rows]))
         curve, error = alignment.wander(flat, valid, best, np.clip(fwhm, alignment.LADDER[0], None), nodes)
         reach = nodes.valid
         total = np.where(has_v[:, None], curve - np.mean(curve[:, reach], axis=1, keepdims=True), curve)
@@ -251,8 +255,8 @@ class Classifier:
             if not has_f[i]:
                 remarks.append(f"line spread measured as {fwhm[i]:.1f} A")
             notes.append(tuple(remarks))
-        return PreparedBatch(flux, valid, sigma, flat, level, velocity, np.hypot(error, scatter / 2), has_v, fwhm, has_f,
-                             unexplained, snr, window, tuple(medium), tuple(notes), best)
+        return PreparedBatch(flux, valid, sigma, flat, level, velocity, np.hypot(error, scatter / 2), has_v, fwhm,
+                             has_f, unexplained, snr, window, tuple(medium), tuple(notes), best)
 
     def _own_noise(self, natives: list[Native], flat: FloatArray, valid: BoolArray, sigma: FloatArray,
                    level: FloatArray, best: NDArray[np.int64], fwhm: FloatArray) -> FloatArray:
@@ -268,7 +272,8 @@ class Classifier:
             if left.size < 60:
                 continue
             rough = left - np.convolve(left, np.ones(25) / 25, "same")
-            scale = float(1.4826 * np.median(np.abs(rough)) / max(np.median(sigma[i][use] / np.abs(level[i][use])), 1e-9))
+            own = max(float(np.median(sigma[i][use] / np.abs(level[i][use]))), 1e-9)
+            scale = float(1.4826 * np.median(np.abs(rough))) / own
             out[i] *= min(1.0, scale)
         return out
 
@@ -314,7 +319,7 @@ class Classifier:
                 continue
             try:
                 native = self._native(s, each[i])
-                flux, ok = native.quick()
+                ok = native.quick()[1]
                 if int(ok[PIXELS].sum()) < _LEAST_PIXELS:
                     out[i] = Assignment(file=s.path, status="refused", reason="almost nothing of the spectrum lies "
                                         "between 3640 and 7390 A, where the templates are", notes=s.notes)
@@ -344,7 +349,8 @@ class Classifier:
                     out[i] = answer
         return out
 
-    def matched(self, batch: PreparedBatch, rows: NDArray[np.int64], model: Model) -> tuple[Match, FloatArray, BoolArray]:
+    def matched(self, batch: PreparedBatch, rows: NDArray[np.int64], model: Model
+                ) -> tuple[Match, FloatArray, BoolArray]:
         """Match rows of a batch at the rung of ``model``: the match, the rectified pixels and their mask."""
         rung = model.fwhm_angstrom
         flux, ok = np.empty((len(rows), len(WAVE))), np.empty((len(rows), len(WAVE)), bool)
@@ -383,10 +389,11 @@ class Classifier:
         mag, mag_extra = average(model.abs_mag, found.components, found.spread)
         grav, grav_extra = average(model.log_g, found.components, found.spread)
         fe_h, fe_h_sd = model.fe_h.predict(found.components, found.spread)
-        log_p = post.log_posterior(found.log_like, mag, mag_extra, grav, grav_extra, model.surface, model.loci,
-                                   model.blend)
-        evidence = gather_evidence(batch, rows, found, model, mag, grav)
-        log_p = log_p + evidence.log_weight
+        by_regression, by_regression_extra = average(model.step, found.components, found.spread)
+        evidence = gather_evidence(batch, rows, self.model, by_regression)
+        log_p = post.weigh(post.evidence_pieces(found.log_like, mag, mag_extra, grav, grav_extra, by_regression,
+                                                by_regression_extra, evidence.log_like, model.surface, model.loci),
+                           model.blend)
         p = post.widen(post.normalise(log_p), model.blend.step_sd_floor)
         step, step_sd, lum, lum_sd = post.codes(p)
         mag_sd = self._mag_error(model, step, mag, mag_extra)
@@ -424,7 +431,7 @@ class Classifier:
                 t_code_err=float(step_sd[q]), lum_code=float(lum[q]), lum_code_err=float(lum_sd[q]), posterior=p[q],
                 type_set_90=post.type_set(p[q], mass), abs_mag_v=float(mag[q]), abs_mag_v_err=float(mag_sd[q]),
                 abs_mag_v_ok=bool(ok_mag), log_g=float(grav[q]), log_g_err=float(np.hypot(0.25, grav_extra[q])),
-                nearest=near[q], flags=tuple(flags), evidence=evidence.criteria[q], **common)
+                nearest=near[q], flags=tuple(flags), evidence=evidence.criteria_for(q, code), **common)
             answer = judge_foreign(answer, batch, i, found, q, flat[q], valid[q], float(fe_h[q]))
             if answer.status == "typed":
                 answer = replace(answer, remark=remark_on(answer, float(fe_h[q])))
@@ -480,7 +487,7 @@ class Classifier:
         return [str(c["star"][k]) for k in np.argsort(far, kind="stable")[:n] if np.isfinite(far[k])]
 
     def library_spectrum(self, name: str, prepared: Prepared) -> FloatArray:
-        """A named library star (m,), rectified and blurred like ``prepared``. Raises RequestError for a strange name."""
+        """A named library star (m,), rectified and blurred like ``prepared``; RequestError for a strange name."""
         library = self.library
         where = np.flatnonzero(library.catalogue["star"] == name)
         if not where.size:
@@ -492,7 +499,8 @@ class Classifier:
 
 _IN_PIXELS = np.zeros(len(WAVE), bool)
 _IN_PIXELS[PIXELS] = True
-_SNR_WINDOWS = ((4400.0, 4600.0), (4900.0, 5100.0), (5300.0, 5600.0), (4000.0, 4200.0), (6100.0, 6400.0), (6600.0, 6800.0))
+_SNR_WINDOWS = ((4400.0, 4600.0), (4900.0, 5100.0), (5300.0, 5600.0), (4000.0, 4200.0), (6100.0, 6400.0),
+                (6600.0, 6800.0))
 
 
 def _signal_to_noise(flux: FloatArray, sigma: FloatArray, valid: BoolArray) -> tuple[FloatArray, tuple[str, ...]]:

@@ -6,6 +6,7 @@ from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
+from scipy.linalg import cholesky, solve_triangular
 
 FloatArray = NDArray[np.float64]
 
@@ -54,14 +55,18 @@ class Regressor:
 
     @classmethod
     def from_arrays(cls, arrays: dict[str, NDArray[np.generic]], prefix: str) -> Regressor:
-        mean, amplitude, length2, jitter = (float(v) for v in arrays[f"{prefix}.numbers"])
-        return cls(arrays[f"{prefix}.points"], arrays[f"{prefix}.scale"], arrays[f"{prefix}.alpha"],  # type: ignore[arg-type]
-                   mean, amplitude, length2, jitter, arrays[f"{prefix}.root"])                         # type: ignore[arg-type]
+        mean, amplitude, length2, jitter = (float(v) for v in np.asarray(arrays[f"{prefix}.numbers"], float))
+        points, scale, alpha, root = (np.asarray(arrays[f"{prefix}.{n}"]) for n in ("points", "scale", "alpha", "root"))
+        return cls(points.astype(np.float32), scale.astype(float), alpha.astype(float), mean, amplitude, length2,
+                   jitter, root.astype(np.float32))
 
 
 def fit(features: FloatArray, target: FloatArray, error: FloatArray, *, components: int, with_variance: bool = False,
-        lengths: tuple[float, ...] = (1.0, 2.0, 4.0), jitters: tuple[float, ...] = (0.1, 0.2, 0.35)) -> Regressor:
-    """Fit on (n, >= components) features; length and jitter by marginal likelihood over small grids.
+        lengths: tuple[float, ...] = (2.0,), jitters: tuple[float, ...] = (0.2,)) -> Regressor:
+    """Fit on (n, >= components) features; length and jitter by marginal likelihood when several are given.
+
+    The defaults are what that likelihood chose for absolute magnitude and gravity, in units of the median squared
+    distance and of half the target's standard deviation.
 
     Features are scaled by the square root of their standard deviation, between equal say and say by variance.
     """
@@ -79,11 +84,12 @@ def fit(features: FloatArray, target: FloatArray, error: FloatArray, *, componen
         base = amplitude * np.exp(-d2 / (2 * length * typical))
         for jitter in jitters:
             matrix = base + np.diag(error ** 2 + (jitter * unit / 2) ** 2)
-            low = np.linalg.cholesky(matrix)
-            half = np.linalg.solve(low, y)
+            low = cholesky(matrix, lower=True, check_finite=False)
+            half = solve_triangular(low, y, lower=True, check_finite=False)
             score = -0.5 * float(half @ half) - float(np.log(np.diag(low)).sum())
             if best is None or score > best[0]:
-                best = (score, length, jitter * unit / 2, low, np.linalg.solve(low.T, half))
+                weights = solve_triangular(low, half, lower=True, trans=1, check_finite=False)
+                best = (score, length, jitter * unit / 2, low, weights)
     assert best is not None
     _, length, jitter, low, alpha = best
     root = np.linalg.inv(low).astype(np.float32) if with_variance else np.empty((0, 0), np.float32)

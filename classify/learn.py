@@ -7,7 +7,9 @@ Training on part of the library (``--without`` on the command line) goes through
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
+from dataclasses import fields as dataclass_fields
+from itertools import pairwise
 from pathlib import Path
 
 import numpy as np
@@ -17,11 +19,22 @@ from scipy.optimize import minimize
 
 from starfathom.classify import alignment
 from starfathom.classify.alignment import Nodes
+from starfathom.classify.criteria import CriterionScales, learn_criterion_scales, log_likelihood, measure_criteria
 from starfathom.classify.gaussian_process import Regressor, fit
-from starfathom.classify.grid import WAVE, blur, rectify
+from starfathom.classify.grid import WAVE, blur, continuum, rectify
+from starfathom.classify.lines.direct import measure_many
 from starfathom.classify.model import RUNGS, Blend, Loci, Model
-from starfathom.classify.posterior import GROUPS, cell_of, log_posterior, normalise, set_score, student, widen
-from starfathom.classify.surface import CLASS_AT, CORE, PIXELS, Surface, fit_surface, local_linear, match
+from starfathom.classify.posterior import (
+    GROUPS,
+    cell_of,
+    evidence_pieces,
+    normalise,
+    set_score,
+    student,
+    weigh,
+    widen,
+)
+from starfathom.classify.surface import BANDS, CLASS_AT, CORE, PIXELS, Surface, fit_surface, local_linear, match
 from starfathom.classify.training import Lessons, fill_gaps, lessons_from
 from starfathom.templates.library import GRID_KMS, Library
 from starfathom.templates.subtypes import STEPS, t_code_from_step
@@ -75,11 +88,11 @@ def make_nodes(flat: FloatArray, valid: BoolArray, lessons: Lessons) -> Nodes:
     return Nodes.from_fine(np.array(spectra), reach & (WAVE < 7400), steps, classes)
 
 
-def align_library(library: Library, passes: int = 2) -> Aligned:
+def align_library(library: Library, passes: int = 2, *, vetted: bool = True) -> Aligned:
     """Bring every library star to the rest frame of the library as a whole, wander taken out."""
     flux, valid = library.flux.astype(float), library.valid
     fwhm = library.catalogue["fwhm_angstrom"].astype(float)
-    lessons = lessons_from(library)
+    lessons = lessons_from(library, vetted=vetted)
     pixel = np.arange(flux.shape[1], dtype=float)
     splines, bad = [], []
     for row, ok in zip(flux, valid):
@@ -118,24 +131,41 @@ def _shift(splines: list[CubicSpline], bad: list[FloatArray], velocity: FloatArr
 
 
 def perturb(flux: FloatArray, valid: BoolArray, rng: np.random.Generator) -> tuple[FloatArray, BoolArray]:
-    """Spectra as another instrument might give them: wavelength error, wander, blur, calibration ripple, noise."""
+    """Spectra as another instrument might give them.
+
+    Wavelength error and wander (10 km/s), line spread off by some 8 %, 4 % scattered light or its opposite,
+    calibration ripple on 30 A (0.8 %), pixel noise (1.2 %).
+    """
     n, m = flux.shape
     pixel = np.arange(m, dtype=float)
     ln = np.log(WAVE)
+    soft, _ = blur(flux, valid, 2.0)
+    level = continuum(flux, valid)
+    knots, fine = np.linspace(ln[0], ln[-1], 9), np.linspace(ln[0], ln[-1], 120)
     out = np.empty_like(flux)
     for i in range(n):
-        knots = np.linspace(ln[0], ln[-1], 9)
         wander = np.interp(ln, knots, rng.normal(0, 10.0, 9)) + rng.normal(0, 8.0)
+        mix = rng.normal(0, 0.35)
+        row = (1 - mix) * flux[i] + mix * soft[i] + rng.normal(0, 0.04) * level[i]
         good = np.flatnonzero(valid[i])
-        row = np.interp(pixel + wander / GRID_KMS, good, flux[i, good])
-        fine = np.linspace(ln[0], ln[-1], 120)                     # ripple of some 30 A
+        row = np.interp(pixel + wander / GRID_KMS, good, row[good])
         ripple = 1 + np.interp(ln, fine, rng.normal(0, 0.008, 120))
         out[i] = row * ripple * (1 + rng.normal(0, 0.012, m))
     return np.where(valid, out, 0.0), valid
 
 
-def _regressors(z: FloatArray, target: FloatArray, error: FloatArray, rows: NDArray[np.int64]) -> tuple[Regressor, ...]:
+def _regressors(z: FloatArray, target: FloatArray, error: FloatArray, rows: NDArray[np.int64]
+                ) -> tuple[Regressor, ...]:
     return tuple(fit(z[rows], target[rows], error[rows], components=k) for k in _SIZES)
+
+
+def _step_regressor(z: FloatArray, moved: FloatArray, lessons: Lessons, typed: NDArray[np.int64],
+                    keep: NDArray[np.int64]) -> Regressor:
+    """Subtype from the components of ``typed[keep]`` and of their perturbed copies (``moved``, a row a typed star)."""
+    rows = typed[keep]
+    points = np.concatenate([z[rows], moved[keep]])
+    error = np.tile(1.1 / np.sqrt(np.clip(lessons.trust[rows], 0.2, 1.0)), 2)
+    return fit(points, np.tile(lessons.step[rows], 2), error, components=40, jitters=(0.02,))
 
 
 def average(regressors: tuple[Regressor, ...], z: FloatArray, spread: FloatArray | None = None
@@ -183,46 +213,52 @@ class _Held:
     abs_mag_extra: FloatArray
     log_g: FloatArray
     log_g_extra: FloatArray
+    step: FloatArray
+    step_extra: FloatArray
+    criteria: FloatArray
 
 
 def _fit_blend(held: _Held, lessons: Lessons, surface: Surface, loci: Loci) -> Blend:
-    """Weights by log loss of the true class and of the (steady) subtype."""
+    """Weights by log loss of the true class and of the subtype, with a mild pull towards where they start."""
     rows = held.rows
     group_of = {j: g for g, members in enumerate(GROUPS) for j in members}
     truth = np.array([group_of[cell_of(20.0, lessons.lum_code[i])[1]] for i in rows])
     target = lessons.label_step[rows]
-    # rare classes count as much as the square root of their number
-    crowd = np.bincount(truth, minlength=len(GROUPS)).astype(float)
-    weight = 1 / np.sqrt(crowd[truth])
-    weight /= weight.mean()
+    pieces = evidence_pieces(held.log_like, held.abs_mag, held.abs_mag_extra, held.log_g, held.log_g_extra, held.step,
+                             held.step_extra, held.criteria, surface, loci)
+    start = np.log(np.array([0.2, 0.35, 0.35, 1.0, 0.05, 0.4, 0.4]))
 
     def unpack(x: FloatArray) -> Blend:
-        prior = np.array([-1.2, 0, 0, 0, x[3], 0, x[4], 0])
-        return Blend(float(np.exp(x[0])), float(np.exp(x[1])), float(np.exp(x[2])), prior, 0.0)
+        prior = np.array([-1.2, 0, 0, 0, x[5], 0, x[6], 0])
+        return Blend(*(float(v) for v in np.exp(x[:5])), prior, 0.0)
 
-    def loss(x: FloatArray) -> float:
-        p = normalise(log_posterior(held.log_like, held.abs_mag, held.abs_mag_extra, held.log_g, held.log_g_extra,
-                                    surface, loci, unpack(x)))
-        by_group = np.stack([p[:, :, list(g)].sum(axis=(1, 2)) for g in GROUPS], axis=1)
-        chosen = np.maximum(by_group[np.arange(len(rows)), truth], 1e-3)
+    def moments(blend: Blend) -> tuple[FloatArray, FloatArray, FloatArray]:
+        p = normalise(weigh(pieces, blend))
         pt = p.sum(axis=2)
         mean = pt @ STEPS
-        sd2 = np.maximum(pt @ STEPS ** 2 - mean ** 2, 0.01) + 0.8 ** 2
-        off = student((target - mean) / np.sqrt(sd2)) - 0.5 * np.log(sd2)
-        return float(-(weight * np.log(chosen)).mean() - 0.4 * (weight * off).mean()) + 0.01 * float(((x - start) ** 2).sum())
+        return p, mean, np.maximum(pt @ STEPS ** 2 - mean ** 2, 0.01)
 
-    start = np.array([np.log(0.15), np.log(0.5), np.log(0.5), np.log(0.4), np.log(0.4)])
-    found = minimize(loss, start, method="Nelder-Mead", options={"maxfev": 160, "xatol": 0.05, "fatol": 1e-4})
+    def loss(x: FloatArray) -> float:
+        p, mean, own = moments(unpack(x))
+        by_group = np.stack([p[:, :, list(g)].sum(axis=(1, 2)) for g in GROUPS], axis=1)
+        chosen = np.maximum(by_group[np.arange(len(rows)), truth], 1e-3)
+        sd2 = own + 0.8 ** 2
+        off = student((target - mean) / np.sqrt(sd2)) - 0.5 * np.log(sd2)
+        return float(-np.log(chosen).mean() - 0.5 * off.mean() + 0.02 * ((x - start) ** 2).sum())
+
+    found = minimize(loss, start, method="Nelder-Mead", options={"maxfev": 220, "xatol": 0.05, "fatol": 1e-4})
     blend = unpack(found.x)
+    _, mean, own = moments(blend)
     # what the labels scatter beyond the posterior's own spread
-    p = normalise(log_posterior(held.log_like, held.abs_mag, held.abs_mag_extra, held.log_g, held.log_g_extra,
-                                surface, loci, blend))
-    pt = p.sum(axis=2)
-    mean = pt @ STEPS
-    own = np.maximum(pt @ STEPS ** 2 - mean ** 2, 0)
     excess = np.percentile(np.abs(target - mean), 68) ** 2 - np.median(own)
-    return Blend(blend.temper, blend.abs_mag_weight, blend.log_g_weight, blend.log_prior_class,
-                 float(np.sqrt(max(excess, 0.04))))
+    return replace(blend, step_sd_floor=float(np.sqrt(max(excess, 0.04))))
+
+
+def _criteria(flux: FloatArray, valid: BoolArray, fwhm: float) -> tuple[FloatArray, FloatArray]:
+    """Values and errors of the ratio criteria of (n, m) spectra already at ``fwhm``."""
+    values, errors, _ = measure_criteria(measure_many(WAVE, flux, np.abs(flux) * _NOISE + 1e-9, valid,
+                                                      np.full(len(flux), fwhm)))
+    return values, errors
 
 
 def features(aligned: Aligned, fwhm: float, flux: FloatArray | None = None) -> tuple[FloatArray, BoolArray]:
@@ -232,7 +268,8 @@ def features(aligned: Aligned, fwhm: float, flux: FloatArray | None = None) -> t
     return flat[:, PIXELS], ok[:, PIXELS]
 
 
-def learn_rung(aligned: Aligned, names: NDArray[np.str_], labels: NDArray[np.str_], fwhm: float, seed: int = 0) -> Model:
+def learn_rung(aligned: Aligned, names: NDArray[np.str_], labels: NDArray[np.str_], fwhm: float, seed: int = 0
+               ) -> Model:
     """Train one rung: surface, regressors, loci, blend and conformal scores."""
     lessons = aligned.lessons
     flat, valid = features(aligned, fwhm)
@@ -250,6 +287,18 @@ def learn_rung(aligned: Aligned, names: NDArray[np.str_], labels: NDArray[np.str
     moved, _ = perturb(aligned.flux[typed], aligned.valid[typed], rng)
     sub = Aligned(moved, aligned.valid[typed], aligned.fwhm_angstrom[typed], lessons, aligned.nodes)
     flat_p, valid_p = features(sub, fwhm)
+    z_moved = (np.where(valid_p, flat_p, filled[typed]) - 1.0 - surface.mean)[:, CORE] @ surface.loadings[CORE]
+    surface = _add_instrument(surface, z_moved - z_typed, lessons.step[typed])
+
+    blurred, ok = _blur_each(aligned.flux[typed], aligned.valid[typed], aligned.fwhm_angstrom[typed], fwhm)
+    values, errors = _criteria(blurred, ok, fwhm)
+    blurred, ok = _blur_each(moved, aligned.valid[typed], aligned.fwhm_angstrom[typed], fwhm)
+    values_p, errors_p = _criteria(blurred, ok, fwhm)
+
+    def scales(rows: NDArray[np.int64]) -> CriterionScales:
+        return learn_criterion_scales(values[rows], errors[rows], t_code_from_step(lessons.step[typed[rows]]),
+                                      lessons.lum_code[typed[rows]], lessons.trust[typed[rows]])
+
     groups, inverse = np.unique(lessons.group[typed], return_inverse=True)
     fold = rng.integers(0, _FOLDS, len(groups))[inverse]
     fold_of_group = dict(zip(lessons.group[typed], fold))
@@ -264,28 +313,51 @@ def learn_rung(aligned: Aligned, names: NDArray[np.str_], labels: NDArray[np.str
         part = Surface(surface.mean, surface.loadings, surface.floor, nodes, support, surface.scatter)
         found = match(part, flat_p[test], valid_p[test], sigma[test])
         keep = np.array([g not in out_groups for g in lessons.group])
-        mag = _regressors(z, lessons.abs_mag_v, lessons.abs_mag_v_err, bright[keep[bright]])
-        grav = _regressors(z, lessons.log_g, 0.15 * unit, heavy[keep[heavy]])
-        m, me = average(mag, found.components, found.spread)
-        g, ge = average(grav, found.components, found.spread)
-        held_parts.append(_Held(typed[test], found.log_like, m, me, g, ge))
-    held = _Held(*(np.concatenate([getattr(h, name) for h in held_parts]) for name in
-                   ("rows", "log_like", "abs_mag", "abs_mag_extra", "log_g", "log_g_extra")))
+        m, me = average(_regressors(z, lessons.abs_mag_v, lessons.abs_mag_v_err, bright[keep[bright]]),
+                        found.components, found.spread)
+        g, ge = average(_regressors(z, lessons.log_g, 0.15 * unit, heavy[keep[heavy]]), found.components, found.spread)
+        t, te = average((_step_regressor(z, z_moved, lessons, typed, train),), found.components, found.spread)
+        own = scales(train)
+        says = np.concatenate([log_likelihood(own, values_p[q], errors_p[q]).sum(axis=1)
+                               for q in np.array_split(test, max(1, len(test) // 30))])
+        held_parts.append(_Held(typed[test], found.log_like, m, me, g, ge, t, te, says))
+    held = _Held(*(np.concatenate([getattr(h, f.name) for h in held_parts]) for f in dataclass_fields(_Held)))
     loci = Loci(*class_loci(lessons.step[held.rows], lessons.lum_code[held.rows], held.abs_mag, 0.3),
-                *class_loci(lessons.step[held.rows], lessons.lum_code[held.rows], held.log_g, 0.15))
+                *class_loci(lessons.step[held.rows], lessons.lum_code[held.rows], held.log_g, 0.15),
+                _step_scatter(held.step, lessons.step[held.rows]))
     blend = _fit_blend(held, lessons, surface, loci)
-    p = widen(normalise(log_posterior(held.log_like, held.abs_mag, held.abs_mag_extra, held.log_g, held.log_g_extra,
-                                      surface, loci, blend)), blend.step_sd_floor)
+    pieces = evidence_pieces(held.log_like, held.abs_mag, held.abs_mag_extra, held.log_g, held.log_g_extra, held.step,
+                             held.step_extra, held.criteria, surface, loci)
+    p = widen(normalise(weigh(pieces, blend)), blend.step_sd_floor)
     scores = np.sort([set_score(p[i], *cell_of(float(t_code_from_step(lessons.label_step[r])), lessons.lum_code[r]))
                       for i, r in enumerate(held.rows)])
     off = held.abs_mag - lessons.abs_mag_v[held.rows]
     have = np.isfinite(off)
     residuals = np.column_stack([lessons.step[held.rows], held.abs_mag,
                                  off ** 2 - lessons.abs_mag_v_err[held.rows] ** 2])[have]
+    everyone = np.arange(len(typed))
     return Model(fwhm, surface, _regressors(z, lessons.abs_mag_v, lessons.abs_mag_v_err, bright),
-                 _regressors(z, lessons.log_g, 0.15 * unit, heavy), fit(z[metal], lessons.fe_h[metal], 0.12 * unit[metal],
-                                                                       components=40),
-                 loci, blend, residuals, scores, names[typed], labels[typed], z_typed.astype(np.float32))
+                 _regressors(z, lessons.log_g, 0.15 * unit, heavy),
+                 (_step_regressor(z, z_moved, lessons, typed, everyone),),
+                 fit(z[metal], lessons.fe_h[metal], 0.12 * unit[metal], components=40), scales(everyone), loci, blend,
+                 residuals, scores, names[typed], labels[typed], z_typed.astype(np.float32))
+
+
+def _add_instrument(surface: Surface, moved: FloatArray, step: FloatArray) -> Surface:
+    """The surface with the covariance of what instruments change (``moved`` components) added to that of the stars."""
+    scatter = []
+    for own, (lo, hi) in zip(surface.scatter, pairwise(BANDS)):
+        near = (step > lo - 2) & (step < hi + 2)
+        delta = moved[near]
+        scatter.append(own + delta.T @ delta / max(len(delta), 1))
+    return replace(surface, scatter=np.array(scatter))
+
+
+def _step_scatter(found: FloatArray, label: FloatArray) -> FloatArray:
+    """Robust local standard deviation of the regressed subtype, at every subtype: (n_subtypes,)."""
+    off = np.minimum((found - label) ** 2, 16.0)
+    near = np.exp(-0.5 * ((STEPS[:, None] - found[None]) / 4.0) ** 2) + 1e-9
+    return np.sqrt(np.maximum((near @ off) / near.sum(axis=1), 0.5))
 
 
 def _weights(lessons: Lessons, rows: NDArray[np.int64]) -> FloatArray:

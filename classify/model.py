@@ -9,6 +9,7 @@ from typing import Any
 import numpy as np
 from numpy.typing import NDArray
 
+from starfathom.classify.criteria import CriterionScales
 from starfathom.classify.gaussian_process import Regressor
 from starfathom.classify.surface import Surface
 
@@ -16,6 +17,9 @@ FloatArray = NDArray[np.float64]
 
 #: The resolution ladder: a star is blurred up to the next rung and matched with templates of that width.
 RUNGS: tuple[float, ...] = (3.2, 4.6, 6.5, 9.0, 12.5, 17.0)
+
+
+_SEVERAL = ("abs_mag", "log_g", "step")
 
 
 @dataclass(frozen=True)
@@ -26,6 +30,7 @@ class Loci:
     abs_mag_sd: FloatArray
     log_g: FloatArray
     log_g_sd: FloatArray
+    step_sd: FloatArray          # (n_subtypes,) scatter of the regressed subtype
 
 
 @dataclass(frozen=True)
@@ -35,6 +40,8 @@ class Blend:
     temper: float                # power of the surface likelihood
     abs_mag_weight: float
     log_g_weight: float
+    step_weight: float
+    criteria_weight: float
     log_prior_class: FloatArray  # (8,)
     step_sd_floor: float         # added in quadrature to the posterior's own spread of the subtype
 
@@ -47,7 +54,9 @@ class Model:
     surface: Surface
     abs_mag: tuple[Regressor, ...]
     log_g: tuple[Regressor, ...]
+    step: tuple[Regressor, ...]
     fe_h: Regressor
+    criteria: CriterionScales
     loci: Loci
     blend: Blend
     residuals: FloatArray        # (r, 3) step, predicted abs_mag, squared residual less the parallax part
@@ -61,10 +70,11 @@ class Model:
         out: dict[str, Any] = {"fwhm_angstrom": np.array(self.fwhm_angstrom)}
         for f in fields(Surface):
             out[f"surface.{f.name}"] = getattr(self.surface, f.name).astype(np.float32)
-        for name in ("abs_mag", "log_g"):
+        for name in _SEVERAL:
             for i, r in enumerate(getattr(self, name)):
                 out |= r.arrays(f"{name}{i}")
         out |= self.fe_h.arrays("fe_h")
+        out |= {k: v.astype(np.float32) if v.dtype == float else v for k, v in self.criteria.arrays().items()}
         for f in fields(Loci):
             out[f"loci.{f.name}"] = getattr(self.loci, f.name)
         for f in fields(Blend):
@@ -80,10 +90,10 @@ class Model:
             a = {k: z[k] for k in z.files}
         surface = Surface(**{f.name: a[f"surface.{f.name}"].astype(float) for f in fields(Surface)})
         several = {name: tuple(Regressor.from_arrays(a, f"{name}{i}") for i in range(9) if f"{name}{i}.alpha" in a)
-                   for name in ("abs_mag", "log_g")}
+                   for name in _SEVERAL}
         loci = Loci(**{f.name: a[f"loci.{f.name}"] for f in fields(Loci)})
-        blend = Blend(**{f.name: (a[f"blend.{f.name}"] if f.name == "log_prior_class" else float(a[f"blend.{f.name}"]))
-                         for f in fields(Blend)})
-        return cls(float(a["fwhm_angstrom"]), surface, several["abs_mag"], several["log_g"],
-                   Regressor.from_arrays(a, "fe_h"), loci, blend, a["residuals"], a["conformal"], a["names"],
-                   a["labels"], a["components"])
+        weights = {f.name: float(a[f"blend.{f.name}"]) for f in fields(Blend) if f.name != "log_prior_class"}
+        blend = Blend(log_prior_class=a["blend.log_prior_class"], **weights)
+        return cls(float(a["fwhm_angstrom"]), surface, several["abs_mag"], several["log_g"], several["step"],
+                   Regressor.from_arrays(a, "fe_h"), CriterionScales.from_arrays(a), loci, blend, a["residuals"],
+                   a["conformal"], a["names"], a["labels"], a["components"])

@@ -17,27 +17,42 @@ _UNSUPPORTED = -3.0
 #: Cells are not equally wide in step (O9.7; K5-K7-M0): the prior is per unit of step.
 _CELL_WIDTH = np.gradient(STEPS)
 
+#: How often classifiers use a subtype, against a whole one: halves are rare among A to G stars (common practice).
+USAGE: FloatArray = np.array([1.0 if name[1:] in "0123456789" or name in ("O9.7", "B0.5", "B9.5") else
+                              (0.15 if name[0] in "AFG" else 0.4) for name in SUBTYPES])
+
 
 def student(deviation: FloatArray, dof: float = 5.0) -> FloatArray:
     """Log density of Student's t up to a constant: outliers must not decide."""
     return -0.5 * (dof + 1) * np.log1p(deviation ** 2 / dof)
 
 
-def log_posterior(log_like: FloatArray, abs_mag: FloatArray, abs_mag_extra: FloatArray, log_g: FloatArray,
-                  log_g_extra: FloatArray, surface: Surface, loci: Loci, blend: Blend) -> FloatArray:
-    """Unnormalised log posterior (n, n_subtypes, 8).
+def evidence_pieces(log_like: FloatArray, abs_mag: FloatArray, abs_mag_extra: FloatArray, log_g: FloatArray,
+                    log_g_extra: FloatArray, step: FloatArray, step_extra: FloatArray, criteria: FloatArray,
+                    surface: Surface, loci: Loci) -> tuple[FloatArray, ...]:
+    """Log evidence of each kind over the plane of types, (n, n_subtypes, 8) each, and last what is the same for all.
 
     ``*_extra`` (n,) are standard deviations from noise and missing pixels, on top of the loci's own scatter.
+    ``criteria`` (n, n_subtypes, 8) is the summed log likelihood of the ratio criteria.
     """
-    sd = np.sqrt(loci.abs_mag_sd ** 2 + abs_mag_extra[:, None, None] ** 2)
-    out = blend.temper * log_like
-    out = out + blend.abs_mag_weight * (student((abs_mag[:, None, None] - loci.abs_mag) / sd) - np.log(sd))
-    sd = np.sqrt(loci.log_g_sd ** 2 + log_g_extra[:, None, None] ** 2)
-    out = out + blend.log_g_weight * (student((log_g[:, None, None] - loci.log_g) / sd) - np.log(sd))
-    out = out + blend.log_prior_class + np.log(_CELL_WIDTH)[:, None]
-    # earlier than O9.5 the library is too thin for support to mean anything: the He criteria decide there
-    thin = (surface.support < _SUPPORT_WANTED) & (STEPS[:, None] > 9.6)
-    return out + np.where(thin, _UNSUPPORTED, 0.0)
+    def against(value: FloatArray, extra: FloatArray, mean: FloatArray, sd: FloatArray) -> FloatArray:
+        total = np.sqrt(sd ** 2 + extra[:, None, None] ** 2)
+        return student((value[:, None, None] - mean) / total) - np.log(total)
+
+    thin = np.where(surface.support < _SUPPORT_WANTED, _UNSUPPORTED, 0.0)
+    # where the He criteria speak, they and not the thin library of O stars say what is possible
+    thin[STEPS < 9.6] = np.maximum(thin[STEPS < 9.6], _UNSUPPORTED / 2)
+    fixed = thin + np.log(_CELL_WIDTH * USAGE)[:, None]
+    return (log_like, against(abs_mag, abs_mag_extra, loci.abs_mag, loci.abs_mag_sd),
+            against(log_g, log_g_extra, loci.log_g, loci.log_g_sd),
+            against(step, step_extra, STEPS[:, None], loci.step_sd[:, None]), criteria, fixed[None])
+
+
+def weigh(pieces: tuple[FloatArray, ...], blend: Blend) -> FloatArray:
+    """Unnormalised log posterior (n, n_subtypes, 8) from :func:`evidence_pieces`."""
+    weights = (blend.temper, blend.abs_mag_weight, blend.log_g_weight, blend.step_weight, blend.criteria_weight, 1.0)
+    total = sum(w * piece for w, piece in zip(weights, pieces))
+    return np.asarray(total + blend.log_prior_class)
 
 
 def normalise(log_p: FloatArray) -> FloatArray:
@@ -51,6 +66,7 @@ def widen(posterior: FloatArray, sd_step: float) -> FloatArray:
     if sd_step <= 0:
         return posterior
     kernel = np.exp(-0.5 * ((STEPS[:, None] - STEPS[None]) / sd_step) ** 2) * _CELL_WIDTH[:, None]
+    kernel *= USAGE[:, None]
     kernel /= kernel.sum(axis=0)
     out = np.einsum("ij,njc->nic", kernel, posterior)
     return out / out.sum(axis=(1, 2), keepdims=True)
@@ -74,19 +90,21 @@ def best_type(posterior: FloatArray) -> tuple[int, int]:
     j = max(group, key=lambda c: float(by_class[c]))
     given = posterior[:, list(group)].sum(axis=1)
     mean = float(given @ STEPS / given.sum())
-    return int(np.argmin(np.abs(STEPS - mean))), j
+    # a seldom used half is printed only when the mean stands close to it
+    off = np.abs(STEPS - mean) + np.where(USAGE < 0.2, 0.35, np.where(USAGE < 1, 0.1, 0.0))
+    return int(np.argmin(off)), j
 
 
 def set_score(posterior: FloatArray, i: int, j: int) -> float:
-    """Probability mass of all cells more probable (per unit step) than cell (i, j), plus half its own."""
-    density = posterior / _CELL_WIDTH[:, None]
+    """Probability mass of all cells more probable than cell (i, j), plus half its own."""
+    density = posterior
     here = density[i, j]
     return float(posterior[density > here].sum() + 0.5 * posterior[i, j])
 
 
 def type_set(posterior: FloatArray, mass: float) -> tuple[str, ...]:
-    """Cells in falling density until their mass reaches ``mass``, as MK types, most probable first."""
-    density = (posterior / _CELL_WIDTH[:, None]).ravel()
+    """Cells in falling probability until their mass reaches ``mass``, as MK types, most probable first."""
+    density = posterior.ravel()
     order = np.argsort(-density, kind="stable")
     total = np.cumsum(posterior.ravel()[order])
     count = int(np.searchsorted(total, min(mass, 0.9999))) + 1

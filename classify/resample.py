@@ -70,6 +70,7 @@ class Native:
         self.ln_wave = np.log(wave)
         self.flux = np.interp(self.ln_wave, self.ln_wave[good], flux[good])
         self.step_angstrom = np.gradient(wave)
+        self.pixel_angstrom = float(np.median(self.step_angstrom))
         self.sigma_estimated = spectrum.sigma is None
         if spectrum.sigma is None:
             self.sigma = noise_from_pixels(self.flux, self.valid)

@@ -8,6 +8,7 @@ nodes at once by the likelihood of its valid pixels under node + scatter + noise
 from __future__ import annotations
 
 from dataclasses import dataclass
+from itertools import pairwise
 
 import numpy as np
 from numpy.typing import NDArray
@@ -133,7 +134,7 @@ def fit_surface(flat: FloatArray, step: FloatArray, lum_code: FloatArray, trust:
     surface = Surface(mean, loadings, floor, nodes, support, np.zeros((0, 0, 0)))
     r = z - surface.components_at(step, lum_code)
     scatter = []
-    for lo, hi in zip(BANDS, BANDS[1:]):
+    for lo, hi in pairwise(BANDS):
         near = weight * np.exp(-0.5 * (np.maximum(0, np.maximum(lo - step, step - hi)) / 2) ** 2)
         cov = (r * near[:, None]).T @ r / near.sum()
         cov = (1 - shrink) * cov + shrink * np.diag(np.diag(cov)) + np.eye(len(cov)) * np.trace(cov) / len(cov) * 0.02
@@ -147,50 +148,91 @@ def match(surface: Surface, flat: FloatArray, valid: BoolArray, sigma: FloatArra
     ``sigma`` is the noise a 60 km/s pixel, white. The log likelihood of node g is that of the valid pixels under
     N(P z_g, P C P' + W^-1), by the matrix inversion lemma in k dimensions (Rasmussen & Williams 2006, A.9).
     """
-    n = len(flat)
-    k = surface.loadings.shape[1]
-    core_share = valid[:, CORE].mean(axis=1)
+    n, k = len(flat), surface.loadings.shape[1]
     log_like = np.empty((n, *surface.nodes.shape[:2]))
     components, spread = np.empty((n, k)), np.empty((n, k, k))
     chi2, noise_share = np.empty(n), np.empty(n)
-    band_of = np.clip(np.searchsorted(BANDS, STEPS) - 1, 0, len(BANDS) - 2)
-    inverse = [np.linalg.inv(c) for c in surface.scatter]
-    log_det_c = [np.linalg.slogdet(c)[1] for c in surface.scatter]
-    for wide in (False, True):
-        rows = np.flatnonzero((core_share < 0.6) == wide)
-        if not rows.size:
-            continue
-        use = WIDE if wide else CORE
-        p = surface.loadings[use]
-        variance = surface.floor[use] ** 2 + sigma[np.ix_(rows, use)] ** 2 / 2.0
-        w = valid[np.ix_(rows, use)] / variance
-        y = flat[np.ix_(rows, use)] - 1.0 - surface.mean[use]
-        b = (w * y) @ p                                             # (r, k)
-        yy = (w * y * y).sum(axis=1)
-        for q, row in enumerate(rows):
-            g = p.T @ (p * w[q][:, None])
-            best_value = -np.inf
-            for band in range(len(surface.scatter)):
-                inside = band_of == band
-                m = np.linalg.inv(inverse[band] + g)
-                gm = g @ m
-                h_vec = b[q] - gm @ b[q]
-                h_mat = g - gm @ g
-                z = surface.nodes[inside].reshape(-1, k)
-                quad = yy[q] - b[q] @ m @ b[q] - 2 * z @ h_vec + np.einsum("ij,ij->i", z @ h_mat, z)
-                log_det = log_det_c[band] + np.linalg.slogdet(inverse[band] + g)[1]
-                value = -0.5 * quad - 0.5 * log_det
-                log_like[row, inside] = value.reshape(-1, len(CLASS_AT))
-                i = int(value.argmax())
-                if value[i] > best_value:
-                    best_value, best_z, best_m, best_band = value[i], z[i], m, band
-            components[row] = best_z + best_m @ (b[q] - g @ best_z)
-            spread[row] = best_m
-            left = y[q] - p @ components[row]
-            chi2[row] = float((w[q] * left ** 2).sum() / max((w[q] > 0).sum(), 1))
-            noise_share[row] = float(np.clip(np.trace(inverse[best_band] @ best_m) / k, 0, 1))
+    wide = valid[:, CORE].mean(axis=1) < 0.6
+    for use, rows in ((CORE, np.flatnonzero(~wide)), (WIDE, np.flatnonzero(wide))):
+        if rows.size:
+            part = _match_rows(surface, use, flat[np.ix_(rows, use)], valid[np.ix_(rows, use)],
+                               sigma[np.ix_(rows, use)])
+            log_like[rows], components[rows], spread[rows], chi2[rows], noise_share[rows] = part
     level = 1.0 + surface.mean + components @ surface.loadings.T
     return Match(log_like, components, spread, chi2, noise_share, level)
+
+
+_TRIANGLE: dict[tuple[object, ...], tuple[NDArray[np.float32], tuple[NDArray[np.intp], NDArray[np.intp]]]] = {}
+
+
+def _products(loadings: FloatArray) -> tuple[NDArray[np.float32], tuple[NDArray[np.intp], NDArray[np.intp]]]:
+    """Products of all pairs of components at each pixel, (p, k(k+1)/2): P' W P of a batch as one matrix product."""
+    key = (loadings.shape, float(loadings[0, 0]), float(loadings[-1, -1]))
+    if key not in _TRIANGLE:
+        if len(_TRIANGLE) > 16:
+            _TRIANGLE.clear()
+        i, j = np.triu_indices(loadings.shape[1])
+        _TRIANGLE[key] = ((loadings[:, i] * loadings[:, j]).astype(np.float32), (i, j))
+    return _TRIANGLE[key]
+
+
+def _match_rows(surface: Surface, use: NDArray[np.int64], flat: FloatArray, valid: BoolArray, sigma: FloatArray
+                ) -> tuple[FloatArray, FloatArray, FloatArray, FloatArray, FloatArray]:
+    p = surface.loadings[use]
+    r, k = len(flat), p.shape[1]
+    w = valid / (surface.floor[use] ** 2 + sigma ** 2 / 2.0)
+    y = flat - 1.0 - surface.mean[use]
+    b = (w * y) @ p
+    yy = (w * y * y).sum(axis=1)
+    pairs, (ti, tj) = _products(p)
+    g = np.empty((r, k, k))
+    g[:, ti, tj] = w.astype(np.float32) @ pairs
+    g[:, tj, ti] = g[:, ti, tj]
+
+    band_of = np.clip(np.searchsorted(BANDS, STEPS) - 1, 0, len(BANDS) - 2)
+    # a first look, scatter ignored, tells which temperature bands can matter at all
+    all_z = surface.nodes.reshape(-1, k)
+    bend = np.array([np.einsum("zi,zi->z", all_z @ one, all_z) for one in g])
+    rough = (bend - 2 * b @ all_z.T).reshape(r, *log_shape(surface))
+    centre = band_of[rough.min(axis=2).argmin(axis=1)]
+
+    out = np.full((r, *log_shape(surface)), np.nan)
+    best = np.full(r, -np.inf)
+    z_best, m_best = np.zeros((r, k)), np.zeros((r, k, k))
+    share = np.zeros(r)
+    for band, scatter in enumerate(surface.scatter):
+        rows = np.flatnonzero(np.abs(centre - band) <= 1)
+        if not rows.size:
+            continue
+        inverse = np.linalg.inv(scatter)
+        total = inverse + g[rows]
+        m = np.linalg.inv(total)
+        gm = g[rows] @ m
+        h_vec = b[rows] - np.einsum("nij,nj->ni", gm, b[rows])
+        h_mat = g[rows] - gm @ g[rows]
+        inside = np.flatnonzero(band_of == band)
+        z = surface.nodes[inside].reshape(-1, k)
+        quad = (yy[rows] - np.einsum("ni,nij,nj->n", b[rows], m, b[rows]))[:, None] - 2 * h_vec @ z.T
+        quad += np.einsum("nzj,zj->nz", z[None] @ h_mat, z)
+        value = -0.5 * quad - 0.5 * (np.linalg.slogdet(scatter)[1] + np.linalg.slogdet(total)[1])[:, None]
+        out[np.ix_(rows, inside)] = value.reshape(len(rows), len(inside), -1)
+        top = value.argmax(axis=1)
+        peak = value[np.arange(len(rows)), top]
+        better = peak > best[rows]
+        q = rows[better]
+        best[q], z_best[q], m_best[q] = peak[better], z[top[better]], m[better]
+        share[q] = np.einsum("ij,nji->n", inverse, m[better]) / k
+    lowest = np.nanmin(out, axis=(1, 2))
+    out = np.where(np.isnan(out), (lowest - 50.0)[:, None, None], out)
+    components = z_best + np.einsum("nij,nj->ni", m_best, b - np.einsum("nij,nj->ni", g, z_best))
+    left = y - components @ p.T
+    chi2 = (w * left ** 2).sum(axis=1) / np.maximum((w > 0).sum(axis=1), 1)
+    return out, components, m_best, chi2, np.clip(share, 0, 1)
+
+
+def log_shape(surface: Surface) -> tuple[int, int]:
+    """(subtypes, classes) of the plane of types."""
+    return surface.nodes.shape[0], surface.nodes.shape[1]
 
 
 def class_index(lum_code: float) -> int:

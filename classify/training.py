@@ -85,8 +85,11 @@ def steady_steps(step: FloatArray, teff_k: FloatArray, log_g: FloatArray, fe_h: 
     return out
 
 
-def lessons_from(library: Library) -> Lessons:
-    """Labels and targets of a library, by the recorded rules above; nothing is looked up by name."""
+def lessons_from(library: Library, *, vetted: bool = True) -> Lessons:
+    """Labels and targets of a library, by the recorded rules above; nothing is looked up by name.
+
+    ``vetted`` False leaves the labels as catalogued.
+    """
     c = library.catalogue
     step, lum = step_of(c["t_code"]), c["lum_code"].astype(float)
     hot_emission = (c["kind"] == "emission") & (step < 26)     # emission is the rule among early supergiants
@@ -96,8 +99,8 @@ def lessons_from(library: Library) -> Lessons:
     # a supergiant or dwarf label that the published gravity contradicts outright is not used
     with np.errstate(invalid="ignore"):
         contradicted = ((lum > 4.4) & (c["log_g"] < 3.0)) | ((lum < 3.4) & (c["log_g"] > 4.35) & (step > 30))
-    trust = np.where(contradicted, 0.0, trust)
-    steady = steady_steps(step, c["teff_k"], c["log_g"], c["fe_h"], typed)
+    trust = np.where(contradicted & vetted, 0.0, trust)
+    steady = steady_steps(step, c["teff_k"], c["log_g"], c["fe_h"], typed) if vetted else step.copy()
     parallax, error = c["parallax_mas"], c["e_parallax_mas"]
     with np.errstate(invalid="ignore", divide="ignore"):
         distance = np.where(parallax > 0, 1000.0 / parallax, np.nan)
