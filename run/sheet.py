@@ -215,7 +215,7 @@ def _windows(e: Evidence) -> list[Window]:
     if len(reach) == 0:
         return []
     lo, hi = float(reach[0]), float(reach[-1])
-    found = windows_for(e.assignment.evidence, e.marks, lo, hi, MOST_WINDOWS)
+    found = windows_for(e.assignment.evidence, e.marks, lo, hi, MOST_WINDOWS, e.prepared.fwhm_angstrom)
     if found or not np.isfinite(e.template).any():
         return found
     return windows_on(e.marks, e.prepared, e.template, lo, hi, _letter(e.t_code))

@@ -2,13 +2,18 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+import heapq
+from collections.abc import Iterable, Sequence
 from pathlib import Path
 from typing import Any
 
 from starfathom.classify.errors import RequestError
 from starfathom.decisions import FILE_NAME, DecisionLog, log_path
 from starfathom.desk.night import Night, Star, name_stars
+from starfathom.report.gather import StarResult, spectrum_path
+
+#: Of a longer run only so many stars come to the desk, the neediest.
+MOST_STARS = 2000
 
 
 def gather(paths: Sequence[str]) -> Night:
@@ -39,6 +44,14 @@ def beside(paths: Sequence[str]) -> Path:
     return (folders.pop() if len(folders) == 1 else Path(".")) / FILE_NAME
 
 
+def _rows_to_look_at(rows: Iterable[dict[str, Any]], count: int) -> list[dict[str, Any]]:
+    """Rows with a spectrum; of a long run those alone whose distance is the least certain."""
+    seen = (row for row in rows if row.get("file"))
+    if count <= MOST_STARS:
+        return list(seen)
+    return heapq.nlargest(MOST_STARS, seen, key=lambda row: StarResult(0, row).need.score)
+
+
 def of_run(run_dir: Path) -> Night:
     """The stars of a run, with the settings and the answers of the run where its record keeps them.
 
@@ -50,13 +63,13 @@ def of_run(run_dir: Path) -> Night:
     from starfathom.classify import Classifier, Settings
     from starfathom.classify.reading import read_plain
     from starfathom.record import open_record
-    from starfathom.report.gather import spectrum_path
 
     with open_record(run_dir) as record:
         facts = record.facts()
         asked: dict[str, Any] = facts.get("settings", {})
-        rows = [row for row in record.rows() if row.get("file")]
-        details = record.details()
+        count = record.counts()["rows"]
+        rows = _rows_to_look_at(record.rows(), count)
+        details = record.details() if count <= MOST_STARS else {}
     if not rows:
         raise RequestError(f"{run_dir}: no star of this run has a spectrum to check")
     medium = asked.get("medium")

@@ -21,6 +21,7 @@ from starfathom.desk.windows import Mark, Window, misfit, rms, windows_for, wind
 FloatArray = NDArray[np.float64]
 
 FLAGS = ("emission", "composite", "metal-weak", "strong lines", "fast rotator", "poor data")
+WELCOME = "Look whether the orange template fits. A accepts, E amends, X sets aside; ? lists every key."
 BLUR_STEP_ANGSTROM = 0.5
 VELOCITY_STEP_KMS = 10.0
 
@@ -69,7 +70,7 @@ class Session:
     def __init__(self, night: Night, marks: Sequence[Mark]) -> None:
         self.night = night
         self.marks = tuple(marks)
-        self.said = ""
+        self.said = WELCOME
         self.editing = False
         self.dark = False
         self.who = ""
@@ -165,7 +166,8 @@ class Session:
         if len(wave) == 0:
             return []
         lo, hi = float(wave[0]), float(wave[-1])
-        found = [] if said is None else windows_for(said.evidence, self.marks, lo, hi)
+        found = [] if said is None else windows_for(said.evidence, self.marks, lo, hi,
+                                                           fwhm_angstrom=ready.fwhm_angstrom)
         return found or self._plain_windows(ready, lo, hi)
 
     def _plain_windows(self, ready: Prepared, lo: float, hi: float) -> list[Window]:
@@ -287,6 +289,7 @@ class Session:
         self.dark = bool(v.get("dark", not self.dark))
 
     def _hello(self, v: dict[str, Any]) -> None:
+        self.said = WELCOME
         self.dark = bool(v.get("dark", self.dark))
         self.who = str(v.get("who", self.who))[:12]
 

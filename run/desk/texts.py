@@ -64,10 +64,11 @@ def place_tile(s: Session, here: Comparison | None, pinned: Comparison | None) -
     fit = "" if here is None else f"misfit {here.overall:.2f} σ"
     top = f'you stand at <b>{escape(plane.cell_name(place.cell))}</b> <small>{chance}</small>'
     standard = f"real star {escape(place.standard)}" if place.standard else ""
-    under = " · ".join(x for x in (fit, standard, _distance_words(s)) if x)
+    against = ""
     if pinned is not None and here is not None:
-        under += (f' · pinned <b class="pin">{escape(pinned.place.label)}</b> {pinned.overall:.2f} σ, '
-                  f"{_preferred(here, pinned)}")
+        against = (f'pinned <b class="pin">{escape(pinned.place.label)}</b> {pinned.overall:.2f} σ, '
+                   f"{_preferred(here, pinned)}")
+    under = " · ".join(x for x in (fit, against, standard, _distance_words(s)) if x)
     return f'<div class="big">{top}</div><div class="what">{under}</div>'
 
 
@@ -119,10 +120,17 @@ def count_line(s: Session) -> str:
     return f"{done} of {total} decided<br>neediest first"
 
 
+#: Stars of the queue on the page before and after the one looked at; a long night is not sent whole at every step.
+QUEUE_BEFORE, QUEUE_AFTER = 40, 80
+
+
 def queue_list(s: Session) -> str:
-    """The queue, neediest first."""
-    rows = []
-    for k in s.night.queue:
+    """The queue, neediest first, about the star being looked at."""
+    queue = s.night.queue
+    at = queue.index(s.index)
+    first, last = max(0, at - QUEUE_BEFORE), min(len(queue), at + QUEUE_AFTER)
+    rows = [f'<li class="shut"><span class="why">{first} before</span></li>'] if first else []
+    for k in queue[first:last]:
         star, said = s.night.stars[k], s.night.stars[k].assignment
         decision = s.decided.get(star.name)
         say = "" if said is None else (said.mk_type or said.other_type or "–")
@@ -137,6 +145,8 @@ def queue_list(s: Session) -> str:
         rows.append(f'<li class="{css}"{do} data-star="{k}"><span class="name" title="{escape(star.file)}">'
                     f'{escape(star.name)}</span><span class="say">{escape(say)}</span>'
                     f'<span class="why">{why}</span></li>')
+    if last < len(queue):
+        rows.append(f'<li class="shut"><span class="why">{len(queue) - last} more</span></li>')
     return "".join(rows)
 
 

@@ -198,7 +198,7 @@ class View:
         self._text(f, "size_pin", "pin", text_font_size="12px", text_font_style="bold", text_align="right",
                    text_baseline="middle")
         f.yaxis.ticker = FixedTicker(ticks=[-0.5, 0, 0.5])
-        f.yaxis.major_label_overrides = {-0.5: "−3 σ", 0: "0", 0.5: "+3 σ", -2.65: "−3 σ", -2.15: "0", -1.65: "+3 σ"}
+        f.yaxis.major_label_overrides = {-0.5: "−3 σ", 0: "0", 0.5: "+3 σ"}
         f.xaxis.major_tick_out = 2
 
     # ---- following the session ------------------------------------------------------------------------------------
@@ -311,6 +311,8 @@ class View:
             f.x_range.update(start=0.0, end=total)
             f.y_range.update(start=bottom, end=top)
             f.yaxis.ticker = FixedTicker(ticks=[-0.5, 0, 0.5] + ([-2.65, -2.15, -1.65] if pinned else []))
+            f.yaxis.major_label_overrides = {-0.5: "−3 σ", 0: "here" if pinned else "0", 0.5: "+3 σ",
+                                             -2.65: "−3 σ", -2.15: "pin", -1.65: "+3 σ"}
         lines: dict[str, tuple[list[Any], list[Any]]] = {k: ([], []) for k in ("w_star", "w_here", "w_pin")}
         ribbons: dict[str, list[tuple[float, float, float, float]]] = {"here": [], "pin": []}
         shades: dict[str, list[float]] = {"here": [], "pin": []}

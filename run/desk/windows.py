@@ -67,7 +67,7 @@ class Window:
 
 
 def windows_for(evidence: Iterable[Criterion], marks: Sequence[Mark], lo: float, hi: float,
-                most: int = MOST_WINDOWS) -> list[Window]:
+                most: int = MOST_WINDOWS, fwhm_angstrom: float = 4.0) -> list[Window]:
     """The stretches that the evidence rests on, weightiest first to be kept, in order of wavelength.
 
     Parameters
@@ -76,6 +76,7 @@ def windows_for(evidence: Iterable[Criterion], marks: Sequence[Mark], lo: float,
     marks : every known feature
     lo, hi : reach of the spectrum, angstrom; features beyond it are left out
     most : how many windows at most
+    fwhm_angstrom : line spread; coarser spectra need wider windows
     """
     known = {m.key: m for m in marks if lo < m.lo_angstrom and m.hi_angstrom < hi}
     wanted: list[tuple[Mark, str]] = []
@@ -83,7 +84,8 @@ def windows_for(evidence: Iterable[Criterion], marks: Sequence[Mark], lo: float,
         wanted += [(known[f], criterion.name) for f in criterion.features if f in known]
     windows: list[Window] = []
     for mark, criterion_name in wanted:
-        spare = max(MARGIN_ANGSTROM, (LEAST_WIDTH_ANGSTROM - (mark.hi_angstrom - mark.lo_angstrom)) / 2)
+        short = LEAST_WIDTH_ANGSTROM - (mark.hi_angstrom - mark.lo_angstrom)
+        spare = max(MARGIN_ANGSTROM, 1.2 * fwhm_angstrom, short / 2)
         a, b = mark.lo_angstrom - spare, mark.hi_angstrom + spare
         if mark.line and b - a > MOST_WIDTH_ANGSTROM:      # the wings run on; their shoulders say enough
             a, b = (mark.wave_angstrom + side * MOST_WIDTH_ANGSTROM / 2 for side in (-1, 1))
@@ -105,9 +107,11 @@ def windows_for(evidence: Iterable[Criterion], marks: Sequence[Mark], lo: float,
 def windows_on(marks: Sequence[Mark], ready: Prepared, template: FloatArray, lo: float, hi: float,
                letter: str) -> list[Window]:
     """Windows on the strongest features of a template, for stars that no criterion speaks of."""
-    strongest = choose_marks([m for m in marks if m.line], ready.wave_angstrom, template, lo, hi, letter, 8)
+    fit = [m for m in marks if m.line or letter in "KM"]
+    strongest = choose_marks(fit, ready.wave_angstrom, template, lo, hi, letter, 8)
     stand_in = [Criterion("", float("nan"), float("nan"), "", features=(m.key,)) for m in strongest]
-    return [replace(w, criteria=()) for w in windows_for(stand_in, marks, lo, hi)]
+    return [replace(w, criteria=()) for w in windows_for(stand_in, marks, lo, hi,
+                                                                 fwhm_angstrom=ready.fwhm_angstrom)]
 
 
 def misfit(prepared: Prepared, template: FloatArray, scatter: FloatArray | float) -> FloatArray:

@@ -155,6 +155,26 @@ def test_the_queue_puts_the_neediest_first(tmp_path):
     assert scores == sorted(scores, reverse=True)
 
 
+def test_a_long_night_is_not_sent_whole(tmp_path):
+    session = Session(make_night(tmp_path, *(f"G2_V-{k}.txt" for k in range(300))), known_marks())
+    session.do("open", {"star": 150})
+    html = texts.queue_list(session)
+    assert html.count("<li") <= texts.QUEUE_BEFORE + texts.QUEUE_AFTER + 2
+    assert "G2_V-150<" in html and "before" in html and "more" in html
+    session.do("next")
+    assert session.star.name == "G2_V-151"
+
+
+def test_a_long_run_brings_its_neediest(monkeypatch):
+    from starfathom.desk import gather as gathering
+
+    monkeypatch.setattr(gathering, "MOST_STARS", 2)
+    rows = [{"name": f"s{k}", "file": "x" if k != 3 else "", "status": "typed", "distance_pc": 100.0,
+             "distance_lo_pc": 100.0 - k, "distance_hi_pc": 100.0 + k} for k in range(6)]
+    assert [r["name"] for r in gathering._rows_to_look_at(iter(rows), 6)] == ["s5", "s4"]
+    assert len(gathering._rows_to_look_at(iter(rows), 2)) == 5
+
+
 def test_names_are_as_short_as_keeps_them_apart():
     assert name_stars(["n/a.fits", "n/b.fits.gz"]) == ["a", "b"]
     assert name_stars(["n1/a.fits", "n2/a.fits"]) == ["n1/a.fits", "n2/a.fits"]
