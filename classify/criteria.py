@@ -23,6 +23,7 @@ from numpy.typing import ArrayLike, NDArray
 from starfathom.classify.assignment import Criterion
 from starfathom.classify.errors import RequestError
 from starfathom.classify.lines.direct import BulkLines
+from starfathom.classify.lines.features import FeatureTable
 from starfathom.templates.subtypes import (
     LUM_CODES,
     STEPS,
@@ -42,6 +43,10 @@ DETECTION_SIGMA = 3.0
 #: Forms a criterion may take.
 FORMS = ("log", "share", "difference", "value", "width", "index", "index_ratio")
 _WIDTH_INDEX = 1          # width at 20 % depth
+#: Flux calibrations ripple: the same stars on two instruments differ by 1 to 2 % over some 80 A, mostly where the
+#: standard star had its Balmer lines. Relative error of a pseudo-continuum whose side bands are that far apart; a
+#: straight line follows the ripple the better, the closer they are.
+RIPPLE, RIPPLE_ANGSTROM = 0.012, 80.0
 _LUM = np.array(LUM_CODES)
 
 
@@ -94,7 +99,8 @@ def criterion_names() -> tuple[str, ...]:
 def measure_criteria(lines: BulkLines) -> tuple[FloatArray, FloatArray, BoolArray]:
     """Values, errors (one standard deviation) and usability of every criterion, each (n spectra, k criteria).
 
-    Errors combine those of the equivalent widths with each rule's floor, in quadrature. NaN where not usable.
+    Errors combine those of the equivalent widths with each rule's floor and the ripple of flux calibrations under
+    windows with distant side bands, in quadrature. NaN where not usable.
     """
     rules = load_criteria()
     n = lines.ew.shape[0]
@@ -108,10 +114,21 @@ def measure_criteria(lines: BulkLines) -> tuple[FloatArray, FloatArray, BoolArra
     return values, errors, usable
 
 
+@lru_cache(maxsize=8)
+def _ripple(features: FeatureTable) -> FloatArray:
+    """(f,) relative error of each pseudo-continuum from the ripple of flux calibrations."""
+    out = []
+    for feature in features:
+        blue, red = (float(np.mean(b)) if b else float(np.mean(feature.window)) for b in (feature.blue, feature.red))
+        out.append(RIPPLE * min(1.0, ((red - blue) / RIPPLE_ANGSTROM) ** 2))
+    return np.array(out)
+
+
 def _sum(lines: BulkLines, names: tuple[str, ...], floor: float) -> tuple[FloatArray, FloatArray, BoolArray]:
     index = [lines.features.index_of(name) for name in names]
-    ew, variance = lines.ew[:, index].sum(axis=1), (lines.ew_err[:, index] ** 2).sum(axis=1)
-    return ew, np.sqrt(variance + floor**2), lines.ok[:, index].all(axis=1)
+    ripple = (_ripple(lines.features) * lines.width)[:, index]
+    ew, variance = lines.ew[:, index].sum(axis=1), (lines.ew_err[:, index] ** 2 + ripple**2).sum(axis=1)
+    return ew, np.sqrt(variance + floor**2), np.asarray(lines.ok[:, index].all(axis=1), bool)
 
 
 def _measure(rule: CriterionRule, lines: BulkLines) -> tuple[FloatArray, FloatArray, BoolArray]:
@@ -190,7 +207,7 @@ class CriterionScales:
     @classmethod
     def from_arrays(cls, arrays: dict[str, NDArray[np.generic]]) -> CriterionScales:
         """Inverse of :meth:`arrays`; ``arrays`` may hold more."""
-        return cls(**{k: np.asarray(arrays[f"criteria_{k}"]) for k in cls.__dataclass_fields__})  # type: ignore[arg-type]
+        return cls(**{k: np.asarray(arrays[f"criteria_{k}"]) for k in cls.__dataclass_fields__})
 
 
 def learn_criterion_scales(values: FloatArray, errors: FloatArray, t_code: ArrayLike, lum_code: ArrayLike,
@@ -210,14 +227,12 @@ def learn_criterion_scales(values: FloatArray, errors: FloatArray, t_code: Array
     typed = np.isfinite(step) & np.isfinite(lum) & (trust > 0)
     shape = (len(rules), STEPS.size, _LUM.size)
     mean, spread, stars = np.full(shape, np.nan), np.full(shape, np.nan), np.zeros(shape)
-    for k, rule in enumerate(rules):
-        lo, hi = step_of([rule.t_lo - 3.0, rule.t_hi + 3.0])
-        use = typed & np.isfinite(values[:, k]) & np.isfinite(errors[:, k]) & (step >= lo) & (step <= hi)
-        if use.sum() < 2 * _LEAST_STARS:
-            continue
-        cells = np.flatnonzero((STEPS >= step_of(rule.t_lo)) & (STEPS <= step_of(rule.t_hi)))
-        m, s, c = _local(values[use, k], errors[use, k], step[use], lum[use], trust[use], STEPS[cells])
-        mean[k, cells], spread[k, cells], stars[k, cells] = m, s, c
+    for k in range(len(rules)):
+        # over all types, not only where the criterion tells: a value that also fits elsewhere must be known to
+        use = typed & np.isfinite(values[:, k]) & np.isfinite(errors[:, k])
+        if use.sum() >= 2 * _LEAST_STARS:
+            mean[k], spread[k], stars[k] = _local(values[use, k], errors[use, k], step[use], lum[use], trust[use],
+                                                  STEPS)
     is_published = np.zeros(shape, bool)
     if published:
         _put_published(mean, spread, stars, is_published)
@@ -254,7 +269,7 @@ def _local(value: FloatArray, error: FloatArray, step: FloatArray, lum: FloatArr
             with np.errstate(invalid="ignore", divide="ignore"):
                 rms = np.sqrt((w * residual**2).sum(axis=1) / total)
                 far = np.abs(residual) / (_ROBUST * rms[:, None])
-            w = base / np.maximum(np.nan_to_num(far), 1.0) ** 2
+            w = base / np.clip(np.nan_to_num(far), 1.0, 1e3) ** 2
         effective = w.sum(axis=1) ** 2 / np.maximum((w**2).sum(axis=1), 1e-300)
         # stars that stand where the cell is, not merely under the far wing of the kernel
         reach = base.sum(axis=1)
@@ -287,7 +302,7 @@ def _put_published(mean: FloatArray, spread: FloatArray, stars: FloatArray, flag
             steps = step_of(mine[:, 0])
             cells = np.flatnonzero((STEPS >= steps[0] - 1e-9) & (STEPS <= steps[-1] + 1e-9))
             classes = np.flatnonzero((_LUM >= lo) & (_LUM <= hi))
-            grid = np.ix_([k], cells, classes)
+            grid = np.ix_(np.array([k]), cells, classes)
             mean[grid] = np.interp(STEPS[cells], steps, mine[:, 1])[None, :, None]
             spread[grid] = np.interp(STEPS[cells], steps, mine[:, 2])[None, :, None]
             stars[grid], flag[grid] = 0.0, True
@@ -378,8 +393,10 @@ def point(scales: CriterionScales, values: FloatArray, errors: FloatArray, t_gue
                 share = np.where(open_ > 0.2, weight / open_, 0.0)
             middle, sigma, prior = _moments(share, (open_ > 0.2).astype(float), _LUM)
             says = sigma < 0.75 * prior
-            out[2][rows, j] = np.where(says, middle, np.nan)
-            out[3][rows, j] = np.where(says, sigma, np.nan)
+            # the best class, not the mean: at the ends of the scale a mean could never reach V or Ia
+            best = _LUM[share.argmax(axis=1)]
+            out[2][rows, j] = np.where(says, best, np.nan)
+            out[3][rows, j] = np.where(says, np.hypot(sigma, middle - best), np.nan)
     return out[0], out[1], out[2], out[3]
 
 

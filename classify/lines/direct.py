@@ -12,6 +12,7 @@ from __future__ import annotations
 
 from dataclasses import dataclass, field
 from functools import lru_cache
+from typing import Any
 
 import numpy as np
 from numpy.typing import ArrayLike, NDArray
@@ -149,10 +150,11 @@ def measure_many(
             if wings:
                 _measure_wings(plan, features, wave, filled[rows], noise[rows], out, rows, float(key))
     coarsest = np.array([x.coarsest_fwhm for x in features])
+    measured: dict[str, Any] = {k: (v > 0 if k in _FLAGS else v) for k, v in out.items()}
     return BulkLines(
         features=features, telluric=_telluric(features, np.broadcast_to(velocity_kms, (n,))),
         too_coarse=fwhm[:, None] > coarsest, fwhm_angstrom=fwhm.copy(), filled_flux=filled, sigma=noise, good=good,
-        **{k: (v > 0 if k in _FLAGS else v) for k, v in out.items()})
+        **measured)
 
 
 #: Spectra measured at once: few enough for their windows to stay in the processor's cache.

@@ -66,7 +66,7 @@ def _title(table: LineTable) -> str:
 def _choose(table: LineTable) -> list[int]:
     """Features to draw: fitted and there, the most significant ones, in order of wavelength."""
     fits = table.fits
-    strength = {}
+    strength: dict[int, float] = {}
     for c in np.flatnonzero(fits.detected[0]):
         k = int(fits.feature[c])
         significance = abs(fits.ew[0, c]) / fits.ew_err[0, c]

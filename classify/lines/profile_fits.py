@@ -116,7 +116,10 @@ def fit_many(wave_angstrom: FloatArray, lines: BulkLines, *, profiles: Sequence[
     wave = np.ascontiguousarray(wave_angstrom, float)
     features = lines.features
     n = lines.ew.shape[0]
-    labels, wavelengths, owner, first = [], [], [], {}
+    labels: list[str] = []
+    wavelengths: list[float] = []
+    owner: list[int] = []
+    first: dict[int, int] = {}
     for k, feature in enumerate(features):
         first[k] = len(labels)
         for label, rest in feature.lines:
