@@ -58,6 +58,8 @@ _OTHER_WORDS = _set("""
     gross exptime exposure raw contsub disp fit bestfit template residual airmass width binwidth step tot totexp
     syserror sys syserr
 """)
+#: With these, "sky" or "continuum" names what was done to the flux: "sky-subtracted flux".
+_DONE_WORDS = _set("norm normalized normalised sub subtracted corrected corr removed cleaned free rectified divided")
 #: Columns of catalogues and light curves that run one way as wavelengths do.
 _NEVER_WAVE = _set("""
     time date jd mjd hjd bjd phase ra dec teff temp temperature logg mag vmag bmag gmag z redshift velocity vel rv mass
@@ -107,13 +109,14 @@ def role_of(name: str) -> tuple[Role, int]:
         return "wave", 3 if len(glued) == 1 else 10 if glued in _WAVE or glued in _LOG_WAVE else 6
     if wave and words[0] in ("log", "ln") and len(words) == 2 and words[1] in _WAVE:
         return "wave", 8
-    if kinds & _OTHER_WORDS:
+    if kinds & _OTHER_WORDS and not kinds & _DONE_WORDS:
         return "other", 0
     if kinds & _STD_WORDS:
         return "std", 9 if "sys" not in kinds else 3
     if glued in _FLUX:
         return "flux", _FLUX[glued]
-    hits = [_FLUX[w] for w in words if w in _FLUX and len(w) > 2]
+    bare_words = [w.rstrip("0123456789") for w in words]
+    hits = [_FLUX[w] for w in bare_words if w in _FLUX and len(w) > 2]
     if hits:
         return "flux", max(hits) - 2
     if words[0] == "f" and len(words) == 2 and words[1] in ("lambda", "lam", "nu", "λ"):
@@ -127,7 +130,8 @@ def role_of(name: str) -> tuple[Role, int]:
 
 def is_companion(name: str) -> bool:
     """Whether a name says sky, model, response or the like: something beside the flux, never the flux itself."""
-    return bool(set(_words(split_unit(name)[0])) & _OTHER_WORDS)
+    words = set(_words(split_unit(name)[0]))
+    return bool(words & _OTHER_WORDS) and not words & _DONE_WORDS
 
 
 def never_wavelength(name: str) -> bool:

@@ -133,7 +133,7 @@ def flux_kind(text: str) -> FluxKind:
 
 
 def flux_word(name: str, unit: str) -> str:
-    """First text that tells the kind of flux, of a flux column's unit, name and unit together, and name; else the unit."""
+    """First text that tells the kind of flux: a column's unit, its name and unit together, its name; else the unit."""
     for text in (unit, f"{name} [{unit}]", name):
         kind = flux_kind(text)
         if kind == "mag" and flux_kind(f"{name} [{unit}]") != "unknown":

@@ -655,6 +655,40 @@ def test_table_flux_units(tmp_path, unit, values, calibrated):
     assert spec.meta["flux_calibrated"] is calibrated
 
 
+ROLES = [
+    (
+        "wave",
+        "WAVELENGTH wave Lambda lambda_A wavelength_nm wave_air WAVE_VAC loglam log_lambda lnlam freq wl x λ Wave[nm]",
+    ),
+    (
+        "flux",
+        "FLUX flux_lambda f_lam F Fnu fluxErgs flux_norm counts ADU relative_flux obsFlux flux1 SPEC intensity_adu",
+    ),
+    ("flux", "continuum_normalized_flux sky_subtracted_flux flux_telluric_corrected ABmag Flux(Jy) y"),
+    (
+        "std",
+        "ERR error sigma flux_err fluxErr FLUX_ERROR e_flux eflux dflux STATERROR uncertainty noise FluxSigma yerr σ",
+    ),
+    ("var", "VAR variance flux_var FLUX_VARIANCE"),
+    ("ivar", "IVAR invvar inverse_variance flux_ivar INV_VAR weight"),
+    ("snr", "SNR S/N s_n signal_to_noise SN"),
+    ("bad", "mask AND_MASK or_mask DQ flags quality bad_pixel DATAQUAL"),
+    ("good", "good valid use"),
+    ("index", "pixel index n row"),
+    (
+        "other",
+        "sky SKYFLUX_model background model continuum flux_cont wdisp wave_err dlambda lambda_sigma fwhm response note",
+    ),
+]
+
+
+@pytest.mark.parametrize("role,names", ROLES, ids=[f"{r[0]} {i}" for i, r in enumerate(ROLES)])
+def test_roles_of_names(role, names):
+    from starfathom.classify.reading.names import role_of
+
+    assert {name: role_of(name)[0] for name in names.split()} == dict.fromkeys(names.split(), role)
+
+
 def test_names_that_tell_nothing(tmp_path):
     same_star(read(tmp_path, table({"col1": WAVE, "col2": FLUX})))
     same_star(read(tmp_path, table({"A": FLUX, "B": WAVE})))
