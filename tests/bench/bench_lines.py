@@ -2,8 +2,8 @@
 
 The loop is what one would write first: a continuum-normalised ``Spectrum`` once, then for every feature
 ``equivalent_width`` and ``fwhm`` over its region, and ``fit_lines`` for every line and blend. Ours does more in the
-same time: side-band pseudo-continua, uncertainties, flags of coverage, and (last row) Voigt against Gaussian. Times are of
-the processor, one thread, so that a busy machine does not tip the scales.
+same time: side-band pseudo-continua, uncertainties, flags of coverage, and (last row) Voigt against Gaussian. Times are
+of the processor, one thread, so that a busy machine does not tip the scales.
 """
 
 from __future__ import annotations
@@ -111,13 +111,13 @@ def rows() -> list[dict[str, Any]]:
     loop = {name: 0.5 * (first[name] + second[name]) for name in first}
     count = f"{len(FEATURES)} features, {PIXELS} px"
     table = [
-        ("equivalent widths, direct", loop["equivalent_width"], bulk["direct"]),
-        ("Gaussian fits", loop["fit_lines"], bulk["gaussian fits alone"]),
-        ("equivalent widths, widths and Gaussian fits", sum(loop.values()), bulk["gaussian"]),
-        ("the same, and Voigt against Gaussian by us", sum(loop.values()), bulk["everything"]),
+        ("equivalent widths, direct", loop["equivalent_width"], bulk["direct"], ""),
+        ("Gaussian fits", loop["fit_lines"], bulk["gaussian fits alone"], ""),
+        ("equivalent widths, widths and Gaussian fits", sum(loop.values()), bulk["gaussian"], ">= 100"),
+        ("the same, and Voigt against Gaussian by us", sum(loop.values()), bulk["everything"], ""),
     ]
-    return [{"task": f"{task} ({count})", "loop_ms": 1e3 * slow, "ours_ms": 1e3 * quick, "ratio": slow / quick}
-            for task, slow, quick in table]
+    return [{"task": f"{task} ({count})", "loop_ms": 1e3 * slow, "ours_ms": 1e3 * quick, "ratio": slow / quick,
+             "target": target} for task, slow, quick, target in table]
 
 
 if __name__ == "__main__":
