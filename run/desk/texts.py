@@ -89,7 +89,7 @@ def _distance_words(s: Session) -> str:
 def _preferred(here: Comparison, pinned: Comparison) -> str:
     for_pin = sum(b < a - 0.1 for a, b in zip(here.by_window, pinned.by_window))
     for_here = sum(a < b - 0.1 for a, b in zip(here.by_window, pinned.by_window))
-    return f"better in {for_pin} windows, here {for_here}"
+    return f"the pin better in {for_pin} windows, here in {for_here}"
 
 
 def machine_tile(said: Assignment | None) -> str:

@@ -32,6 +32,7 @@ FloatArray = NDArray[np.float64]
 FONT = "system-ui, 'DejaVu Sans', sans-serif"
 CLIP_SIGMA = 6.0          # ribbons are cut off here
 SPECTRUM_POINTS = 2600    # more pixels than this are averaged in pairs for the overall picture
+PLAIN_LEVELS = {-0.5: "−3 σ", 0: "0", 0.5: "+3 σ"}
 SPECTRUM_SOURCES = ("star", "here", "pin", "rail", "rail_lines", "bands", "names", "name_ticks")
 STRIP_SOURCES = ("w_star", "w_here", "w_pin", "ribbon_here", "ribbon_pin", "cards", "levels", "marks", "titles",
                  "tells", "size_here", "size_pin", "worst")
@@ -198,7 +199,7 @@ class View:
         self._text(f, "size_pin", "pin", text_font_size="12px", text_font_style="bold", text_align="right",
                    text_baseline="middle")
         f.yaxis.ticker = FixedTicker(ticks=[-0.5, 0, 0.5])
-        f.yaxis.major_label_overrides = {-0.5: "−3 σ", 0: "0", 0.5: "+3 σ"}
+        f.yaxis.major_label_overrides = PLAIN_LEVELS
         f.xaxis.major_tick_out = 2
 
     # ---- following the session ------------------------------------------------------------------------------------
@@ -310,9 +311,8 @@ class View:
             self._sent["strip_span"] = (total, bottom)
             f.x_range.update(start=0.0, end=total)
             f.y_range.update(start=bottom, end=top)
-            f.yaxis.ticker = FixedTicker(ticks=[-0.5, 0, 0.5] + ([-2.65, -2.15, -1.65] if pinned else []))
-            f.yaxis.major_label_overrides = {-0.5: "−3 σ", 0: "here" if pinned else "0", 0.5: "+3 σ",
-                                             -2.65: "−3 σ", -2.15: "pin", -1.65: "+3 σ"}
+            f.yaxis.ticker = FixedTicker(ticks=[0, -2.15] if pinned else [-0.5, 0, 0.5])
+            f.yaxis.major_label_overrides = {0: "here", -2.15: "pin"} if pinned else PLAIN_LEVELS
         lines: dict[str, tuple[list[Any], list[Any]]] = {k: ([], []) for k in ("w_star", "w_here", "w_pin")}
         ribbons: dict[str, list[tuple[float, float, float, float]]] = {"here": [], "pin": []}
         shades: dict[str, list[float]] = {"here": [], "pin": []}
