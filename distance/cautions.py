@@ -65,7 +65,7 @@ def cautions(
     elif lum < 3.5 and _t_code(source) >= 60:
         said.append("Giants of type M vary in light and colour; magnitudes of one night may mislead.")
     words = " ".join(_words(source))
-    if "composite" in words or "+" in words or getattr(source, "composite", ()):
+    if "composite" in words or "+" in words or bool(getattr(source, "composite", None)):
         said.append("The spectrum is composite; the scale is for single stars.")
     if "emission" in words or any(w in ("e", "(e)", "ne", "[e]") for w in _words(source)):
         said.append("Emission stars vary and redden themselves; the colour is not a safe measure of dust.")

@@ -14,7 +14,7 @@ DUST_HEIGHT_PC = 125.0
 #: Inside the Local Bubble (about 80 pc; Lallement et al. 2003 A&A 411 447) dust is scarce.
 BUBBLE_PC = 80.0
 #: Share of sightlines through a cloud, and mean excess behind one. Broad on purpose: zeta Oph has 0.32 at 112 pc.
-CLOUD_SHARE, CLOUD_EBV = 0.4, 1.2
+CLOUD_SHARE, CLOUD_EBV = 0.3, 1.0
 #: Latitude factor |sin b| taken when the direction is not known: that of stars crowding to the plane.
 SIN_B_UNKNOWN = 0.25
 
@@ -27,23 +27,17 @@ def galactic_latitude_sine(ra_deg: ArrayLike, dec_deg: ArrayLike) -> FloatArray:
     return np.abs(sine)
 
 
+def outside_bubble(distance_pc: ArrayLike) -> FloatArray:
+    """How far outside the Local Bubble a distance in pc lies: 0 near the Sun, 1 well beyond."""
+    return -np.expm1(-((np.asarray(distance_pc, float) / (1.5 * BUBBLE_PC)) ** 2))
+
+
 def mean_smooth(distance_pc: ArrayLike, sin_b: ArrayLike) -> FloatArray:
     """Mean E(B-V) of the smooth layer to a distance in pc, at |sin b|; the two broadcast."""
     d = np.asarray(distance_pc, float)
     s = np.maximum(np.asarray(sin_b, float), 0.01)
     path = DUST_HEIGHT_PC / s * -np.expm1(-d * s / DUST_HEIGHT_PC)
-    inside = -np.expm1(-((d / (1.5 * BUBBLE_PC)) ** 2))
-    return EBV_PER_KPC / 1000.0 * path * (0.1 + 0.9 * inside) + 0.001
-
-
-def mean_cloud(distance_pc: ArrayLike, sin_b: ArrayLike) -> FloatArray:
-    """Mean E(B-V) behind a cloud at up to this distance in pc: next to nothing nearby, :data:`CLOUD_EBV` beyond.
-
-    It does not grow farther out: a thick cloud may stand anywhere, and must not push its star away.
-    """
-    d = np.asarray(distance_pc, float)
-    inside = -np.expm1(-((d / (1.5 * BUBBLE_PC)) ** 2))
-    return CLOUD_EBV * (0.03 + 0.97 * inside) + 0.0 * np.asarray(sin_b, float)
+    return EBV_PER_KPC / 1000.0 * path * (0.1 + 0.9 * outside_bubble(d)) + 0.001
 
 
 def smooth_width(distance_pc: ArrayLike, sin_b: ArrayLike) -> FloatArray:
@@ -51,17 +45,26 @@ def smooth_width(distance_pc: ArrayLike, sin_b: ArrayLike) -> FloatArray:
     return mean_smooth(distance_pc, sin_b) * np.sqrt(np.pi / 2.0)
 
 
+def cloud_share(distance_pc: ArrayLike) -> FloatArray:
+    """Chance of a cloud on the way to a distance in pc: slight inside the Local Bubble, :data:`CLOUD_SHARE` beyond."""
+    return CLOUD_SHARE * (0.05 + 0.95 * outside_bubble(distance_pc))
+
+
+def mean_cloud(distance_pc: ArrayLike) -> FloatArray:
+    """Mean E(B-V) behind a cloud at up to this distance in pc: next to nothing nearby, :data:`CLOUD_EBV` beyond.
+
+    It does not grow farther out: a thick cloud may stand anywhere.
+    """
+    return CLOUD_EBV * (0.03 + 0.97 * outside_bubble(distance_pc))
+
+
 def log_density(ebv: ArrayLike, distance_pc: ArrayLike, sin_b: ArrayLike) -> FloatArray:
     """Natural log of the prior density of E(B-V) >= 0 at a distance in pc, per mag.
 
     A half-normal for the smooth layer and an exponential for clouds. The smooth part has no long tail: else a star with
-    much dust would be pushed to the distance where the layer alone could make it.
+    much dust would be taken for one whose intrinsic colour is off.
     """
-    return np.log(density(ebv, smooth_width(distance_pc, sin_b), mean_cloud(distance_pc, sin_b)))
-
-
-def density(ebv: ArrayLike, width: FloatArray, cloud: FloatArray) -> FloatArray:
-    """Prior density of E(B-V) >= 0 per mag, for a half-normal of ``width`` and a cloud of mean ``cloud`` (mag)."""
-    e = np.asarray(ebv, float)
-    smooth = (1 - CLOUD_SHARE) * np.sqrt(2 / np.pi) / width * np.exp(-0.5 * (e / width) ** 2)
-    return smooth + CLOUD_SHARE / cloud * np.exp(-e / cloud)
+    e, width = np.asarray(ebv, float), smooth_width(distance_pc, sin_b)
+    cloud, share = mean_cloud(distance_pc), cloud_share(distance_pc)
+    smooth = (1 - share) * np.sqrt(2 / np.pi) / width * np.exp(-0.5 * (e / width) ** 2)
+    return np.log(smooth + share / cloud * np.exp(-e / cloud))

@@ -30,6 +30,8 @@ FloatArray = NDArray[np.float64]
 ROUTE_CORRELATION = 0.35
 #: Samples x stars worked on at a time; keeps the arrays in the processor's cache.
 _CHUNK = 60_000
+#: Where a normal distribution has the percentiles kept.
+_NORMAL_POINTS = (-1.95996, -0.99446, 0.0, 0.99446, 1.95996)
 
 
 @dataclass(frozen=True)
@@ -163,8 +165,8 @@ def _run(stars: list[Star], requests: list[Request], parsed: list[Any], job: _Jo
         sigma = per_cent = NAN
         if star.parallax is not None:
             # always held against the distance that does not know of it
-            blind = routes[i][3] if routes[i][3] is not None else samples["distance_pc"][i]
-            sigma, per_cent = tension(blind, star.parallax)
+            blind = routes[i][3]
+            sigma, per_cent = tension(samples["distance_pc"][i] if blind is None else blind, star.parallax)
         result = Fathoming(
             percentiles=own,
             budget=budget_rows(variance[i]) if job.with_budget else (),
@@ -320,8 +322,8 @@ def fathom_many(
             for item, result in zip(chunk, results):
                 out[item[0]] = result
     if common_groups:
-        for item, result in _grouped(ready, out, job):
-            out[item] = result
+        for index, member in _grouped(ready, out, job):
+            out[index] = member
     return [r for r in out if r is not None]
 
 
@@ -356,36 +358,23 @@ def _grouped(
         variance = decompose(again, job.scale, 1000) if job.with_budget else np.zeros((len(stars), 8))
         for i, (item, before) in enumerate(zip(items, first)):
             said = before.cautions
-            common = {
-                "group_distance_pc": group.distance_pc,
-                "group_distance_err_pc": group.distance_err_pc,
-                "group_ebv": group.ebv,
-            }
+            before = replace(
+                before,
+                group_distance_pc=group.distance_pc,
+                group_distance_err_pc=group.distance_err_pc,
+                group_ebv=group.ebv,
+                group_outlier=not inside[i],
+            )
             if not inside[i]:
-                said = (
-                    f"The star stands apart from the group {name} in distance or reddening and was left on its own.",
-                    *said,
-                )
-                done.append((item[0], replace(before, cautions=said, group_outlier=True, **common)))
+                apart = f"The star stands apart from the group {name} in distance or reddening and was left on its own."
+                done.append((item[0], replace(before, cautions=(apart, *said))))
                 continue
             own = {k: tuple(v[:, i].tolist()) for k, v in percentiles.items()}
             sigma = group.distance_err_pc / group.distance_pc
-            own["distance_pc"] = tuple(
-                float(group.distance_pc * np.exp(z * sigma)) for z in (-1.96, -0.994, 0.0, 0.994, 1.96)
-            )
-            done.append(
-                (
-                    item[0],
-                    replace(
-                        before,
-                        percentiles=own,
-                        budget=budget_rows(variance[i]) if job.with_budget else (),
-                        cautions=said,
-                        samples={k: v[i] for k, v in samples.items()} if job.keep_samples else {},
-                        **common,
-                    ),
-                )
-            )
+            own["distance_pc"] = tuple(float(group.distance_pc * np.exp(z * sigma)) for z in _NORMAL_POINTS)
+            budget = budget_rows(variance[i]) if job.with_budget else ()
+            kept = {k: v[i] for k, v in samples.items()} if job.keep_samples else {}
+            done.append((item[0], replace(before, percentiles=own, budget=budget, samples=kept)))
     return done
 
 

@@ -48,7 +48,7 @@ def band_extinction(
 def fit_terms(rv: FloatArray, ebv: FloatArray, ratio: FloatArray) -> tuple[FloatArray, float]:
     """Least-squares coefficients of :data:`POWERS` and the largest residual."""
     design = np.stack([(rv - 3.1) ** p * ebv**q for p, q in POWERS], axis=1)
-    coefficients = np.linalg.lstsq(design, ratio, rcond=None)[0]
+    coefficients = np.asarray(np.linalg.lstsq(design, ratio, rcond=None)[0], np.float64)
     return coefficients, float(np.abs(design @ coefficients - ratio).max())
 
 

@@ -54,7 +54,7 @@ class Recipe:
 
 
 #: Guess of the scatter before any star is seen: main sequence, subgiants and giants, bright giants and supergiants.
-_SCATTER_GUESS = ((5.0, 0.25), (4.0, 0.60), (3.0, 0.48), (2.0, 0.80), (0.0, 0.80))
+_SCATTER_GUESS = ((5.0, 0.25), (4.0, 0.60), (3.0, 0.45), (2.0, 0.80), (0.0, 0.80))
 #: Guess of the colour term in mag per mag of (B-V)_0: (class, step, value). On the main sequence a star too red for
 #: its type is fainter; a red giant too red for it is brighter.
 _SLOPE_GUESS: tuple[tuple[float, tuple[tuple[float, float], ...]], ...] = (
@@ -282,10 +282,10 @@ def fit(stars: Calibrators, recipe: Recipe = Recipe(), *, colour: bool = True) -
     sigma = np.interp(stars.lum_code, [2.0, 3.0, 4.0, 5.0], [0.8, 0.6, 0.6, 0.4]) * ratio
     f = base.copy()
     expected = _expect(f, colours.v_zero, v_err, stars, sigma, recipe.tail)
-    alpha = np.zeros(len(stars))
+    alpha: FloatArray = np.zeros(len(stars))
     for _ in range(recipe.rounds):
         noise = 1.0 / expected.precision
-        alpha = np.linalg.solve(k_all + np.diag(noise), expected.target - base)
+        alpha = np.asarray(np.linalg.solve(k_all + np.diag(noise), expected.target - base), np.float64)
         f = base + k_all @ alpha
         expected = _expect(f, colours.v_zero, v_err, stars, sigma, recipe.tail)
         own = _smooth_scatter(at, stars, expected.square / ratio**2, use, recipe)

@@ -47,16 +47,19 @@ def along_steps(steps: ArrayLike, values: ArrayLike, *, hold: bool = True) -> Fl
     return np.interp(STEP_AXIS, x, y, **outside)
 
 
-def from_nodes(nodes: Mapping[float, FloatArray]) -> FloatArray:
+def from_nodes(nodes: Mapping[float, FloatArray], *, skip_gaps: bool = True) -> FloatArray:
     """Flat cell array from columns along steps at some luminosity codes, linear in the code between them.
 
-    A node that is NaN at a step is passed over there; outside the given nodes the nearest one is held.
+    A node that is NaN at a step is passed over there, or leaves NaN where ``skip_gaps`` is false; outside the given nodes
+    the nearest one is held.
     """
     codes = np.array(sorted(nodes))
     table = np.stack([nodes[c] for c in codes])
     out = np.full((N_STEP, N_LUM), np.nan)
     for i in range(N_STEP):
         good = np.isfinite(table[:, i])
+        if not skip_gaps:
+            good[:] = True
         if good.any():
             out[i] = np.interp(LUM_AXIS, codes[good], table[good, i])
     return out.ravel()

@@ -2,7 +2,7 @@
 
 Everything comes from the cited tables in ``data/``. Classes IV and, for temperature, II lie between the tabulated
 classes. Where no colours are tabulated for giants (earlier than G0) and supergiants, they follow the dwarfs of the
-same (B-V)_0 (common practice); Gaia and SDSS magnitudes of types without a tabulated value follow V-I or B-V through
+same (B-V)_0, or, beyond (B-V)_0 of 1.2, the giants of the same type (common practice); Gaia and SDSS magnitudes of types without a tabulated value follow V-I or B-V through
 the published transformations named below.
 """
 
@@ -83,7 +83,8 @@ def _colour_nodes() -> dict[str, dict[float, FloatArray]]:
     table = read_table("dwarfs")
     steps = _steps(table["type"])
     names = ("B-V", "U-B", "V-R", "V-I", "V-Ks", "J-H", "H-Ks", "G-V", "BP-RP", "G-RP")
-    dwarf = {n: along_steps(steps, table[n], hold=n in ("B-V", "U-B")) for n in names}
+    # colours of the hottest stars hardly change with type: the earliest tabulated value stands for those before it
+    dwarf = {n: along_steps(steps, table[n]) for n in names}
     evolved = read_table("evolved_colours")
     steps = _steps(evolved["type"])
     nodes: dict[str, dict[float, FloatArray]] = {n: {5.0: dwarf[n]} for n in names}
@@ -106,6 +107,10 @@ def _colour_nodes() -> dict[str, dict[float, FloatArray]]:
             if late:
                 value = shift[0] + shift[1] * along_steps(steps, evolved[theirs], hold=False)
             nodes[ours][code] = np.where(np.isfinite(value), value, _like_dwarfs(b_v, dwarf, ours))
+        if not late:
+            for name_late in ("U-B", "V-I", "V-Ks", "J-H", "H-Ks"):
+                mine = nodes[name_late][code]
+                nodes[name_late][code] = np.where(np.isfinite(mine), mine, nodes[name_late][3.0])
         order = np.argsort(np.nan_to_num(dwarf["V-I"], nan=99.0))
         good = np.isfinite(dwarf["V-I"][order]) & np.isfinite(dwarf["V-R"][order])
         nodes["V-R"][code] = np.interp(nodes["V-I"][code], dwarf["V-I"][order][good], dwarf["V-R"][order][good])
@@ -131,7 +136,7 @@ def _g_rp_of_bp_rp(bp_rp: FloatArray) -> FloatArray:
 
 
 def _offsets() -> dict[str, FloatArray]:
-    cells = {name: from_nodes(nodes) for name, nodes in _colour_nodes().items()}
+    cells = {name: from_nodes(nodes, skip_gaps=False) for name, nodes in _colour_nodes().items()}
     out = {"V": np.zeros(N_STEP * N_LUM), "B": cells["B-V"], "U": cells["U-B"] + cells["B-V"]}
     out["R"], out["I"], out["Ks"] = -cells["V-R"], -cells["V-I"], -cells["V-Ks"]
     out["H"] = out["Ks"] + cells["H-Ks"]

@@ -243,7 +243,7 @@ def draw(stars: list[Star], scale: Scale, prior: str, n_samples: int, seed: int)
     base = mean + slope * follow_of(colour_guess)
     middle, _, _ = place(base, m0_guess)
     d_guess = 10 ** (0.2 * np.clip(m0_guess - base - middle + companion, -10, 30) + 1)
-    layer, cloud = dust.smooth_width(d_guess, sin_b), dust.mean_cloud(d_guess, sin_b)
+    layer, cloud, share = dust.smooth_width(d_guess, sin_b), dust.mean_cloud(d_guess), dust.cloud_share(d_guess)
 
     # --- E(B-V): the Gaussian times a half-normal or an exponential (or nothing, where the user gave a prior of their
     # own)
@@ -251,14 +251,14 @@ def draw(stars: list[Star], scale: Scale, prior: str, n_samples: int, seed: int)
     tight = precision + 1.0 / layer**2
     centre_layer, spread_layer = centre * precision / tight, 1.0 / np.sqrt(tight)
     log_layer = (
-        np.log((1 - dust.CLOUD_SHARE) * np.sqrt(2 / np.pi) / layer)
+        np.log((1 - share) * np.sqrt(2 / np.pi) / layer)
         - 0.5 * centre * centre_layer / layer**2
         + np.log(spread_layer / spread)
         + log_ndtr(centre_layer / spread_layer)
     )
     centre_cloud = centre - 1.0 / (cloud * precision)
     log_cloud = (
-        np.log(dust.CLOUD_SHARE / cloud)
+        np.log(share / cloud)
         + (0.5 / (cloud * precision) - centre) / cloud
         + log_ndtr(centre_cloud / spread)
     )
