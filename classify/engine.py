@@ -19,7 +19,7 @@ from starfathom.classify.alignment import Nodes
 from starfathom.classify.assignment import Assignment
 from starfathom.classify.errors import RequestError, SpectrumError
 from starfathom.classify.evidence import gather_evidence, remark_on
-from starfathom.classify.foreign import judge_foreign
+from starfathom.classify.foreign import judge_foreign_many
 from starfathom.classify.grid import PIXEL_ANGSTROM, WAVE, blur, continuum, rectify
 from starfathom.classify.learn import MODEL_DIR, Aligned, align_library, average, learn_rung, load_nodes
 from starfathom.classify.model import RUNGS, Model
@@ -86,6 +86,7 @@ class PreparedBatch:
     unexplained: FloatArray
     snr: FloatArray
     snr_window: tuple[str, ...]
+    best_snr: FloatArray        # the highest of all windows
     medium: tuple[str, ...]
     notes: tuple[tuple[str, ...], ...]
     best: NDArray[np.int64]
@@ -104,11 +105,14 @@ def _recipe_fingerprint() -> str:
     """Changes whenever the library or the code that learns from it changes."""
     here = Path(__file__).parent
     digest = hashlib.sha256()
-    for name in ("alignment", "gaussian_process", "grid", "learn", "model", "posterior", "surface", "training"):
+    for name in ("alignment", "criteria", "gaussian_process", "grid", "learn", "model", "posterior", "surface",
+                 "training", "lines/direct", "lines/windows"):
         digest.update((here / f"{name}.py").read_bytes())
-    digest.update((here.parent / "templates" / "data" / "library.npz").read_bytes()
-                  if (here.parent / "templates" / "data" / "library.npz").exists()
-                  else str(len(load_library())).encode())
+    for path in (here / "data" / "criteria.ecsv", here / "data" / "criteria_scales.ecsv",
+                 here / "lines" / "data" / "features.ecsv", here.parent / "templates" / "data" / "library.npz"):
+        if path.exists():
+            digest.update(path.read_bytes())
+    digest.update(str(len(load_library())).encode())
     return digest.hexdigest()[:12]
 
 
@@ -239,7 +243,7 @@ class Classifier:
         flat = np.clip(np.where(valid, flux / np.where(level > 0, level, 1.0), 1.0), 0, 3)
         sigma = self._own_noise(natives, flat, valid, sigma, level, best, fwhm)
         velocity = np.where(has_v, given_v, np.mean(total[:, reach], axis=1))
-        snr, window = _signal_to_noise(flux, sigma, valid)
+        snr, window, best_snr = _signal_to_noise(flux, sigma, valid)
         medium, notes = [], []
         for i, p in enumerate(spectra):
             words, said = _medium_words(p, settings[i])
@@ -256,7 +260,7 @@ class Classifier:
                 remarks.append(f"line spread measured as {fwhm[i]:.1f} A")
             notes.append(tuple(remarks))
         return PreparedBatch(flux, valid, sigma, flat, level, velocity, np.hypot(error, scatter / 2), has_v, fwhm,
-                             has_f, unexplained, snr, window, tuple(medium), tuple(notes), best)
+                             has_f, unexplained, snr, window, best_snr, tuple(medium), tuple(notes), best)
 
     def _own_noise(self, natives: list[Native], flat: FloatArray, valid: BoolArray, sigma: FloatArray,
                    level: FloatArray, best: NDArray[np.int64], fwhm: FloatArray) -> FloatArray:
@@ -390,7 +394,7 @@ class Classifier:
         grav, grav_extra = average(model.log_g, found.components, found.spread)
         fe_h, fe_h_sd = model.fe_h.predict(found.components, found.spread)
         by_regression, by_regression_extra = average(model.step, found.components, found.spread)
-        evidence = gather_evidence(batch, rows, self.model, by_regression)
+        evidence = gather_evidence(batch, rows, self.model)
         log_p = post.weigh(post.evidence_pieces(found.log_like, mag, mag_extra, grav, grav_extra, by_regression,
                                                 by_regression_extra, evidence.log_like, model.surface, model.loci),
                            model.blend)
@@ -399,6 +403,9 @@ class Classifier:
         mag_sd = self._mag_error(model, step, mag, mag_extra)
         mass = float(np.quantile(model.conformal, 0.9))
         near = self._nearest(model, found)
+        code_of = t_code_from_step(step)
+        with np.errstate(all="ignore"):
+            criteria = evidence.criteria(code_of)
         answers = []
         for q, i in enumerate(rows):
             spectrum = spectra[i]
@@ -408,15 +415,15 @@ class Classifier:
                 "snr_window": batch.snr_window[i], "fwhm_angstrom": float(batch.fwhm_angstrom[i]),
                 "wave_medium": batch.medium[i], "notes": batch.notes[i],
                 "meta": {k: v for k, v in spectrum.meta.items() if k in ("object", "exptime_s", "ra_deg", "dec_deg")}}
-            if not np.isfinite(batch.snr[i]) or batch.snr[i] < _LEAST_SNR:
+            if not batch.best_snr[i] >= _LEAST_SNR:
                 answers.append(Assignment(status="refused", object_kind="unknown", **common,
-                                          reason=f"signal to noise {batch.snr[i]:.1f} per angstrom is below "
-                                                 f"{_LEAST_SNR:g}: too poor to say anything"))
+                                          reason=f"signal to noise {batch.best_snr[i]:.1f} per angstrom at its best is "
+                                                 f"below {_LEAST_SNR:g}: too poor to say anything"))
                 continue
             i_t, j = post.best_type(p[q])
-            code = float(t_code_from_step(step[q]))
+            code = float(code_of[q])
             ok_mag = self._mag_valid(model, found.components[q], p[q], step[q])
-            flags = list(evidence.flags[q])
+            flags: list[str] = []
             share = float(valid[q][CORE].mean())
             if share < 0.9:
                 flags.append("partial-coverage")
@@ -431,12 +438,12 @@ class Classifier:
                 t_code_err=float(step_sd[q]), lum_code=float(lum[q]), lum_code_err=float(lum_sd[q]), posterior=p[q],
                 type_set_90=post.type_set(p[q], mass), abs_mag_v=float(mag[q]), abs_mag_v_err=float(mag_sd[q]),
                 abs_mag_v_ok=bool(ok_mag), log_g=float(grav[q]), log_g_err=float(np.hypot(0.25, grav_extra[q])),
-                nearest=near[q], flags=tuple(flags), evidence=evidence.criteria_for(q, code), **common)
-            answer = judge_foreign(answer, batch, i, found, q, flat[q], valid[q], float(fe_h[q]))
-            if answer.status == "typed":
-                answer = replace(answer, remark=remark_on(answer, float(fe_h[q])))
+                nearest=near[q], flags=tuple(flags), evidence=criteria[q], **common)
             answers.append(answer)
-        return answers
+        judged = judge_foreign_many(answers, batch, rows, found, np.arange(len(rows)), flat, valid, fe_h,
+                                    (self.without_libraries, self.without_stars))
+        return [replace(a, remark=remark_on(a, float(fe_h[q]))) if a.status == "typed" else a
+                for q, a in enumerate(judged)]
 
     @staticmethod
     def _mag_error(model: Model, step: FloatArray, mag: FloatArray, extra: FloatArray) -> FloatArray:
@@ -500,23 +507,26 @@ class Classifier:
 _IN_PIXELS = np.zeros(len(WAVE), bool)
 _IN_PIXELS[PIXELS] = True
 _SNR_WINDOWS = ((4400.0, 4600.0), (4900.0, 5100.0), (5300.0, 5600.0), (4000.0, 4200.0), (6100.0, 6400.0),
-                (6600.0, 6800.0))
+                (6600.0, 6800.0), (7000.0, 7300.0), (3540.0, 9300.0))
+_WINDOW_PIXELS = [(np.flatnonzero((WAVE > lo) & (WAVE < hi)), lo, hi) for lo, hi in _SNR_WINDOWS]
 
 
-def _signal_to_noise(flux: FloatArray, sigma: FloatArray, valid: BoolArray) -> tuple[FloatArray, tuple[str, ...]]:
-    """S/N per angstrom in 4400-4600 A or the nearest window that is mostly valid."""
-    out, names = np.full(len(flux), np.nan), []
+def _signal_to_noise(flux: FloatArray, sigma: FloatArray, valid: BoolArray
+                     ) -> tuple[FloatArray, tuple[str, ...], FloatArray]:
+    """S/N per angstrom in 4400-4600 A or the nearest window that is mostly valid; and the best of all windows."""
+    out, best, names = np.full(len(flux), np.nan), np.full(len(flux), np.nan), []
+    ratio = flux / np.maximum(sigma, 1e-30) / np.sqrt(PIXEL_ANGSTROM)
     for i in range(len(flux)):
         name = ""
-        for lo, hi in (*_SNR_WINDOWS, (3540.0, 9300.0)):
-            w = (WAVE > lo) & (WAVE < hi)
-            ok = w & valid[i]
-            if ok.sum() > 0.7 * w.sum() or (lo < 3600 and ok.any()):
-                out[i] = float(np.median(flux[i][ok] / np.maximum(sigma[i][ok], 1e-30) / np.sqrt(PIXEL_ANGSTROM[ok])))
-                name = f"{lo:.0f}-{hi:.0f}"
-                break
+        for w, lo, hi in _WINDOW_PIXELS:
+            inside = valid[i, w]
+            if inside.mean() > 0.7 or (not name and hi > 9000 and inside.any()):
+                here = float(np.median(ratio[i, w][inside]))
+                if not name:
+                    out[i], name = here, f"{lo:.0f}-{hi:.0f}"
+                best[i] = np.nanmax([best[i], here])
         names.append(name)
-    return out, tuple(names)
+    return out, tuple(names), best
 
 
 def _medium_words(spectrum: PlainSpectrum, settings: Settings) -> tuple[str, str]:

@@ -10,11 +10,11 @@ import numpy as np
 from numpy.typing import NDArray
 
 from starfathom.classify.assignment import Assignment, Criterion
-from starfathom.classify.criteria import CriterionScales, criteria_for, log_likelihood, measure_criteria
+from starfathom.classify.criteria import CriterionScales, load_criteria, log_likelihood, measure_criteria, point
 from starfathom.classify.grid import WAVE, blur
-from starfathom.classify.lines.direct import BulkLines, measure_many
+from starfathom.classify.lines.direct import measure_many
 from starfathom.classify.model import RUNGS, Model
-from starfathom.templates.subtypes import CLASSES, SUBTYPES
+from starfathom.templates.subtypes import CLASSES, SUBTYPES, class_of, nearest_subtype
 
 if TYPE_CHECKING:
     from starfathom.classify.engine import PreparedBatch
@@ -24,22 +24,43 @@ FloatArray = NDArray[np.float64]
 
 @dataclass(frozen=True)
 class Evidence:
-    """``log_like`` (n, n_subtypes, 8) is the summed log likelihood of the criteria."""
+    """Criteria of n spectra, (n, k) in the order of the table; ``log_like`` (n, n_subtypes, 8) is their sum."""
 
     log_like: FloatArray
-    lines: tuple[tuple[BulkLines, int], ...]
+    values: FloatArray
+    errors: FloatArray
     scales: tuple[CriterionScales, ...]
-    flags: list[tuple[str, ...]]
 
-    def criteria_for(self, row: int, t_code: float) -> tuple[Criterion, ...]:
-        """Criteria of one spectrum as evidence, what each points to near ``t_code`` and its share of the say."""
-        lines, index = self.lines[row]
-        found = criteria_for(lines, index, scales=self.scales[row], t_guess=t_code)
-        # the share goes by how sharply a criterion points
-        say = [sum(1 / e ** 2 for e in (c.t_code_err, 2 * c.lum_code_err) if np.isfinite(e) and e > 0) for c in found]
-        total = sum(say) or 1.0
-        weighted = [Criterion(**{**vars(c), "weight": round(s / total, 4)}) for c, s in zip(found, say)]
-        return tuple(sorted(weighted, key=lambda c: -c.weight))
+    def criteria(self, t_code: FloatArray) -> list[tuple[Criterion, ...]]:
+        """The usable criteria of each spectrum near its type ``t_code`` (n,), what each points to, weightiest first.
+
+        The weight goes by how sharply a criterion points, in subtypes and in half classes.
+        """
+        rules = load_criteria()
+        n, k = self.values.shape
+        t, t_err, lum, lum_err = (np.full((n, k), np.nan) for _ in range(4))
+        for scales in {id(s): s for s in self.scales}.values():
+            mine = np.flatnonzero([s is scales for s in self.scales])
+            said = point(scales, self.values[mine], self.errors[mine], t_code[mine])
+            t[mine], t_err[mine], lum[mine], lum_err[mine] = said
+        say = np.nan_to_num(1 / t_err ** 2) + np.nan_to_num(0.25 / lum_err ** 2)
+        low, high = np.array([r.t_lo - 1 for r in rules]), np.array([r.t_hi + 1 for r in rules])
+        listed = np.isfinite(self.values) & (t_code[:, None] >= low) & (t_code[:, None] <= high)
+        say = np.where(listed, say, 0.0)
+        weight = say / np.maximum(say.sum(axis=1, keepdims=True), 1e-12)
+        out = []
+        for i in range(n):
+            found = []
+            for j in np.flatnonzero(listed[i])[np.argsort(-weight[i, listed[i]], kind="stable")]:
+                rule = rules[j]
+                words = [nearest_subtype(float(t[i, j]))] if np.isfinite(t[i, j]) else []
+                words += [class_of(float(lum[i, j]))] if np.isfinite(lum[i, j]) else []
+                found.append(Criterion(
+                    rule.label, float(self.values[i, j]), float(self.errors[i, j]), " ".join(words),
+                    round(float(weight[i, j]), 4), float(t[i, j]), float(t_err[i, j]), float(lum[i, j]),
+                    float(lum_err[i, j]), rule.features, rule.citation))
+            out.append(tuple(found))
+        return out
 
 
 def line_rung(fwhm_angstrom: float) -> float:
@@ -47,29 +68,29 @@ def line_rung(fwhm_angstrom: float) -> float:
     return next((r for r in RUNGS if r >= fwhm_angstrom - 0.05), RUNGS[-1])
 
 
-def gather_evidence(batch: PreparedBatch, rows: NDArray[np.int64], model_of: Callable[[float], Model],
-                    step: FloatArray) -> Evidence:
+def gather_evidence(batch: PreparedBatch, rows: NDArray[np.int64], model_of: Callable[[float], Model]) -> Evidence:
     """Criteria for ``rows`` of a prepared batch, measured at the rung next to each spectrum's own line spread."""
-    n = len(rows)
+    n, k = len(rows), len(load_criteria())
     log_like = np.zeros((n, len(SUBTYPES), len(CLASSES)))
-    lines: list[tuple[BulkLines, int]] = [None] * n   # type: ignore[list-item]
-    scales: list[CriterionScales] = [None] * n        # type: ignore[list-item]
+    all_values, all_errors = np.full((n, k), np.nan), np.full((n, k), np.nan)
+    scales: list[CriterionScales | None] = [None] * n
     rung = np.array([line_rung(f) for f in batch.fwhm_angstrom[rows]])
     kernel = np.round(np.sqrt(np.maximum(rung ** 2 - batch.fwhm_angstrom[rows] ** 2, 0)), 1)
     for r in np.unique(rung):
         mine = np.flatnonzero(rung == r)
         flux, ok = batch.flux[rows[mine]].copy(), batch.valid[rows[mine]].copy()
-        for k in np.unique(kernel[mine]):
-            q = kernel[mine] == k
-            flux[q], ok[q] = blur(flux[q], ok[q], float(k))
+        for width in np.unique(kernel[mine]):
+            q = kernel[mine] == width
+            flux[q], ok[q] = blur(flux[q], ok[q], float(width))
         bulk = measure_many(WAVE, flux, batch.sigma[rows[mine]], ok, np.full(len(mine), r),
                             velocity_kms=batch.velocity_kms[rows[mine]])
         values, errors, _ = measure_criteria(bulk)
         own = model_of(float(r)).criteria
         log_like[mine] = log_likelihood(own, values, errors).sum(axis=1)
-        for i, q in enumerate(mine):
-            lines[q], scales[q] = (bulk, i), own
-    return Evidence(log_like, tuple(lines), tuple(scales), [()] * n)
+        all_values[mine], all_errors[mine] = values, errors
+        for q in mine:
+            scales[q] = own
+    return Evidence(log_like, all_values, all_errors, tuple(s for s in scales if s is not None))
 
 
 def remark_on(answer: Assignment, fe_h: float) -> str:

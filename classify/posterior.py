@@ -17,9 +17,11 @@ _UNSUPPORTED = -3.0
 #: Cells are not equally wide in step (O9.7; K5-K7-M0): the prior is per unit of step.
 _CELL_WIDTH = np.gradient(STEPS)
 
-#: How often classifiers use a subtype, against a whole one: halves are rare among A to G stars (common practice).
-USAGE: FloatArray = np.array([1.0 if name[1:] in "0123456789" or name in ("O9.7", "B0.5", "B9.5") else
-                              (0.15 if name[0] in "AFG" else 0.4) for name in SUBTYPES])
+#: How often a half subtype is used, against the whole ones beside it: counted among the library's catalogue types.
+_HALF_USAGE = {"O": 0.5, "B": 0.1, "A": 0.02, "F": 0.03, "G": 0.05, "K": 0.07, "M": 0.17}
+_COMMON_HALVES = ("O9.5", "O9.7", "B0.5", "B1.5", "B2.5", "B9.5")
+USAGE: FloatArray = np.array([1.0 if "." not in name else 0.5 if name in _COMMON_HALVES else _HALF_USAGE[name[0]]
+                              for name in SUBTYPES])
 
 
 def student(deviation: FloatArray, dof: float = 5.0) -> FloatArray:
@@ -91,7 +93,7 @@ def best_type(posterior: FloatArray) -> tuple[int, int]:
     given = posterior[:, list(group)].sum(axis=1)
     mean = float(given @ STEPS / given.sum())
     # a seldom used half is printed only when the mean stands close to it
-    off = np.abs(STEPS - mean) + np.where(USAGE < 0.2, 0.35, np.where(USAGE < 1, 0.1, 0.0))
+    off = np.abs(STEPS - mean) + np.where(USAGE < 0.2, 0.3, np.where(USAGE < 1, 0.1, 0.0))
     return int(np.argmin(off)), j
 
 

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.interpolate import CubicSpline
+from scipy.interpolate import CubicSpline, PPoly
 
 from starfathom.classify.grid import LN_STEP, PIXEL_ANGSTROM, WAVE
 from starfathom.classify.spectrum import PlainSpectrum
@@ -30,20 +30,21 @@ def noise_from_pixels(flux: FloatArray, valid: BoolArray, blocks: int = 12) -> F
     (ADASS XVII, ASP Conf. 394, 505). Lines narrower than four pixels count as noise, so it is an upper bound.
     """
     n = len(flux)
+    blocks = max(1, min(blocks, n // 60))
     second = np.full(n, np.nan)
     second[2:-2] = np.abs(2 * flux[2:-2] - flux[:-4] - flux[4:])
     whole = valid.copy()
     whole[2:-2] &= valid[:-4] & valid[4:]
     second[~whole] = np.nan
-    centres, values = [], []
-    for part in np.array_split(np.arange(n), min(blocks, max(1, n // 60))):
-        have = np.isfinite(second[part])
-        if have.sum() >= 20:
-            centres.append(part.mean())
-            values.append(1.482602 / 6 ** 0.5 * np.median(second[part][have]))
-    if not values:
+    size = n // blocks
+    block = np.sort(second[: size * blocks].reshape(blocks, size), axis=1)       # NaN sorts last
+    count = np.isfinite(block).sum(axis=1)
+    use = np.flatnonzero(count >= 20)
+    if not use.size:
         return np.full(n, float(np.std(flux[valid])) if valid.any() else 1.0)
-    return np.interp(np.arange(n), centres, np.maximum(values, 1e-9 * np.median(np.abs(flux[valid]))))
+    middle = 1.482602 / 6 ** 0.5 * block[use, count[use] // 2]
+    least = 1e-9 * float(np.median(np.abs(flux[valid])))
+    return np.interp(np.arange(n), (use + 0.5) * size, np.maximum(middle, least))
 
 
 class Native:
@@ -82,6 +83,7 @@ class Native:
         typical = np.median(step)
         self._bad = (~self.valid).astype(float)
         holes = np.flatnonzero(step > 3.5 * typical)
+        self._integral: PPoly | None = None
         self._holes = [(self.ln_wave[i], self.ln_wave[i + 1]) for i in holes]
 
     def quick(self) -> tuple[FloatArray, BoolArray]:
@@ -105,7 +107,9 @@ class Native:
         ln_shift = np.log1p(np.asarray(velocity_kms, float) / LIGHT_KMS)
         edge_shift = ln_shift if ln_shift.ndim == 0 else np.interp(_LN_EDGES, _LN_WAVE, ln_shift)
         edges = np.clip(_LN_EDGES + edge_shift, self.ln_wave[0], self.ln_wave[-1])
-        integral = CubicSpline(self.ln_wave, self.flux).antiderivative()
+        if self._integral is None:
+            self._integral = CubicSpline(self.ln_wave, self.flux).antiderivative()
+        integral = self._integral
         width = np.maximum(np.diff(edges), 1e-12)
         centre = _LN_WAVE + ln_shift
         flux = np.diff(integral(edges)) / width
