@@ -244,8 +244,8 @@ def draw_windows(figure: Figure, place: Any, e: Evidence, sigmas: FloatArray) ->
         flux.plot(wave[cut], star, color=LIGHT.ink, lw=1.1)
         flux.plot(wave[cut], e.template[cut], color=LIGHT.here, lw=1.0)
         for m in w.marks:
-            flux.axvline(m.wave_angstrom, color=LIGHT.soft, lw=0.5, ls=(0, (1, 3)))
-            bars.axvline(m.wave_angstrom, color=LIGHT.soft, lw=0.5, ls=(0, (1, 3)))
+            flux.axvline(m.at_angstrom, color=LIGHT.soft, lw=0.5, ls=(0, (1, 3)))
+            bars.axvline(m.at_angstrom, color=LIGHT.soft, lw=0.5, ls=(0, (1, 3)))
         flux.set_title(_cut(w.title, 132 // columns), fontsize=7.5, loc="left", pad=3, weight="bold")
         draw_ribbon(bars, wave[cut], sigmas[cut])
         size = rms(sigmas[cut])
@@ -285,7 +285,8 @@ def draw_pointers(figure: Figure, place: Any, e: Evidence) -> None:
     """What each criterion points to: subtype across, one line a criterion, class in words; the page's margin."""
     said = e.assignment
     ax = figure.add_subplot(place)
-    criteria = sorted(said.evidence, key=lambda c: -c.weight)[:14]
+    speaking = [c for c in said.evidence if c.points_to or math.isfinite(c.t_code) or math.isfinite(c.lum_code)]
+    criteria = sorted(speaking or said.evidence, key=lambda c: -c.weight)[:14]
     if not criteria:
         ax.axis("off")
         words = "No criterion has a say here;\nthe windows are on the strongest\nfeatures of the type compared."
@@ -297,22 +298,21 @@ def draw_pointers(figure: Figure, place: Any, e: Evidence) -> None:
         y = -row
         value = f"{c.value:.3g}" + (f" ± {c.error:.2g}" if math.isfinite(c.error) and c.error > 0 else "") \
             if math.isfinite(c.value) else ""
-        ax.text(lo, y + 0.33, _cut(c.name, 34), fontsize=6.8, va="bottom", weight="bold")
-        ax.text(hi, y + 0.33, _cut(value, 18), fontsize=6.5, va="bottom", ha="right", color=LIGHT.soft)
+        words = _points(c)
+        ax.text(lo, y + 0.12, _cut(c.name, 26), fontsize=6.8, va="bottom", weight="bold")
+        ax.text(hi, y + 0.12, value + (f"  →  {words}" if words else ""), fontsize=6.5, va="bottom", ha="right",
+                color=LIGHT.soft)
         ax.plot([lo, hi], [y, y], color=LIGHT.faint, lw=0.6, zorder=0)
         if math.isfinite(c.t_code):
             error = c.t_code_err if math.isfinite(c.t_code_err) else 0.0
             ax.errorbar(np.clip(c.t_code, lo, hi), y, xerr=error, fmt="o", ms=3 + 4 * math.sqrt(max(c.weight, 0.0)),
                         color=LIGHT.ink, lw=0.9)
-        ax.text(lo if math.isfinite(c.t_code) and c.t_code > (lo + hi) / 2 else hi, y - 0.08, _points(c), fontsize=6.3,
-                va="top", ha="left" if math.isfinite(c.t_code) and c.t_code > (lo + hi) / 2 else "right",
-                color=LIGHT.soft)
     if math.isfinite(centre):
         ax.axvline(centre, color=LIGHT.here, lw=1.0)
         ax.text(centre, 1.0, cell_name(cell_near(centre, e.lum_code)), color=LIGHT.here, ha="center", va="bottom",
                 fontsize=7.5, weight="bold")
     ax.set_xlim(lo, hi)
-    ax.set_ylim(-max(len(criteria), 6) + 0.3, 1.0)
+    ax.set_ylim(-max(len(criteria), 6) + 0.5, 1.0)
     ax.set_yticks([])
     ticks = np.arange(math.ceil(lo), math.floor(hi) + 1, max(1, round((hi - lo) / 6)))
     ax.set_xticks(ticks, [nearest_subtype(float(t)) for t in ticks])
@@ -332,5 +332,5 @@ def _reach(criteria: Sequence[Criterion], centre: float) -> tuple[float, float]:
 
 def _points(c: Criterion) -> str:
     if c.points_to:
-        return _cut(c.points_to, 30)
+        return _cut(c.points_to, 18)
     return f"class {class_of(c.lum_code)}" if math.isfinite(c.lum_code) else ""

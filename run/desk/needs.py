@@ -37,8 +37,8 @@ def need(assignment: Assignment, magnitudes: MagnitudeGrid | None = None) -> Nee
     if assignment.status == "failed":
         return Need(-1.0, "not readable")
     if assignment.status != "typed" or assignment.posterior is None:
-        what = assignment.other_type or assignment.object_kind
-        return Need(1000.0, f"refused: {what}" if what not in ("", "unknown") else "refused")
+        what = assignment.object_kind
+        return Need(1000.0, f"refused: {what}" if what not in ("", "unknown", "star") else "refused")
     p = assignment.posterior / assignment.posterior.sum()
     left = 1.0 - float(p.max())
     percent = distance_scatter(p, magnitudes)

@@ -58,11 +58,10 @@ def peaks(posterior: FloatArray, least: float = 0.01) -> list[Cell]:
     return sorted(cells, key=lambda c: -posterior[c])
 
 
-def rival(posterior: FloatArray) -> Cell | None:
-    """The likeliest cell of the likeliest class that is not the best cell's; None when no other class has any share."""
-    best = int(posterior.argmax()) % posterior.shape[1]
+def rival(posterior: FloatArray, own: int) -> Cell | None:
+    """The likeliest cell of the likeliest class other than class ``own``; None when no other class has any share."""
     share = posterior.sum(axis=0)
-    share[best] = -1.0
+    share[own] = -1.0
     j = int(share.argmax())
     if share[j] <= 0:
         return None

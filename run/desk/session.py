@@ -233,8 +233,9 @@ class Session:
         self.said = "There is only one peak." if len(cells) == 1 else f"Peak {cells.index(nxt) + 1} of {len(cells)}."
 
     def _rival(self, v: dict[str, Any]) -> None:
-        self._go(None if self.posterior is None else plane.rival(self.posterior),
-                 "No other luminosity class has any share in this star.")
+        best = self.best_cell()
+        other = None if self.posterior is None or best is None else plane.rival(self.posterior, best[1])
+        self._go(other, "No other luminosity class has any share in this star.")
 
     def _pin(self, v: dict[str, Any]) -> None:
         same = self.look.pin == self.look.place

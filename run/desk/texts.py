@@ -61,44 +61,56 @@ def place_tile(s: Session, here: Comparison | None, pinned: Comparison | None) -
     place = s.look.place
     probability = s.probability(place.cell)
     chance = "" if probability is None else f"probability {per_cent(probability)}"
+    chance = " · ".join(x for x in (chance, _distance_words(s)) if x)
     fit = "" if here is None else f"misfit {here.overall:.2f} σ"
     top = f'you stand at <b>{escape(plane.cell_name(place.cell))}</b> <small>{chance}</small>'
     standard = f"real star {escape(place.standard)}" if place.standard else ""
     against = ""
     if pinned is not None and here is not None:
-        against = (f'pinned <b class="pin">{escape(pinned.place.label)}</b> {pinned.overall:.2f} σ, '
+        against = (f'pinned <b class="pin">{escape(pinned.place.label)}</b> {pinned.overall:.2f} σ: '
                    f"{_preferred(here, pinned)}")
-    under = " · ".join(x for x in (fit, against, standard, _distance_words(s)) if x)
+    under = " · ".join(x for x in (fit, against, standard) if x)
     return f'<div class="big">{top}</div><div class="what">{under}</div>'
 
 
 def _distance_words(s: Session) -> str:
-    """How far the star would be if it were of the type where one stands, and how far the run puts it."""
+    """How far the star would be if it were of the type where one stands."""
     found = s.night.distance_if(s.index, plane.cell_name(s.look.place.cell))
     if found is None or not math.isfinite(found[0]):
         return ""
     middle, lo, hi = (figures(v) for v in found)
-    text = f"if so at {middle} pc ({lo} to {hi})"
+    return f'<span title="68 %: {lo} to {hi} pc">if so, {middle} pc</span>'
+
+
+def _run_distance(s: Session) -> str:
+    """Where the run puts the star."""
     try:
         run = float(s.star.row.get("distance_pc", "nan"))
     except (TypeError, ValueError):
         run = float("nan")
-    return text + (f", run {figures(run)} pc" if math.isfinite(run) else "")
+    return f"run: {figures(run)} pc · " if math.isfinite(run) else ""
 
 
 def _preferred(here: Comparison, pinned: Comparison) -> str:
     for_pin = sum(b < a - 0.1 for a, b in zip(here.by_window, pinned.by_window))
     for_here = sum(a < b - 0.1 for a, b in zip(here.by_window, pinned.by_window))
-    return f"the pin better in {for_pin} windows, here in {for_here}"
+    return f"better in {for_pin} windows, worse in {for_here}"
 
 
-def machine_tile(said: Assignment | None) -> str:
+def kind_words(said: Assignment) -> str:
+    """What a star without an MK type is, in a word or two; "" when not known."""
+    kind = "" if said.object_kind in ("", "unknown") else said.object_kind
+    return said.other_type if kind in ("white dwarf", "") and said.other_type else kind
+
+
+def machine_tile(s: Session) -> str:
     """What the machine says."""
+    said = s.star.assignment
     if said is None:
         return '<div class="big">reading …</div>'
     if said.status != "typed":
-        kind = said.other_type or said.object_kind
-        title = "machine: no MK type" + (f" <small>({escape(kind)})</small>" if kind not in ("", "unknown") else "")
+        kind = kind_words(said)
+        title = "machine: no MK type" + (f" <small>({escape(kind)})</small>" if kind else "")
         reason = escape(said.reason)
         return f'<div class="big">{title}</div><div class="what" title="{reason}">{reason}</div>'
     classes = ", ".join(f"{c} {per_cent(p)}" for c, p in
@@ -108,7 +120,7 @@ def machine_tile(said: Assignment | None) -> str:
     whole = escape(", ".join(said.type_set_90))
     return (f'<div class="big">machine: {escape(said.mk_type)} '
             f'<small>± {said.t_code_err:.1f} subtype · {classes}</small></div>'
-            f'<div class="what" title="{whole}">90 % sure it is one of {escape(inner)}{flags}</div>')
+            f'<div class="what" title="{whole}">{_run_distance(s)}90 % sure it is one of {escape(inner)}{flags}</div>')
 
 
 def count_line(s: Session) -> str:
@@ -133,7 +145,7 @@ def queue_list(s: Session) -> str:
     for k in queue[first:last]:
         star, said = s.night.stars[k], s.night.stars[k].assignment
         decision = s.decided.get(star.name)
-        say = "" if said is None else (said.mk_type or said.other_type or "–")
+        say = "" if said is None else (said.mk_type or kind_words(said) or "–")
         mark, why = "", escape(star.need.why) if said is not None else "waiting"
         if decision is not None:
             mark = {"accept": "✓ ", "amend": "✎ ", "set aside": "✕ "}.get(decision.action, "")

@@ -343,9 +343,11 @@ class View:
                         ribbons[key].append((a - h, a + h, min(middle, y), max(middle, y)))
                         shades[key].append(0.30 if abs(v) < 1 else 0.6 if abs(v) < 3 else 1.0)
             for m in w.marks:
-                at = float(m.wave_angstrom - w.lo_angstrom + left)
+                at = float(m.at_angstrom - w.lo_angstrom + left)
                 mark_x.append(at)
-                ticks[at] = f"{m.wave_angstrom:.0f}"
+                # numbers nearer than that would run into each other
+                if all(abs(at - other) > 14.0 for other in ticks):
+                    ticks[at] = f"{m.at_angstrom:.0f}"
         for key, (xs, ys) in lines.items():
             self._put(key, {"x": xs, "y": ys}, ("always", object()))
         for key in ("here", "pin"):
@@ -441,7 +443,7 @@ class View:
         return {
             ("star", "html"): texts.star_tile(s),
             ("place", "html"): texts.place_tile(s, here, pinned),
-            ("machine", "html"): texts.machine_tile(s.star.assignment),
+            ("machine", "html"): texts.machine_tile(s),
             ("count", "html"): texts.count_line(s),
             ("queue", "html"): texts.queue_list(s),
             ("evidence", "html"): texts.evidence_table(s, here),

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import re
 from collections.abc import Iterable, Sequence
 from dataclasses import dataclass, replace
 
@@ -26,7 +27,8 @@ MOST_ANGSTROM = 420.0
 class Mark:
     """A named line or band: where it is, the stretch it is measured over, what it tells.
 
-    ``key`` is its name in the table of features, ``name`` its name for people; ``line`` is False for bands.
+    ``key`` is its name in the table of features, ``name`` its name for people; ``line`` is False for bands, ``index``
+    True for the definitions of an index system, which go by the name of a line and are not named a second time.
     """
 
     key: str
@@ -37,6 +39,13 @@ class Mark:
     tells: str = ""
     line: bool = True
     types: str = ""
+    index: bool = False
+
+    @property
+    def at_angstrom(self) -> float:
+        """Where to mark it: its wavelength, or the middle of its stretch where that lies aside (the head of a band)."""
+        inside = self.lo_angstrom <= self.wave_angstrom <= self.hi_angstrom
+        return self.wave_angstrom if inside else (self.lo_angstrom + self.hi_angstrom) / 2
 
     def serves(self, letter: str) -> bool:
         """True when the feature tells something in stars of a spectral letter (or says nothing about which)."""
@@ -48,8 +57,9 @@ def known_marks() -> tuple[Mark, ...]:
     """Every feature of the line stage's table, telluric bands left out."""
     from starfathom.classify.lines.features import FEATURES
 
-    return tuple(Mark(f.name, f.label, f.wavelength, f.window[0], f.window[1],
-                      f.tells + (f" ({f.types})" if f.types else ""), f.kind != "band", f.types) for f in FEATURES)
+    return tuple(Mark(f.name, re.split(r",? \(?Lick", f.label)[0], f.wavelength, f.window[0], f.window[1],
+                      f.tells + (f" ({f.types})" if f.types else ""), f.kind != "band", f.types, "Lick" in f.label)
+                 for f in FEATURES)
 
 
 @dataclass(frozen=True)
@@ -63,7 +73,7 @@ class Window:
 
     @property
     def title(self) -> str:
-        return ", ".join(m.name for m in self.marks)
+        return ", ".join(dict.fromkeys(m.name for m in self.marks))
 
 
 def windows_for(evidence: Iterable[Criterion], marks: Sequence[Mark], lo: float, hi: float,
@@ -100,7 +110,7 @@ def windows_for(evidence: Iterable[Criterion], marks: Sequence[Mark], lo: float,
             a, b = min(a, w.lo_angstrom), max(b, w.hi_angstrom)
         all_marks = {mark, *(m for w in touching for m in w.marks)}
         names = dict.fromkeys([*(c for w in touching for c in w.criteria), criterion_name])
-        windows.append(Window(a, b, tuple(sorted(all_marks, key=lambda m: m.wave_angstrom)), tuple(names)))
+        windows.append(Window(a, b, tuple(sorted(all_marks, key=lambda m: m.at_angstrom)), tuple(names)))
     return sorted(windows, key=lambda w: w.lo_angstrom)
 
 
@@ -154,9 +164,9 @@ def choose_marks(marks: Sequence[Mark], wave: FloatArray, template: FloatArray, 
     gap = (hi - lo) / 32.0
     depth = []
     for m in marks:
-        if "Lick" in m.name or not m.serves(letter) or not lo + 0.3 * gap < m.wave_angstrom < hi - 0.3 * gap:
+        if m.index or not m.serves(letter) or not lo + 0.3 * gap < m.wave_angstrom < hi - 0.3 * gap:
             continue
-        near = np.abs(wave - m.wave_angstrom) < 4.0
+        near = np.abs(wave - m.at_angstrom) < 4.0
         values = template[near]
         values = values[np.isfinite(values)]
         if len(values):

@@ -83,7 +83,8 @@ def _span(star: StarResult) -> str:
 def _type(star: StarResult) -> str:
     if star.text_of("status") == "typed":
         return escape(star.text_of("mk_type"))
-    kind = star.text_of("other_type") or star.text_of("object_kind")
+    kind = star.text_of("object_kind")
+    kind = star.text_of("other_type") or kind if kind in ("white dwarf", "unknown", "") else kind
     return f'<span class="soft">{escape(kind if kind not in ("", "unknown") else star.text_of("status"))}</span>'
 
 

@@ -45,8 +45,10 @@ def test_peaks_and_the_rival():
     p[plane.cell_named("G2.5 V")] = 0.35
     names = [plane.cell_name(c) for c in plane.peaks(p)]
     assert names == ["G2 V", "K0 III"]                         # the shoulder and the speck are no peaks
-    assert plane.cell_name(plane.rival(p)) == "K0 III"
-    assert plane.rival(posterior(G2_V=1.0)) is None
+    dwarf, giant = CLASSES.index("V"), CLASSES.index("III")
+    assert plane.cell_name(plane.rival(p, dwarf)) == "K0 III"
+    assert plane.cell_name(plane.rival(p, giant)) == "G2 V"
+    assert plane.rival(posterior(G2_V=1.0), dwarf) is None
 
 
 def test_a_level_ridge_has_one_peak():
@@ -73,13 +75,21 @@ def test_windows_follow_the_evidence_and_stay_within_reach():
     assert named["SrII_4077"] is named["FeI_4064"]             # neighbours share a window
     assert set(named["SrII_4077"].criteria) >= {"c"} and named["CaII_K"].criteria == ("a",)
     for w in windows:
-        assert all(w.lo_angstrom < m.wave_angstrom < w.hi_angstrom for m in w.marks)
+        assert all(w.lo_angstrom < m.at_angstrom < w.hi_angstrom for m in w.marks)
 
 
 def test_many_criteria_leave_room_to_see():
     evidence = [Criterion(m.key, 1, 0.1, "", 0.1, features=(m.key,)) for m in known_marks()]
     windows = windows_for(evidence, known_marks(), 3600.0, 9000.0)
     assert 1 < len(windows) <= 9
+
+
+def test_every_mark_lies_in_its_window():
+    evidence = [Criterion(m.key, 1, 0.1, "", 0.1, features=(m.key,)) for m in known_marks()]
+    for k in range(len(evidence)):
+        for w in windows_for(evidence[k:k + 1], known_marks(), 3600.0, 9000.0):
+            assert all(w.lo_angstrom < m.at_angstrom < w.hi_angstrom for m in w.marks), w
+            assert "Lick" not in w.title
 
 
 def test_misfit_is_in_sigmas():
@@ -327,7 +337,7 @@ def test_nothing_from_outside_reaches_the_page_unescaped(tmp_path):
     at(session, evil)
     here = session.compare(session.look.place)
     html = "".join([texts.star_tile(session), texts.place_tile(session, here, None), texts.queue_list(session),
-                    texts.machine_tile(session.star.assignment), texts.evidence_table(session, here),
+                    texts.machine_tile(session), texts.evidence_table(session, here),
                     texts.legend(session), texts.flag_chips(session)])
     assert "<script" not in html and "<b>x" not in html and "&lt;script&gt;" in html
 
