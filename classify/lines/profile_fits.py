@@ -61,6 +61,7 @@ class BulkFits:
     chi2, dof : of the window, shared by the components of a blend
     residual_rms : scatter of the normalised residuals in the window
     voigt : the Voigt profile won by the information criterion
+    undecided : a Gaussian is kept though a Voigt profile is ahead, by less than strong evidence
     detected : area at least 3 sigma from zero, fit converged
     held : not detected; area fitted with centre at rest and the instrument's width, for the limit's sake
     blue_loss, red_loss : mean depth of the fitted profiles in the side bands, put back into the continuum
@@ -88,6 +89,7 @@ class BulkFits:
     dof: FloatArray
     residual_rms: FloatArray
     voigt: BoolArray
+    undecided: BoolArray
     detected: BoolArray
     held: BoolArray
     blue_loss: FloatArray
@@ -104,6 +106,25 @@ class _Slot:
     pixels: IntArray
     share_red: FloatArray
     nodes: FloatArray
+
+
+#: A fit is preferred to the direct sum where the line is this significant, or this where it is much the sharper.
+_FIT_SIGMA, _SHARP_SIGMA = 25.0, 5.0
+
+
+def prefer_fit(lines: BulkLines, fits: BulkFits) -> BoolArray:
+    """Whether to quote each component's fitted equivalent width rather than its feature's direct sum, (n, c).
+
+    The fit, where the line is strong, its profile is decided and explains the window: residuals like the noise, or
+    small beside the depth. A weak line's fit picks its own width and place out of the noise and cannot tell a wing; its
+    direct sum needs to do neither. A narrow line in a window made for broad ones is the exception: its sum is mostly
+    noise and neighbours.
+    """
+    with np.errstate(invalid="ignore", divide="ignore"):
+        significance = np.abs(fits.ew) / fits.ew_err
+        sharper = fits.ew_err < 0.5 * lines.ew_err[:, fits.feature]
+        explained = (fits.chi2 <= 2.0 * fits.dof) | (fits.residual_rms <= 0.1 * np.abs(fits.depth)) | sharper
+    return fits.detected & ~fits.undecided & explained & (significance >= np.where(sharper, _SHARP_SIGMA, _FIT_SIGMA))
 
 
 def fit_many(wave_angstrom: FloatArray, lines: BulkLines, *, profiles: Sequence[str] = ("gaussian", "voigt"),
@@ -130,7 +151,7 @@ def fit_many(wave_angstrom: FloatArray, lines: BulkLines, *, profiles: Sequence[
     out = {name: np.full((n, c), np.nan) for name in _FLOATS}
     out["width_at"] = np.full((n, c, len(FIXED_DEPTHS)), np.nan)
     out["width_at_err"] = np.full((n, c, len(FIXED_DEPTHS)), np.nan)
-    flags = {name: np.zeros((n, c), bool) for name in ("unresolved", "voigt", "detected", "held")}
+    flags = {name: np.zeros((n, c), bool) for name in _FLAGS}
     rho = None if correlation is None else np.atleast_2d(np.asarray(correlation, float))
     for batch in _batches(wave, lines, first):
         _fit_batch(wave, lines, batch, profiles, rho, fwhm_err_angstrom, fixed_depths, out, flags)
@@ -138,6 +159,7 @@ def fit_many(wave_angstrom: FloatArray, lines: BulkLines, *, profiles: Sequence[
                     **out, **flags)
 
 
+_FLAGS = ("unresolved", "voigt", "undecided", "detected", "held")
 _FLOATS = ("ew", "ew_err", "center", "center_err", "fwhm", "fwhm_err", "intrinsic", "intrinsic_err", "depth",
            "depth_err", "sigma", "gamma", "chi2", "dof", "residual_rms", "blue_loss", "red_loss")
 
@@ -359,21 +381,27 @@ class _Best:
         self.rival_chi2 = np.full((jobs, 2), np.inf)
         self.rival_free = np.zeros((jobs, 2))
 
-    def model_variance(self) -> FloatArray:
-        """(j, k) variance of an area from not knowing which profile is right.
-
-        Where the Voigt profile is ahead, but not by enough to be taken: its weight, exp(-BIC / 2) shared between the
-        two, times the difference squared.
-        """
-        with np.errstate(invalid="ignore", over="ignore"):
+    def ahead(self) -> FloatArray:
+        """(j,) by how much the winning profile leads the other in the criterion; negative where the Voigt profile is
+        ahead, but not by enough to be taken."""
+        with np.errstate(invalid="ignore"):
             scale = np.maximum(self.chi2 / self.dof, 1.0)
             bic = self.rival_chi2 / scale[:, None] + self.rival_free * np.log(np.maximum(self.pixels, 1.0))[:, None]
             winner = self.voigt.astype(int)
             rows = np.arange(winner.size)
-            ahead = bic[rows, 1 - winner] - bic[rows, winner]
+            return bic[rows, 1 - winner] - bic[rows, winner]
+
+    def model_variance(self) -> FloatArray:
+        """(j, k) variance of an area from not knowing which profile is right.
+
+        Where the Voigt profile is ahead by positive evidence, but not by enough to be taken: its weight,
+        exp(-BIC / 2) shared between the two, times the difference squared.
+        """
+        ahead = self.ahead()
+        with np.errstate(invalid="ignore", over="ignore"):
             weight = 1.0 / (1.0 + np.exp(np.clip(ahead, -60.0, 60.0) / 2.0))
             weight = np.where(ahead < -_POSITIVE_EVIDENCE, weight, 0.0)
-            apart = self.rival_area[rows, 1 - winner] - self.full[:, :, 0]
+            apart = self.rival_area[np.arange(ahead.size), 1 - self.voigt.astype(int)] - self.full[:, :, 0]
             return np.nan_to_num(weight[:, None] * apart**2)
 
     def significance(self) -> FloatArray:
@@ -468,6 +496,7 @@ class _Best:
                 mask = detected if name in only_seen else placed & detected if name in only_placed else usable
                 out[name][at] = np.where(mask, value, np.nan)
             flags["detected"][at], flags["voigt"][at] = detected, self.voigt & detected
+            flags["undecided"][at] = detected & ~self.voigt & (self.ahead() < 0)
             flags["unresolved"][at], flags["held"][at] = narrow & detected, lost & usable
             if fixed_depths and detected.any():
                 w = np.flatnonzero(detected)

@@ -13,7 +13,7 @@ from starfathom.classify.errors import RequestError, SpectrumError
 from starfathom.classify.lines.direct import LIGHT_KMS, BulkLines, measure_many
 from starfathom.classify.lines.features import FEATURES, FeatureTable
 from starfathom.classify.lines.flags import flags_of
-from starfathom.classify.lines.profile_fits import DETECTION_SIGMA, BulkFits, fit_many
+from starfathom.classify.lines.profile_fits import DETECTION_SIGMA, BulkFits, fit_many, prefer_fit
 from starfathom.classify.prepared import Prepared
 from starfathom.classify.spectrum import PlainSpectrum
 
@@ -23,9 +23,6 @@ if TYPE_CHECKING:
 
 FloatArray = NDArray[np.float64]
 NAN = float("nan")
-#: A fit is preferred to the direct sum only where the line is this significant.
-_FIT_SIGMA = 10.0
-_SHARP_SIGMA = 5.0
 
 #: Columns in order: (name, unit or "", decimals or None for text and flags, what it means).
 COLUMNS: tuple[tuple[str, str, int | None, str], ...] = (
@@ -242,6 +239,7 @@ def _by_reference(wave: FloatArray, lines: BulkLines, fits: BulkFits) -> tuple[B
 
 
 def _rows(wave: FloatArray, lines: BulkLines, fits: BulkFits, velocity_kms: float) -> Iterator[dict[str, Any]]:
+    fit_is_better = prefer_fit(lines, fits)
     for k, feature in enumerate(lines.features):
         columns = [int(c) for c in np.flatnonzero(fits.feature == k)]
         common = {"tells": feature.tells, "types": feature.types, "citation": feature.citation,
@@ -262,7 +260,9 @@ def _rows(wave: FloatArray, lines: BulkLines, fits: BulkFits, velocity_kms: floa
         if feature.kind == "line":
             top |= _fitted(fits, columns[0], feature.wavelength, velocity_kms)
             top["detected_ok"] = seen or bool(fits.detected[0, columns[0]] and fits.ew[0, columns[0]] > 0)
-            _prefer(top, fits, columns[0])
+            if fit_is_better[0, columns[0]]:
+                top |= {"ew_angstrom": top["ew_fit_angstrom"], "ew_err_angstrom": top["ew_fit_err_angstrom"],
+                        "ew_from": "fit"}
             if not top["detected_ok"]:
                 top["depth"], top["depth_err"] = float(lines.depth[0, k]), float(lines.depth_err[0, k])
         if feature.wings:
@@ -315,20 +315,3 @@ def _fitted(fits: BulkFits, c: int, rest_angstrom: float, velocity_kms: float) -
         out[f"width_{percent}_angstrom"] = float(fits.width_at[0, c, d])
         out[f"width_{percent}_err_angstrom"] = float(fits.width_at_err[0, c, d])
     return out
-
-
-def _prefer(row: dict[str, Any], fits: BulkFits, c: int) -> None:
-    """Take the fit where the line is strong and its profile explains the window.
-
-    Explained means residuals like the noise, or small beside the depth. A weak line's fit picks its own width and
-    place out of the noise and is biased high; its direct sum is not.
-    """
-    significance = abs(fits.ew[0, c]) / fits.ew_err[0, c]
-    # a narrow line in a window made for broad ones: the sum is mostly noise and neighbours
-    sharper = fits.ew_err[0, c] < 0.5 * row["ew_direct_err_angstrom"]
-    if not fits.detected[0, c] or not significance >= (_SHARP_SIGMA if sharper else _FIT_SIGMA):
-        return
-    like_noise = fits.chi2[0, c] <= 2.0 * fits.dof[0, c]
-    small = fits.residual_rms[0, c] <= 0.1 * abs(fits.depth[0, c])
-    if like_noise or small or sharper:
-        row |= {"ew_angstrom": row["ew_fit_angstrom"], "ew_err_angstrom": row["ew_fit_err_angstrom"], "ew_from": "fit"}
