@@ -49,6 +49,8 @@ def read_plain(
     RequestError
         when ``medium``, ``read_as`` or ``columns`` make no sense.
     """
+    import numpy as np
+
     from starfathom.classify.reading import files
     from starfathom.classify.reading.request import request_of
 
@@ -61,7 +63,8 @@ def read_plain(
         raise RequestError(f"a spectrum is named by its path, not by {type(path).__name__}.") from None
     shown = files.shown(name)
     try:
-        return _read(name, shown, asked, request)
+        with np.errstate(all="ignore"):  # odd numbers in a file are dealt with, not warned of
+            return _read(name, shown, asked, request)
     except StarfathomError:
         raise
     except MemoryError:

@@ -22,6 +22,7 @@ WAVE_MIN_ANGSTROM, WAVE_MAX_ANGSTROM = 2000.0, 25000.0
 MIN_PIXELS = 100
 #: Most pixels a one-dimensional spectrum may have.
 MAX_PIXELS = 4_000_000
+_NO_WAVELENGTHS = "the wavelengths are all missing, infinite or not numbers; check the dispersion"
 #: d(flux)/flux per magnitude, 0.4 ln 10.
 FLUX_PER_MAG = 0.4 * np.log(10.0)
 
@@ -90,13 +91,15 @@ def finish(raw: RawSpectrum, path: str) -> PlainSpectrum:
         wave, flux, valid = wave[keep], flux[keep], valid[keep]
         sigma = None if sigma is None else sigma[keep]
     wave, flux, sigma, valid = _ascending(wave, flux, sigma, valid, notes)
+    flux, sigma = _scaled(flux, sigma, valid)
+    valid &= np.isfinite(flux)
+    if sigma is not None:
+        valid &= np.isfinite(sigma) & (sigma > 0)
     _check_pixels(flux, valid, path)
 
     flux = np.where(valid, flux, 0.0)
     if sigma is not None:
-        sigma = np.where(valid, sigma, np.nan)
-        sigma = np.where(np.isfinite(sigma), sigma, float(np.max(sigma[valid])))
-    flux, sigma = _scaled(flux, sigma, valid)
+        sigma = np.where(valid, sigma, float(np.max(sigma[valid])))
     meta = dict(raw.meta)
     if "flux_calibrated" not in meta and kind in ("f_lambda", "f_nu", "nu_f_nu", "mag_ab", "mag_st", "photons"):
         meta["flux_calibrated"] = True
@@ -108,7 +111,7 @@ def finish(raw: RawSpectrum, path: str) -> PlainSpectrum:
 def _to_angstrom(wave: FloatArray, raw: RawSpectrum, path: str, notes: list[str]) -> tuple[FloatArray, bool]:
     """Wavelengths in angstrom, and whether they came from frequencies (so are vacuum by nature)."""
     if not np.isfinite(wave).any():
-        raise SpectrumError(f"{path}: the wavelengths are all missing or not numbers; check the dispersion.")
+        raise SpectrumError(f"{path}: {_NO_WAVELENGTHS}.")
     with np.errstate(over="ignore", divide="ignore", invalid="ignore"):
         log, inner = logarithm_of(raw.wave_unit)
         if log:
@@ -158,6 +161,8 @@ def guess_spectral_unit(wave: FloatArray, path: str) -> tuple[SpectralUnit, str]
     Raises SpectrumError when the values fit no unit that would put them in the optical.
     """
     finite = wave[np.isfinite(wave)]
+    if finite.size == 0:
+        raise SpectrumError(f"{path}: {_NO_WAVELENGTHS}.")
     lo, mid, hi = float(finite.min()), float(np.median(finite)), float(finite.max())
 
     def optical(scale: float) -> bool:
@@ -189,6 +194,8 @@ def _check_reach(wave: FloatArray, reach: BoolArray, path: str, unit: str) -> No
     if reach.any():
         return
     finite = wave[np.isfinite(wave)]
+    if finite.size == 0:
+        raise SpectrumError(f"{path}: {_NO_WAVELENGTHS}.")
     said = f" (unit read as {unit})" if unit else ""
     raise SpectrumError(
         f"{path}: wavelengths from {finite.min():.5g} to {finite.max():.5g} A{said} lie outside 2000 A to 2.5 um; "
@@ -366,7 +373,8 @@ def _ascending(
 
 def _scaled(flux: FloatArray, sigma: FloatArray | None, valid: BoolArray) -> tuple[FloatArray, FloatArray | None]:
     """Flux as it is, or divided by its median size where squares of it would leave the range of a float."""
-    size = float(np.median(np.abs(flux[valid])))
-    if size == 0 or 1e-60 < size < 1e60:
+    size = float(np.median(np.abs(flux[valid]))) if valid.any() else 1.0
+    if not np.isfinite(size) or size == 0 or 1e-60 < size < 1e60:
         return flux, sigma
-    return flux / size, None if sigma is None else sigma / size
+    with np.errstate(all="ignore"):
+        return flux / size, None if sigma is None else sigma / size

@@ -268,6 +268,8 @@ def image(hdu: Hdu, rows: slice | None = None) -> NDArray[np.float64]:
     if header.get("ZIMAGE") is True or (hdu.number == 0 and header.get("GROUPS") is True and hdu.shape[:1] == (0,)):
         raise FitsBeyond(f"{hdu} is compressed or in groups")
     hdu.need()
+    if header.whole("BITPIX") not in _IMAGE_TYPES:
+        raise FitsError(f"BITPIX = {header.word('BITPIX')} in {hdu} is not allowed")
     kind = np.dtype(_IMAGE_TYPES[header.whole("BITPIX")])
     count = int(np.prod(hdu.shape, dtype=object)) if hdu.shape else 0
     values = np.frombuffer(hdu.buffer, kind, count, hdu.offset)

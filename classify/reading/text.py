@@ -163,7 +163,7 @@ def _quick(data: bytes) -> Table | None:
             return None
         body = body.replace(separator, b" ")
         columns = first.count(separator) + 1
-        if len(strange) % (columns - 1):
+        if columns < 2 or len(strange) % (columns - 1):
             return None
     else:
         columns = len(first.split())

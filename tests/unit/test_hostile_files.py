@@ -217,6 +217,17 @@ BROKEN = {
         cards(card("SIMPLE", "T"), card("BITPIX", -32), card("NAXIS", 1), card("NAXIS1", -5)),
         "not allowed",
     ),
+    "logarithms beyond any number": ("loglam,flux\n" + lines([WAVE, FLUX], ","), "infinite"),
+    "wavelengths that are not numbers": (
+        "wave flux\n" + "".join(f"5000 {f:.4f}\n" for f in FLUX[:3]),
+        "fewer than 100",
+    ),
+    "FITS log axis beyond any number": (linear(FLUX, CRVAL1=4000.0, CTYPE1="LOGLAM"), "infinite"),
+    "FITS without BITPIX": (
+        cards(card("SIMPLE", "T"), card("NAXIS", 1), card("NAXIS1", 200), card("CRVAL1", 4000.0), data=b"\0" * 2000),
+        "not allowed",
+    ),
+    "one comma in a row of blanks": ("4000 1\n4001 1,\n" * 200, "."),
     "FITS odd BITPIX": (
         cards(card("SIMPLE", "T"), card("BITPIX", 7), card("NAXIS", 1), card("NAXIS1", 5)),
         "not allowed",

@@ -623,6 +623,26 @@ def test_cell(text, value):
         assert cell(text) == pytest.approx(value, rel=1e-12)
 
 
+@pytest.mark.parametrize("size", [1e-290, 1e-80, 1e80, 1e200])
+def test_flux_of_any_size(tmp_path, size):
+    """Squares of the flux must stay within the range of a float, so extreme fluxes are scaled."""
+    spec = read(tmp_path, "wave flux err\n" + lines([WAVE, FLUX * size, SIGMA * size], fmt="%.9e"))
+    same_star(spec, sigma=SIGMA)
+    assert 1e-60 < np.median(spec.flux) < 1e60
+
+
+def test_flux_of_usual_size_is_kept(tmp_path):
+    spec = read(tmp_path, lines([WAVE, FLUX * 1e-17], fmt="%.9e"))
+    np.testing.assert_allclose(spec.flux, FLUX * 1e-17, rtol=1e-8)
+
+
+def test_odd_numbers_raise_no_warnings(tmp_path, recwarn):
+    f = FLUX.copy()
+    f[3], f[5], f[7] = 1e308, -1e308, 1e-320
+    read(tmp_path, "wave flux err\n" + lines([WAVE, f, SIGMA], fmt="%.9e"))
+    assert not recwarn.list
+
+
 def test_path_and_notes(tmp_path):
     spec = read(tmp_path, TWO, "my star.txt")
     assert spec.path == str(tmp_path / "my star.txt")
