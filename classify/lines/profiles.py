@@ -82,13 +82,19 @@ def intrinsic_fwhm(sigma: FloatArray, gamma: FloatArray, instrument_fwhm: FloatA
 
 def width_at_depth(area: FloatArray, sigma: FloatArray, gamma: FloatArray, depth: float) -> FloatArray:
     """Full width of area x profile where it is ``depth`` deep; 0 where it is not that deep. Bisection, any shape."""
-    area, sigma, gamma = np.broadcast_arrays(np.asarray(area, float), sigma, gamma)
-    zero = np.zeros(area.shape)
-    with np.errstate(invalid="ignore", over="ignore"):
-        top = area * voigt(zero, zero, sigma, gamma)[0]
-        lo, hi = zero.copy(), 60.0 * np.maximum(voigt_fwhm(sigma, gamma), 1e-6)
-        for _ in range(44):
+    from scipy.special import wofz
+
+    area, sigma, gamma = (np.asarray(a, float) for a in np.broadcast_arrays(area, sigma, gamma))
+    with np.errstate(invalid="ignore", divide="ignore"):
+        root = 1.0 / (sigma * _ROOT_2)
+        y = 1j * gamma * root
+        wanted = depth * _ROOT_PI / (area * root)          # of Re w at the crossing
+        top = wofz(y).real
+        deep = (area > 0) & (top > wanted)
+        lo, hi = np.zeros(area.shape), 60.0 * np.maximum(voigt_fwhm(sigma, gamma), 1e-6) * root
+        for _ in range(36):
             half = 0.5 * (lo + hi)
-            deeper = area * voigt(half, zero, sigma, gamma)[0] > depth
+            deeper = wofz(half + y).real > wanted
             lo, hi = np.where(deeper, half, lo), np.where(deeper, hi, half)
-    return np.where(np.isnan(top), np.nan, np.where(top > depth, lo + hi, 0.0))
+        width = (lo + hi) / root
+    return np.where(np.isnan(area + sigma + gamma), np.nan, np.where(deep, width, 0.0))
