@@ -596,40 +596,49 @@ def plan(
 
 
 @templates_app.command()
-def coverage() -> None:
+def coverage(as_json: AsJson = False) -> None:
     """Count the library's stars by type and class, and say where a result would be weak."""
-    from starfathom.templates import command
+    from starfathom import templates_command
 
-    command.coverage()
+    templates_command.coverage(as_json)
 
 
 @templates_app.command()
-def show(mk_type: Annotated[str, typer.Argument(metavar="TYPE", help='A type, such as "G2 V".')]) -> None:
-    """List the library's stars nearest to a type."""
-    from starfathom.templates import command
+def show(
+    what: Annotated[str, typer.Argument(metavar="NAME|TYPE", help='A star, its HIP number, or a type such as "G2 V".')],
+    figure: Annotated[str | None, typer.Option(metavar="PNG", help="Draw the spectra into this picture.")] = None,
+) -> None:
+    """List a library star, or the stars nearest to a type, with their sources."""
+    from starfathom import templates_command
 
-    command.show(mk_type)
+    templates_command.show(what, figure)
 
 
 @templates_app.command()
 def add(
     file: Annotated[str, typer.Argument(metavar="FILE", help="Spectrum of a standard.")],
-    mk_type: Annotated[str, typer.Option("--type", metavar="TYPE", help="Its MK type.")],
+    mk_type: Annotated[str, typer.Option("--type", metavar="TYPE", help='Its MK type, such as "K2 III".')],
     name: Annotated[str | None, typer.Option("--name", help="Its name; the file's if not given.")] = None,
     fwhm: Fwhm = None,
+    air: Air = False,
+    vacuum: Vacuum = False,
+    learn: Annotated[bool, typer.Option("--learn", help="Train the models with it too (minutes, once).")] = False,
 ) -> None:
     """Add a standard taken with your own instrument."""
-    from starfathom.templates import command
+    from starfathom import templates_command
 
-    command.add(file, mk_type, name=name, fwhm_angstrom=fwhm)
+    _positive(fwhm, "--fwhm", "angstrom")
+    templates_command.add(
+        file, mk_type, name=name, fwhm_angstrom=fwhm, medium=_medium(air, vacuum), learn=learn
+    )
 
 
 @templates_app.command()
 def check() -> None:
-    """Check that the library is whole, and list stars whose label disagrees with their spectrum."""
-    from starfathom.templates import command
+    """Verify the shipped library and models, and list labels that a star's parameters contradict."""
+    from starfathom import templates_command
 
-    command.check()
+    templates_command.check()
 
 
 # The door ------------------------------------------------------------------------------------------------------------

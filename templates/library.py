@@ -99,9 +99,23 @@ def read_catalogue(path: Path = DATA / "catalogue.ecsv") -> dict[str, NDArray[An
     return out
 
 
-@lru_cache(maxsize=1)
 def load_library() -> Library:
-    """The shipped library (about 0.2 s)."""
+    """The shipped library (about 0.2 s), with those of the user's standards that the models are to learn from."""
+    from starfathom.templates.user import fingerprint
+
+    return _open(fingerprint())
+
+
+@lru_cache(maxsize=2)
+def _open(learned: str) -> Library:
+    from starfathom.templates.user import joined, user_standards
+
+    shipped = _shipped()
+    return joined(shipped, user_standards(learned_only=True)) if learned else shipped
+
+
+@lru_cache(maxsize=1)
+def _shipped() -> Library:
     with np.load(DATA / LIBRARY_FILE) as z:
         flux, valid = decode_flux(z["codes"])
         first, _kms, size = z["grid"]
