@@ -15,7 +15,6 @@ from starfathom.classify.assignment import Assignment, Criterion
 from starfathom.classify.errors import RequestError, SpectrumError
 from starfathom.classify.prepared import Prepared
 from starfathom.desk.palette import LIGHT
-from starfathom.desk.plane import cell_name, cell_near
 from starfathom.desk.scatter import template_scatter
 from starfathom.desk.windows import (
     Mark,
@@ -301,7 +300,7 @@ def draw_pointers(figure: Figure, place: Any, e: Evidence) -> None:
         words = _points(c)
         ax.text(lo, y + 0.12, _cut(c.name, 26), fontsize=6.8, va="bottom", weight="bold")
         ax.text(hi, y + 0.12, value + (f"  →  {words}" if words else ""), fontsize=6.5, va="bottom", ha="right",
-                color=LIGHT.soft)
+                color=LIGHT.soft, bbox={"facecolor": "white", "edgecolor": "none", "pad": 0.5})
         ax.plot([lo, hi], [y, y], color=LIGHT.faint, lw=0.6, zorder=0)
         if math.isfinite(c.t_code):
             error = c.t_code_err if math.isfinite(c.t_code_err) else 0.0
@@ -309,7 +308,7 @@ def draw_pointers(figure: Figure, place: Any, e: Evidence) -> None:
                         color=LIGHT.ink, lw=0.9)
     if math.isfinite(centre):
         ax.axvline(centre, color=LIGHT.here, lw=1.0)
-        ax.text(centre, 1.0, cell_name(cell_near(centre, e.lum_code)), color=LIGHT.here, ha="center", va="bottom",
+        ax.text(centre, 1.0, e.template_name or said.mk_type, color=LIGHT.here, ha="center", va="bottom",
                 fontsize=7.5, weight="bold")
     ax.set_xlim(lo, hi)
     ax.set_ylim(-max(len(criteria), 6) + 0.5, 1.0)

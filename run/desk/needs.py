@@ -42,7 +42,9 @@ def need(assignment: Assignment, magnitudes: MagnitudeGrid | None = None) -> Nee
     p = assignment.posterior / assignment.posterior.sum()
     left = 1.0 - float(p.max())
     percent = distance_scatter(p, magnitudes)
-    classes = [c for c, share in sorted(assignment.class_probabilities.items(), key=lambda x: -x[1]) if share >= 0.12]
+    # a small share of a class far off can matter more for the distance than a large one of a neighbour
+    least = 0.12 if percent < 25 else 0.03
+    classes = [c for c, share in sorted(assignment.class_probabilities.items(), key=lambda x: -x[1]) if share >= least]
     if len(classes) > 1:
         why = " or ".join(classes[:3])
     elif assignment.flags:

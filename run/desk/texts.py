@@ -63,7 +63,7 @@ def place_tile(s: Session, here: Comparison | None, pinned: Comparison | None) -
     chance = "" if probability is None else f"probability {per_cent(probability)}"
     chance = " · ".join(x for x in (chance, _distance_words(s)) if x)
     fit = "" if here is None else f"misfit {here.overall:.2f} σ"
-    top = f'you stand at <b>{escape(plane.cell_name(place.cell))}</b> <small>{chance}</small>'
+    top = f'here: <b>{escape(plane.cell_name(place.cell))}</b> <small>{chance}</small>'
     standard = f"real star {escape(place.standard)}" if place.standard else ""
     against = ""
     if pinned is not None and here is not None:
@@ -79,7 +79,7 @@ def _distance_words(s: Session) -> str:
     if found is None or not math.isfinite(found[0]):
         return ""
     middle, lo, hi = (figures(v) for v in found)
-    return f'<span title="68 %: {lo} to {hi} pc">if so, {middle} pc</span>'
+    return f'<span title="68 %: {lo} to {hi} pc">{middle} pc</span>'
 
 
 def _run_distance(s: Session) -> str:
