@@ -27,6 +27,7 @@ from starfathom.classify.prepared import Prepared
 from starfathom.classify.resample import Native
 from starfathom.classify.spectrum import PlainSpectrum
 from starfathom.classify.surface import CORE, PIXELS, WIDE, Match, match
+from starfathom.templates import user
 from starfathom.templates.library import Library, load_library
 from starfathom.templates.subtypes import CLASSES, STEPS, SUBTYPES, step_of, t_code_from_step
 
@@ -137,10 +138,13 @@ class Classifier:
             raise RequestError(f"stars are left out by HIP number: {error}") from None
         known = set(self.library_all.catalogue["library"].tolist())
         hips = set(self.library_all.catalogue["hip"].tolist())
-        self._default = vetted and not (known & set(self.without_libraries)) and not (hips & set(self.without_stars))
+        self._own = user.fingerprint() if user.LIBRARY_NAME in known - set(self.without_libraries) else ""
+        left_out = (known - {user.LIBRARY_NAME}) & set(self.without_libraries)
+        self._default = vetted and not self._own and not left_out and not (hips & set(self.without_stars))
         self._models: dict[float, Model] = {}
         self._nodes: Nodes | None = None
         self._aligned: Aligned | None = None
+        self._own_cache: dict[tuple[float, str], tuple[NDArray[Any], NDArray[Any], FloatArray] | None] = {}
 
     @classmethod
     def load(cls, without_libraries: Sequence[str] = (), without_stars: Sequence[int] = ()) -> Classifier:
@@ -156,11 +160,18 @@ class Classifier:
         """The library this classifier has learned from."""
         return self.library_all.without(self.without_libraries, self.without_stars)
 
+    @property
+    def named_stars(self) -> Library:
+        """The library and all the user's own standards, learned from or not: what has a name."""
+        own = None if user.LIBRARY_NAME in self.without_libraries else user.user_standards()
+        learned = self.library
+        return user.joined(learned.select(learned.catalogue["library"] != user.LIBRARY_NAME), own) if own else learned
+
     def _folder(self) -> Path:
         if self._default:
             return MODEL_DIR
-        key = hashlib.sha256(repr((self.without_libraries, self.without_stars, self.vetted)).encode()).hexdigest()[:12]
-        folder = _cache_dir() / f"{_recipe_fingerprint()}-{key}"
+        told = (self.without_libraries, self.without_stars, self.vetted, *([self._own] if self._own else []))
+        folder = _cache_dir() / f"{_recipe_fingerprint()}-{hashlib.sha256(repr(told).encode()).hexdigest()[:12]}"
         folder.mkdir(exist_ok=True)
         return folder
 
@@ -462,13 +473,36 @@ class Classifier:
         crowd = float(np.exp(-d2 / (2 * 0.25 * r.length2)).sum())
         return crowd > 1.0 and float(p[:, :5].sum()) < 0.5 and step > 11.0
 
-    @staticmethod
-    def _nearest(model: Model, found: Match) -> list[tuple[str, ...]]:
-        z = model.components.astype(float)
+    def _nearest(self, model: Model, found: Match) -> list[tuple[str, ...]]:
+        names, labels, z = model.names, model.labels, model.components.astype(float)
+        if (own := self._own_components(model)) is not None:
+            names, labels = np.concatenate([names, own[0]]), np.concatenate([labels, own[1]])
+            z = np.concatenate([z, own[2]])
         scale = np.sqrt(np.mean([np.diag(c) for c in model.surface.scatter], axis=0))
         d2 = (((found.components[:, None, :] - z[None]) / scale) ** 2).sum(axis=2)
         order = np.argsort(d2, axis=1)[:, :3]
-        return [tuple(f"{model.names[k]} ({model.labels[k].replace(' ', '')})" for k in row) for row in order]
+        return [tuple(f"{names[k]} ({labels[k].replace(' ', '')})" for k in row) for row in order]
+
+    def _own_components(self, model: Model) -> tuple[NDArray[Any], NDArray[Any], FloatArray] | None:
+        """Names, labels and components of the user's standards that the model has not learned from."""
+        key = (model.fwhm_angstrom, user.fingerprint(learned_only=False))
+        if key[1] == "" or user.LIBRARY_NAME in self.without_libraries:
+            return None
+        if key not in self._own_cache:
+            own = user.user_standards()
+            new = own.select(~np.isin(own.catalogue["star"], model.names)) if own else None
+            if new is None or not len(new):
+                self._own_cache[key] = None
+            else:
+                kernel = np.sqrt(np.maximum(model.fwhm_angstrom ** 2 - new.catalogue["fwhm_angstrom"] ** 2, 0.0))
+                parts = [blur(new.flux[k:k + 1].astype(float), new.valid[k:k + 1], float(kernel[k]))
+                         for k in range(len(new))]
+                flux, ok = (np.concatenate(p) for p in zip(*parts))
+                flat, _ = rectify(flux, ok)
+                noise = np.full((len(new), len(PIXELS)), 0.01)
+                z = match(model.surface, flat[:, PIXELS], ok[:, PIXELS], noise).components
+                self._own_cache[key] = new.catalogue["star"], new.catalogue["label"], z
+        return self._own_cache[key]
 
     # ---------------------------------------------------------------- for the eye
 
@@ -488,14 +522,14 @@ class Classifier:
 
     def standards(self, t_code: float, lum_code: float, n: int = 5) -> list[str]:
         """Names of the library stars whose labels are nearest to a type."""
-        c = self.library.catalogue
+        c = self.named_stars.catalogue
         far = np.hypot((step_of(c["t_code"]) - float(step_of(t_code))) / 1.0, (c["lum_code"] - lum_code) / 0.5)
         far = np.where((c["kind"] == "normal") & np.isfinite(far), far + 0.3 * c["doubtful"], np.inf)
         return [str(c["star"][k]) for k in np.argsort(far, kind="stable")[:n] if np.isfinite(far[k])]
 
     def library_spectrum(self, name: str, prepared: Prepared) -> FloatArray:
         """A named library star (m,), rectified and blurred like ``prepared``; RequestError for a strange name."""
-        library = self.library
+        library = self.named_stars
         where = np.flatnonzero(library.catalogue["star"] == name)
         if not where.size:
             raise RequestError(f"the library has no star named {name!r}: see 'starfathom templates coverage'")
