@@ -33,7 +33,7 @@ def read_plain(
     path : the file; ``name.fits[2]`` or ``name.fits[SCI]`` picks an HDU
     medium : "air" or "vacuum" to overrule the header, None to believe it
     read_as : "text", "fits", "votable" or "specutils" (``specutils:NAME`` for one of its loaders); None to tell
-        by content
+        by content; columns may follow, as in ``text,wave=2,flux=3``
     columns : which column is what, as ``{"wave": "LAMBDA", "flux": 3}`` or ``"wave=LAMBDA,flux=3"``; also ``hdu``,
         ``row`` (1-based), ``unit`` (of wavelength, such as nm) and ``flux_unit``
 

@@ -118,7 +118,7 @@ def _from_image(hdu: Hdu, units: list[Hdu], request: Request) -> RawSpectrum | t
     if len(long) > 2 or (len(long) == 2 and min(sizes) > MAX_COMPANIONS and request.row is None):
         text = " x ".join(str(s) for s in shape[:4]) + (" x ..." if len(shape) > 4 else "")
         several = len(long) == 2 and ("COEFF0" in hdu.header or max(sizes) > 4 * min(sizes))
-        hint = " (a row of it can be picked by its number)" if several else ""
+        hint = " (a row of it can be picked: read as row=1, row=2 ...)" if several else ""
         return 4, f"{hdu} is a {text} image, not a one-dimensional spectrum{hint}"
     if max(sizes) > fitsio.MAX_CELLS:
         hdu.need()
@@ -134,7 +134,7 @@ def _from_image(hdu: Hdu, units: list[Hdu], request: Request) -> RawSpectrum | t
         rows = values
     n = rows.shape[1]
     if request.row is None and "APNUM2" in hdu.header and len(rows) > 1 and axis == 1 and shape[1:2] == (len(rows),):
-        return 5, f"{hdu} holds {len(rows)} apertures; pick one by its row number"
+        return 5, f"{hdu} holds {len(rows)} apertures; pick one (read as row=1, row=2 ...)"
     pick = request.row or 0
     if request.row is not None:
         if not 0 <= pick < len(rows):
@@ -426,4 +426,4 @@ def _cells(hdu: Hdu, column: fitsio.Column, request: Request) -> Any:
         if request.row >= values.shape[0]:
             raise FitsError(f"{hdu} has {values.shape[0]} rows, so there is no row {request.row + 1}")
         return values[request.row]
-    raise FitsError(f"{hdu} holds {values.shape[0]} spectra, one a row; say which row")
+    raise FitsError(f"{hdu} holds {values.shape[0]} spectra, one a row; pick one (read as row=1, row=2 ...)")

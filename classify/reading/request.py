@@ -37,8 +37,17 @@ class Request:
     flux_unit: str = ""
 
 
+def _pair(part: str) -> tuple[str, str]:
+    role, sep, name = part.partition("=")
+    if not sep or not name.strip():
+        raise RequestError(f"column {part!r} is not of the form role=name, such as wave=LAMBDA.")
+    return role.strip().lower(), name.strip()
+
+
 def request_of(read_as: str | None, columns: Mapping[str, str | int] | str | None) -> Request:
     """Check and gather what was asked.
+
+    ``read_as`` is a kind, and may carry columns too: ``text,wave=2,flux=3`` or ``hdu=2,row=5``.
 
     ``columns`` is a mapping, or text such as ``wave=LAMBDA,flux=3,sigma=ERR``; besides the roles it may name ``hdu``,
     ``row`` (1-based), ``unit`` (of wavelength) and ``flux_unit``.
@@ -48,19 +57,21 @@ def request_of(read_as: str | None, columns: Mapping[str, str | int] | str | Non
     RequestError
         on an unknown kind, role or a row that is not a whole number.
     """
-    kind, _, loader = (read_as or "").strip().partition(":")
+    pairs: dict[str, str] = {}
+    first, _, rest = (read_as or "").strip().partition(",")
+    if "=" in first:
+        first, rest = "", (read_as or "")
+    for part in filter(None, (p.strip() for p in rest.split(","))):
+        pairs.update([_pair(part)])
+    kind, _, loader = first.strip().partition(":")
     kind = {"": "", "ascii": "text", "csv": "text", "ecsv": "text", "txt": "text"}.get(kind.lower(), kind.lower())
     if kind and kind not in KINDS:
         raise RequestError(f"cannot read as {read_as!r}; known kinds are {', '.join(KINDS)} and specutils:NAME.")
-    pairs: dict[str, str] = {}
     if isinstance(columns, str):
         for part in filter(None, (p.strip() for p in columns.split(","))):
-            role, sep, name = part.partition("=")
-            if not sep or not name.strip():
-                raise RequestError(f"column {part!r} is not of the form role=name, such as wave=LAMBDA.")
-            pairs[role.strip().lower()] = name.strip()
+            pairs.update([_pair(part)])
     elif columns:
-        pairs = {str(k).strip().lower(): str(v).strip() for k, v in columns.items()}
+        pairs.update({str(k).strip().lower(): str(v).strip() for k, v in columns.items()})
     chosen: dict[str, str] = {}
     settings: dict[str, str] = {}
     for key, value in pairs.items():

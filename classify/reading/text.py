@@ -13,6 +13,7 @@ import numpy as np
 from starfathom.classify.errors import SpectrumError
 from starfathom.classify.reading import hints
 from starfathom.classify.reading.finish import guess_spectral_unit
+from starfathom.classify.reading.fixed import parse_fixed
 from starfathom.classify.reading.names import log_of, never_wavelength, role_of, split_unit
 from starfathom.classify.reading.raw import ErrorKind, RawSpectrum
 from starfathom.classify.reading.request import Request
@@ -170,13 +171,18 @@ def _quick(data: bytes) -> Table | None:
     rows = body.count(b"\n") + (not body.endswith(b"\n"))
     if rows > MAX_ROWS or len(first) > MAX_USUAL_LINE:
         return None
-    try:
-        values = np.fromstring(body, dtype=np.float64, sep=" ")
-    except ValueError:
-        return None
-    if rows * columns != values.size or columns < 2 or rows < 5:
-        return None
-    values = values.reshape(rows, columns)
+    fixed = parse_fixed(body)
+    if fixed is not None and fixed.shape[1] >= 2:
+        values = fixed
+        columns = values.shape[1]
+    else:
+        try:
+            values = np.fromstring(body, dtype=np.float64, sep=" ")
+        except ValueError:
+            return None
+        if rows * columns != values.size or columns < 2 or rows < 5:
+            return None
+        values = values.reshape(rows, columns)
     step = np.diff(values[:, 0])
     if not (np.all(step > 0) or np.all(step < 0)):
         return None  # ragged rows would show here; the careful reader sorts it out

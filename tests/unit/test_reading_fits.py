@@ -381,7 +381,7 @@ def test_plate_of_spectra_by_row(tmp_path):
     keep = spec.valid
     np.testing.assert_allclose(spec.flux[keep], stack[3][keep], rtol=1e-12)
     np.testing.assert_allclose(spec.sigma[keep] / spec.flux[keep], 0.01, rtol=1e-9)
-    with pytest.raises(SpectrumError, match="row of it can be picked"):
+    with pytest.raises(SpectrumError, match="row of it can be picked: read as row=1"):
         read(tmp_path, data)
 
 
@@ -556,6 +556,13 @@ def test_multispec_section_of_a_longer_image(tmp_path):
     w = 3501.25 + 3.0 * (PIXEL + 100 - 1)
     spec = f"1 1 0 3501.25 3.0 {N + 100} 0. 1. 10."
     read_multispec(tmp_path, spec, w, extra={"LTV1": -100.0, "LTM1_1": 1.0})
+
+
+def test_multispec_binned_by_two(tmp_path):
+    """LTM1_1 = 0.5 and LTV1 = 0.25: image pixel 1 is the mean of pixels 1 and 2."""
+    w = 3801.25 + 1.5 * (2 * PIXEL - 0.5 - 1)
+    spec = f"1 1 0 3801.25 1.5 {2 * N} 0. 1. 10."
+    read_multispec(tmp_path, spec, w, extra={"LTV1": 0.25, "LTM1_1": 0.5})
 
 
 @pytest.mark.parametrize(

@@ -515,6 +515,8 @@ def test_columns_asked_for_by_number_and_name(tmp_path):
     text = "a b c d\n" + lines([SIGMA, FLUX, 2 * FLUX + WAVE, WAVE])
     same_star(read(tmp_path, text, columns="wave=4,flux=2,sigma=1"), sigma=SIGMA)
     same_star(read(tmp_path, text.replace("a b c d", "a flux x wave"), columns={"sigma": "a"}), sigma=SIGMA)
+    same_star(read(tmp_path, text, read_as="text,wave=4,flux=2,sigma=1"), sigma=SIGMA)
+    same_star(read(tmp_path, text, read_as="wave=4, flux=2, sigma=1"), sigma=SIGMA)
 
 
 def test_unit_asked_for(tmp_path):
@@ -545,6 +547,7 @@ def test_no_such_column(tmp_path):
         {"medium": "ether"},
         {"read_as": "tea leaves"},
         {"columns": "wave"},
+        {"read_as": "text,wave"},
         {"columns": "colour=3"},
         {"columns": "row=0"},
         {"columns": {"row": "x"}},
