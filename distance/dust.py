@@ -66,5 +66,5 @@ def log_density(ebv: ArrayLike, distance_pc: ArrayLike, sin_b: ArrayLike) -> Flo
     """
     e, width = np.asarray(ebv, float), smooth_width(distance_pc, sin_b)
     cloud, share = mean_cloud(distance_pc), cloud_share(distance_pc)
-    smooth = (1 - share) * np.sqrt(2 / np.pi) / width * np.exp(-0.5 * (e / width) ** 2)
-    return np.log(smooth + share / cloud * np.exp(-e / cloud))
+    smooth = np.log((1 - share) * np.sqrt(2 / np.pi) / width) - 0.5 * (e / width) ** 2
+    return np.logaddexp(smooth, np.log(share / cloud) - e / cloud)

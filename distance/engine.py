@@ -340,19 +340,23 @@ def _grouped(
     done = []
     for name, items in by_name.items():
         first = [r for r in (out[item[0]] for item in items) if isinstance(r, Fathoming)]
-        points = [groups.modulus_of(*r.percentiles["distance_pc"][1:4]) for r in first]
-        modulus, modulus_err = np.array(points).T
-        ebv = np.array([r.median("ebv") for r in first])
-        ebv_err = np.maximum([r.error("ebv") for r in first], 0.01)
-        names = [r.name or f"star {item[0] + 1}" for r, item in zip(first, items)]
-        group = groups.combine(name, names, modulus, modulus_err, ebv, ebv_err)
-        if group is None:
+        if len(first) < groups.FEWEST:
             continue
+        names = [r.name or f"star {item[0] + 1}" for r, item in zip(first, items)]
+        stars = [item[1] for item in items]
+        n = max(400, job.n_samples // 2)
+        # dust first, from the colours without the dust prior, which would count once for every member
+        ebv, ebv_err = draw(stars, job.scale, job.prior, n, job.seed).ebv_colours.T
+        reddened = [replace(s, ebv_prior=groups.of_the_others(i, ebv, ebv_err)) for i, s in enumerate(stars)]
+        moduli = draw(reddened, job.scale, job.prior, n, job.seed).modulus
+        low, modulus, high = np.percentile(moduli, [16, 50, 84], axis=1)
+        modulus_err = 0.5 * (high - low)
+        group = groups.combine(name, names, modulus, modulus_err, ebv, ebv_err)
         inside = ~np.array(group.is_outlier)
         stars = []
         for i, item in enumerate(items):
             parallax, excess = groups.without_one(i, inside, modulus, modulus_err, ebv, ebv_err)
-            stars.append(replace(item[1], parallax=parallax, ebv_measured=excess) if inside[i] else item[1])
+            stars.append(replace(item[1], parallax=parallax, ebv_prior=excess) if inside[i] else item[1])
         again = draw(stars, job.scale, job.prior, job.n_samples, job.seed)
         percentiles, samples = _summaries(again)
         variance = decompose(again, job.scale, 1000) if job.with_budget else np.zeros((len(stars), 8))

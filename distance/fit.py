@@ -195,9 +195,9 @@ def _expect(
         g /= g.sum(axis=(1, 2), keepdims=True)
         slope = (g * r / s**2).sum(axis=(1, 2))
         bend = (g / s**2).sum(axis=(1, 2)) - (g * (r / s**2) ** 2).sum(axis=(1, 2)) + slope**2
-        precision[poor] = np.maximum(bend, 1e-3 / sigma[poor] ** 2)
-        step = np.clip(slope / np.maximum(bend, 0.2 / sigma[poor] ** 2), -1.0, 1.0)
-        target[poor] = f[poor] + step
+        # precision x (target - f) must be the slope of the log likelihood, whatever precision is taken
+        precision[poor] = np.maximum(bend, 0.1 / sigma[poor] ** 2)
+        target[poor] = f[poor] + slope / precision[poor]
         square[poor] = (g * r * r / wide[poor][:, :, None]).sum(axis=(1, 2))
     return _Expected(precision, target, square)
 

@@ -50,8 +50,8 @@ def along_steps(steps: ArrayLike, values: ArrayLike, *, hold: bool = True) -> Fl
 def from_nodes(nodes: Mapping[float, FloatArray], *, skip_gaps: bool = True) -> FloatArray:
     """Flat cell array from columns along steps at some luminosity codes, linear in the code between them.
 
-    A node that is NaN at a step is passed over there, or leaves NaN where ``skip_gaps`` is false; outside the given nodes
-    the nearest one is held.
+    A node that is NaN at a step is passed over there, or leaves NaN where ``skip_gaps`` is false; outside the given
+    nodes the nearest one is held.
     """
     codes = np.array(sorted(nodes))
     table = np.stack([nodes[c] for c in codes])

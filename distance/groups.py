@@ -8,7 +8,7 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from starfathom.distance.nominal import distance_modulus, distance_pc
+from starfathom.distance.nominal import distance_pc
 
 FloatArray = NDArray[np.float64]
 
@@ -83,10 +83,8 @@ def combine(
     modulus_err: FloatArray,
     ebv: FloatArray,
     ebv_err: FloatArray,
-) -> GroupResult | None:
-    """The common distance and reddening of a group from those of its members (mag); None for fewer than three."""
-    if len(members) < FEWEST:
-        return None
+) -> GroupResult:
+    """The common distance and reddening of a group from those of its members (mag), at least three of them."""
     off = find_outliers(modulus, modulus_err, ebv, ebv_err)
     mu, mu_err = weighted(modulus[~off], modulus_err[~off])
     e, e_err = weighted(ebv[~off], np.hypot(ebv_err[~off], PATCHY_EBV))
@@ -111,7 +109,14 @@ def without_one(
     )
 
 
-def modulus_of(low_pc: float, middle_pc: float, high_pc: float) -> tuple[float, float]:
-    """Modulus and error in mag from the 16, 50 and 84 % points of a distance in pc."""
-    low, middle, high = distance_modulus(np.array([low_pc, middle_pc, high_pc]))
-    return float(middle), float(0.5 * (high - low))
+def of_the_others(i: int, ebv: FloatArray, ebv_err: FloatArray) -> tuple[float, float]:
+    """E(B-V) of the other members, at least zero; its error allows for patchy dust, and the median forgives outliers."""
+    rest = np.arange(len(ebv)) != i
+    error = float((np.hypot(ebv_err[rest], PATCHY_EBV) ** -2).sum() ** -0.5)
+    return max(float(_weighted_median(ebv[rest], ebv_err[rest])), 0.0), float(np.hypot(1.25 * error, PATCHY_EBV))
+
+
+def _weighted_median(values: FloatArray, errors: FloatArray) -> float:
+    order = np.argsort(values)
+    share = np.cumsum(1.0 / np.hypot(errors[order], PATCHY_EBV) ** 2)
+    return float(values[order][np.searchsorted(share, 0.5 * share[-1])])

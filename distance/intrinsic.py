@@ -2,8 +2,8 @@
 
 Everything comes from the cited tables in ``data/``. Classes IV and, for temperature, II lie between the tabulated
 classes. Where no colours are tabulated for giants (earlier than G0) and supergiants, they follow the dwarfs of the
-same (B-V)_0, or, beyond (B-V)_0 of 1.2, the giants of the same type (common practice); Gaia and SDSS magnitudes of types without a tabulated value follow V-I or B-V through
-the published transformations named below.
+same (B-V)_0, or, beyond (B-V)_0 of 1.2, the giants of the same type (common practice); Gaia and SDSS magnitudes of
+types without a tabulated value follow V-I or B-V through the published transformations named below.
 """
 
 from __future__ import annotations

@@ -28,6 +28,12 @@ def gaia_zero_point_mas(inputs: Mapping[str, Any]) -> float:
         raise RequestError(
             "The Gaia zero point needs the package gaiadr3-zeropoint; install starfathom with the extra [gaia]."
         ) from None
+    try:
+        g_mag = float(inputs["phot_g_mean_mag"])
+    except (TypeError, ValueError):
+        g_mag = float("nan")
+    if not 6.0 <= g_mag <= 21.0:
+        raise RequestError("The Gaia zero point is defined for G from 6 to 21 only.")
     zpt.load_tables()
     try:
         # arrays of one: the package fails on plain numbers
@@ -37,7 +43,7 @@ def gaia_zero_point_mas(inputs: Mapping[str, Any]) -> float:
     except (ValueError, TypeError) as error:
         raise RequestError(f"The Gaia zero point could not be worked out: {str(error).splitlines()[0]}") from None
     if not np.isfinite(value):
-        raise RequestError("The Gaia zero point is not defined for this star (G must lie between 6 and 21).")
+        raise RequestError("The Gaia zero point is not defined for this star; its colour may be out of range.")
     return value
 
 

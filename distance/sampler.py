@@ -14,7 +14,7 @@ data and the seed alone, not on its neighbours in the list.
 
 from __future__ import annotations
 
-from dataclasses import dataclass, field
+from dataclasses import dataclass
 from functools import lru_cache
 
 import numpy as np
@@ -64,8 +64,9 @@ class Draws:
     ``modulus`` true distance modulus, ``ebv``, ``a_v`` in mag, ``m_v`` of the star without its companion,
     ``scatter``, ``companion``, ``colour`` (deviation of B-V), ``rv``, ``v_noise`` in mag, ``ln_teff``, ``cell``.
     ``n_eff`` (n_stars,) is the effective number of samples before they were made equal, ``log_evidence`` the log of the
-    mean weight. ``prior_part`` and ``own_part`` (n_stars,) are the shares of the variance of the excess, type and
-    colour given, that dust prior and colour scatter have in it.
+    mean weight. ``ebv_colours`` (n_stars, 2) is the excess as the colours alone have it, with its error (a Gaussian
+    that may reach below zero, no dust prior in it). ``prior_part`` and ``own_part`` (n_stars,) are the shares of the
+    variance of the excess, type and colour given, that dust prior and colour scatter have in it.
     """
 
     cell: IntArray
@@ -83,7 +84,7 @@ class Draws:
     log_evidence: FloatArray
     prior_part: FloatArray
     own_part: FloatArray
-    extra: dict[str, FloatArray] = field(default_factory=dict)
+    ebv_colours: FloatArray
 
 
 @lru_cache(maxsize=4)
@@ -257,11 +258,7 @@ def draw(stars: list[Star], scale: Scale, prior: str, n_samples: int, seed: int)
         + log_ndtr(centre_layer / spread_layer)
     )
     centre_cloud = centre - 1.0 / (cloud * precision)
-    log_cloud = (
-        np.log(share / cloud)
-        + (0.5 / (cloud * precision) - centre) / cloud
-        + log_ndtr(centre_cloud / spread)
-    )
+    log_cloud = np.log(share / cloud) + (0.5 / (cloud * precision) - centre) / cloud + log_ndtr(centre_cloud / spread)
     log_sum = np.where(own_prior, log_ndtr(centre / spread), np.logaddexp(log_layer, log_cloud))
     use_cloud = u[6] > np.exp(log_layer - log_sum)
     middle_e = np.where(own_prior, centre, np.where(use_cloud, centre_cloud, centre_layer))
@@ -301,6 +298,8 @@ def draw(stars: list[Star], scale: Scale, prior: str, n_samples: int, seed: int)
     limit = ODD_FOLLOW * scale.bv_scatter[cell]
     followed = np.clip(colour, -limit, limit)
     ln_teff = look.ln_teff[cell] + look.ln_teff_per_bv[cell] * followed + look.ln_teff_scatter[cell] * z[10]
+    free = taken(centre)
+    ebv_colours = np.stack([free.mean(axis=1), np.sqrt((taken(spread) ** 2).mean(axis=1) + free.var(axis=1))], axis=1)
     own_part = np.clip(_own_share(stars, usable), 0, 1)
     return Draws(
         cell=cell,
@@ -318,6 +317,7 @@ def draw(stars: list[Star], scale: Scale, prior: str, n_samples: int, seed: int)
         log_evidence=(top + np.log(total / n_samples))[:, 0],
         prior_part=prior_part,
         own_part=own_part,
+        ebv_colours=ebv_colours,
     )
 
 

@@ -156,6 +156,16 @@ def _own_scale(name: str) -> Scale:
         return from_arrays({k.removeprefix(prefix): file[k] for k in file.files if k.startswith(prefix)})
 
 
+def mean_in_band(scale: Scale, band: str) -> FloatArray:
+    """Absolute magnitude in another band on the cells: M_V and the intrinsic colour (NaN where no cited colour is)."""
+    from starfathom.distance.intrinsic import intrinsic
+
+    look = intrinsic()
+    if band not in look.offset:
+        raise RequestError(f"Band {band!r} is not known; use one of {', '.join(look.offset)} (case matters).")
+    return scale.mean + look.offset[band] + look.response[band] * scale.bv_shift
+
+
 def from_arrays(arrays: Mapping[str, NDArray]) -> Scale:
     """A scale from the arrays :func:`to_arrays` wrote."""
     fields = ("mean", "mean_err", "sigma", "tail", "slope", "bv_shift", "bv_scatter", "weight")

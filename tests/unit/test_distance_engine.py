@@ -23,7 +23,13 @@ def typed(cells=(("G2", "V", 1.0),), **fields):
     for subtype, lum, p in cells:
         posterior[SUBTYPES.index(subtype), CLASSES.index(lum)] = p
     base = Assignment(
-        file="star.fits", status="typed", object_kind="star", mk_type="G2 V", posterior=posterior, t_code=42.0, lum_code=5.0
+        file="star.fits",
+        status="typed",
+        object_kind="star",
+        mk_type="G2 V",
+        posterior=posterior,
+        t_code=42.0,
+        lum_code=5.0,
     )
     return dataclasses.replace(base, **fields)
 
@@ -117,7 +123,8 @@ def test_priors_move_the_distance_the_right_way():
 
 
 def test_malmquist_shift_has_its_textbook_size():
-    # Malmquist 1922: for a Gaussian scatter the mean M of a magnitude-limited sample is 0.6 ln 10 sigma^2 = 1.382 sigma^2 brighter
+    # Malmquist 1922: for a Gaussian scatter the mean M of a magnitude-limited sample is 0.6 ln 10 sigma^2 = 1.382
+    # sigma^2 brighter
     kw = {"scale": "mamajek", "rv": 3.1, "ebv": (0.0, 0.001), "n_samples": 20000}
     bright, nearby = (fathom("G2 V", {"V": (8.0, 0.001)}, prior=p, **kw) for p in ("bright", "nearby"))
     shift = nearby.median("abs_mag_v") - bright.median("abs_mag_v")
@@ -129,7 +136,8 @@ def test_routes():
     assert far.distance_spec_pc > 1.2 * far.distance_class_pc
     assert far.distance_class_pc < far.median("distance_pc") < far.distance_spec_pc
     assert far.distance_spec_pc == pytest.approx(10 ** (0.2 * (8.0 - 4.0) + 1), rel=0.03)
-    # 0.2 mag from the spectrum, about 0.3 from the class, and a possible companion of 15 %: tighter than the class alone
+    # 0.2 mag from the spectrum, about 0.3 from the class, and a possible companion of 15 %: tighter than the class
+    # alone
     assert far.error("distance_pc") / far.median("distance_pc") < 0.14 < 0.17
     assert -2.5 < far.routes_sigma < -1
     odd = fathom(typed(abs_mag_v=1.0, abs_mag_v_err=0.2, abs_mag_v_ok=True), SUNLIKE)
@@ -290,7 +298,9 @@ def test_types_on_the_grid():
 
 
 def test_suffix_and_range_change_the_distance():
-    d = {t: fathom(t, {"V": 6.0, "B": 7.0}).median("distance_pc") for t in ("K0 IIIa", "K0 III", "K0 IIIb", "K0 III/IV")}
+    d = {
+        t: fathom(t, {"V": 6.0, "B": 7.0}).median("distance_pc") for t in ("K0 IIIa", "K0 III", "K0 IIIb", "K0 III/IV")
+    }
     assert d["K0 IIIa"] > d["K0 III"] > d["K0 IIIb"]
     wide = fathom("K0 III/IV", {"V": 6.0, "B": 7.0})
     assert dict((r.step, r.sigma_mag) for r in wide.budget)["class"] > 0.2

@@ -49,7 +49,9 @@ def test_edges_are_taken():
     assert Photometry(V=(-30.0, 0.0))["V"] == (-30.0, 0.0)
 
 
-@given(st.dictionaries(st.text(max_size=3), st.one_of(st.floats(), st.text(max_size=5), st.none(), st.tuples(st.floats()))))
+@given(
+    st.dictionaries(st.text(max_size=3), st.one_of(st.floats(), st.text(max_size=5), st.none(), st.tuples(st.floats())))
+)
 def test_nothing_but_a_request_error_comes_out(magnitudes):
     try:
         got = Photometry(magnitudes)
