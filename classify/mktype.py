@@ -35,8 +35,10 @@ PREFIX_CODES: dict[str, float] = {"esd": 6.0, "usd": 6.0, "sd": 6.0, "d": 5.0, "
 
 _TYPE = r"[OBAFGKM](?:\d{1,2}(?:\.\d{1,2})?)"
 _SUBTYPE = re.compile(r"(\d{1,2}(?:\.\d{0,2})?)|\((\d(?:\.\d)?)\)")
+_AGAIN = re.compile(r"\s?([-/])\s?([OBAFGKM])(\d(?:\.\d{1,2})?)")
+_CAPITALS = re.compile(r"(?<=I)(AB|A0|A|B)(?![A-Za-z\d.])")
 _MARKS = re.compile(r"[:?]{1,3}")
-_PREFIX = re.compile(r"(esd|usd|sd|sg|d|g|c|w|r)(?=[OBAFGKM](?:[^a-z]|$))")
+_PREFIX = re.compile(r"(esd|usd|sd|sg|d|g|c|w|r)(?=[OBAFGKM](?:[^a-z]|e\b|$))")
 _METALLIC = re.compile(rf"(?:[khm]{_TYPE}(?:[-/]{_TYPE})?:?){{2,3}}")
 _METAL_SUFFIX = re.compile(rf"\s?m{_TYPE}(?:[-/](?:{_TYPE}|\d(?:\.\d)?))?:?")
 _CLASS = re.compile(
@@ -44,7 +46,7 @@ _CLASS = re.compile(
 )
 _CLASS_LETTERS = re.compile(r"(?:ab|a|b)[+-]?(?=[enpms(]|var)|(?:ab|a|b)[+-]?(?![a-z])")
 _COMPANION = re.compile(
-    r"\+\s*(?=(?:sd|esd|usd|sg|[dgckh])?[OBAFGKM](?:\d|\(|[IV/:?+-]|[NC]\d|[emp]?(?:$|[\s+)]))|W[NCOR]\d?|WD|D[ABCOQZX]|C[-\d]|S\d|[LTY]\d|sd[OB])"
+    r"[+&]\s*(?=(?:sd|esd|usd|sg|[dgckh])?[OBAFGKM](?:\d|\(|[IV/:?+-]|[NC]\d|[emp]?(?:$|[\s+)]))|W[NCOR]\d?|WD|D[ABCOQZX]|C[-\d]|S\d|[LTY]\d|sd[OB])"
 )
 _WHITE_DWARF = re.compile(r"(?:D[ABCOQZX][ABCOQZXPHVEe]{0,5}|WD)(?![a-df-z])\s?(\d{0,2}(?:\.\d{1,2})?)")
 _WOLF_RAYET = re.compile(
@@ -66,7 +68,7 @@ _TOKEN = re.compile(
     r"\(\([^()]{1,20}\)\)|\([^()]{1,30}\)|\[[^\[\]]{1,12}\]"
     rf"|{_ABUNDANCE}"
     rf"|[khm]{_TYPE}(?:-{_TYPE})?"
-    r"|shell|mild|metal|met|neb|comp|var|pec|lam(?:bda)?\s?Boo|delDel|deltaDel|alpha|beta|gamma|delta|strong|weak|lines?|early|late|abs|"
+    r"|shell|mild|metal|met|neb|comp|var|pec|(?:lam(?:bda)?|λ)\s?Boo|e(?=var)|sg|delDel|deltaDel|alpha|beta|gamma|delta|strong|weak|lines?|early|late|abs|"
     r"wk|wl|sh|em|ev|eq|ep|pe|ha|nn|ss|f\*|f\+|fc|f|e|n|s|m|p|q|v|w|x|z|h|k|d|l|!|\*|α|β|γ|δ|:|\?"
 )
 _DASHES = str.maketrans(
@@ -190,7 +192,9 @@ class MKType:
     def _tokens(self) -> tuple[tuple[str, ...], str]:
         known: list[str] = []
         unknown: list[str] = []
-        for word in re.findall(r"\([^()]*\)|[^\s(]+|\(", self.tail.replace("((", "\x01").replace("))", "\x02")):
+        for word in re.findall(
+            r"(?:lam(?:bda)?|λ)\s?Boo|\([^()]*\)|[^\s(]+|\(", self.tail.replace("((", "\x01").replace("))", "\x02")
+        ):
             word = word.replace("\x01", "((").replace("\x02", "))")
             found, at = [], 0
             while at < len(word):
@@ -375,6 +379,7 @@ def _class_at(piece: str, at: int, whole: str) -> tuple[str, int]:
 
 def _ordinary(piece: str, whole: str) -> MKType | None:
     """O to M types."""
+    piece = _CAPITALS.sub(lambda m: m.group().lower(), piece)  # catalogues in capitals: A2IAB
     match = _PREFIX.match(piece)
     prefix = match.group(1) if match else ""
     at = len(prefix)
@@ -423,6 +428,13 @@ def _ordinary(piece: str, whole: str) -> MKType | None:
             text, at = text + bare.group(), bare.end()
         text, at = _marks(piece, at, text)
     lum, at = _class_at(piece, at, whole)
+    if lum and digits is not None and text == f"{prefix}{letter}{digits.group(1)}":
+        again = _AGAIN.match(piece, at)  # B1V-B2V
+        if again is not None:
+            lum_hi, end = _class_at(piece, again.end(), whole)
+            if lum_hi == lum:
+                letter_hi, subtype_hi = again.group(2), _checked(again.group(2), again.group(3), whole)
+                text, at = text + again.group(1) + letter_hi + again.group(3), end
     found = MKType(text, letter, subtype, letter_hi, subtype_hi, lum, _tail(piece, at), prefix)
     if found.rest and (digits is None or not (lum or found.peculiarities or found.rest.startswith(("+", ".")))):
         return None

@@ -77,6 +77,12 @@ STARS = [
     ("b2iv", "B2 IV", 12, 12, 4, 4),
     ("f8ib", "F8 Ib", 38, 38, 1.6, 1.6),
     ("  G2   V ", "G2 V", 42, 42, 5, 5),
+    ("A2IA", "A2 Ia", 22, 22, 1, 1),
+    ("F8IAB", "F8 Iab", 38, 38, 1.3, 1.3),
+    ("B3IA0", "B3 Ia0", 13, 13, 0, 0),
+    ("K2 IIIB", "K2 IIIb", 52, 52, 3, 3),
+    ("B1V-B2V", "B1-B2 V", 11, 12, 5, 5),
+    ("G8III/K0III", "G8/K0 III", 48, 50, 3, 3),
     ("G2_V", "G2 V", 42, 42, 5, 5),
     ("K0–K1 III", "K0-K1 III", 50, 51, 3, 3),
     ("G 2 V", "G2 V", 42, 42, 5, 5),
@@ -127,6 +133,11 @@ PECULIAR = [
     ("B2IV Hewk", ("Hewk",)),
     ("K0III:var", ("var",)),
     ("G8IIIBa1", ("Ba1",)),
+    ("F0 V λ Boo", ("λ Boo",)),
+    ("F0 V lam Boo", ("lam Boo",)),
+    ("M7IIIevar", ("e", "var")),
+    ("dMe", ("e",)),
+    ("B[e]sg", ("[e]", "sg")),
 ]
 
 
@@ -212,6 +223,8 @@ def test_types_outside_the_mk_system(text, kind, letter, subtype):
         ("DA2+dM4", ("DA2", "dM4")),
         ("sdB+F", ("sdB", "F")),
         ("G8III+A2V:", ("G8 III", "A2 V:")),
+        ("K2III & A5V", ("K2 III", "A5 V")),
+        ("G8V/K0III+A", ("G8 V /K0III", "A")),
     ],
 )
 def test_composites(text, parts):
