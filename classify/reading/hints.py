@@ -95,8 +95,6 @@ def medium_of(headers: Iterable[Header]) -> tuple[Medium, str]:
             word = header.word(f"CTYPE{i}").upper()
             if word.startswith("AWAV"):
                 return "air", f"header CTYPE{i} = {word}"
-            if word.startswith(("WAVE-", "FREQ", "WAVN", "ENER")) or word == "WAVE":
-                return "vacuum", f"header CTYPE{i} = {word}"
     for header in headers:
         for key in header.keys():
             plain = key.upper()
@@ -133,6 +131,11 @@ def medium_of(headers: Iterable[Header]) -> tuple[Medium, str]:
                 value = _truth(header.get(key))
                 if value is not None:
                     return ("air" if value else "vacuum"), f"header {key} = {'T' if value else 'F'}"
+    for header in headers:
+        for i in (1, 2, 3):
+            word = header.word(f"CTYPE{i}").upper()
+            if word.startswith(("WAVE-", "FREQ", "WAVN", "ENER")) or word == "WAVE":
+                return "vacuum", f"header CTYPE{i} = {word}"
     for header in headers:
         for key in (
             "CTYPE1",

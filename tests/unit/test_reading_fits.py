@@ -898,6 +898,10 @@ def test_table_masked_by_a_logical_column(tmp_path):
         ({"AIRMASS": 1.2}, "unknown"),
         ({"COMMENT": "dewar vacuum pressure fine"}, "unknown"),
         ({"TELESCOP": "LAMOST"}, "vacuum"),
+        ({"CTYPE1": "WAVE", "AIRORVAC": "air"}, "air"),
+        ({"CTYPE1": "WAVE", "VACUUM": False}, "air"),
+        ({"CTYPE1": "AWAV", "TELESCOP": "LAMOST"}, "air"),
+        ({"CTYPE1": "WAVE", "COMMENT": "spectrum taken in the air"}, "vacuum"),
         ({"CRVAL1": (WAVE[0], "first wavelength [Angstrom, air]")}, "air"),
     ],
 )
