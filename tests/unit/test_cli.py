@@ -354,3 +354,27 @@ def test_long_runs_are_summed_up(tmp_path: Path, capsys: pytest.CaptureFixture[s
     assert call("run", str(listed), "-o", str(tmp_path / "out"), "--no-report", "--formats", "csv") == 0
     out = capsys.readouterr().out
     assert out.splitlines()[0] == "50 stars: 50 typed." and "s17" not in out
+
+
+CONTRACT = {
+    "classify": "-o --air --vacuum --fwhm --resolution --velocity --read-as --without --without-star --json",
+    "lines": "-o --fwhm --reference",
+    "sheet": "--with -o",
+    "desk": "--port --no-browser",
+    "distance": "--type --mag --parallax --scale --prior --rv --json",
+    "run": "-o --workers --scheduler --resume --seed --scale --prior --without --without-star",
+    "plan": "--types --fwhm --range --want --json",
+}
+
+
+@pytest.mark.parametrize("command", CONTRACT)
+def test_options_that_others_rely_on(command: str, capsys: pytest.CaptureFixture[str]) -> None:
+    assert call(command, "--help") == 0
+    words = capsys.readouterr().out.replace(",", " ").split()
+    assert not [option for option in CONTRACT[command].split() if option not in words]
+
+
+def test_the_templates_commands_are_there(capsys: pytest.CaptureFixture[str]) -> None:
+    assert call("templates", "--help") == 0
+    words = capsys.readouterr().out.split()
+    assert {"coverage", "show", "add", "check"} <= set(words)
