@@ -452,7 +452,7 @@ class Classifier:
                 nearest=near[q], flags=tuple(flags), evidence=criteria[q], **common)
             answers.append(answer)
         judged = judge_foreign_many(answers, batch, rows, found, np.arange(len(rows)), flat, valid, fe_h,
-                                    (self.without_libraries, self.without_stars))
+                                    (self.without_libraries, self.without_stars), rung)
         return [replace(a, remark=remark_on(a, float(fe_h[q]))) if a.status == "typed" else a
                 for q, a in enumerate(judged)]
 

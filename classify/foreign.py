@@ -9,14 +9,17 @@ where no star fits. What fits nothing is refused as ``unknown``.
 
 from __future__ import annotations
 
+import re
 from collections.abc import Sequence
 from dataclasses import dataclass, replace
 from functools import lru_cache
+from itertools import pairwise
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
 from numpy.typing import NDArray
 
+from starfathom.classify.alignment import telluric_free
 from starfathom.classify.assignment import Assignment
 from starfathom.classify.foreign_library import (
     COARSE_WAVE,
@@ -29,6 +32,7 @@ from starfathom.classify.foreign_library import (
     view_of,
     view_of_coarse,
 )
+from starfathom.classify.oddities import chemically_peculiar, h_alpha_emission
 from starfathom.classify.surface import Match
 
 if TYPE_CHECKING:
@@ -36,6 +40,11 @@ if TYPE_CHECKING:
 
 FloatArray = NDArray[np.float64]
 BoolArray = NDArray[np.bool_]
+
+#: Coarse pixels in which late M and L dwarfs are told apart: 6600 to 9150 A without the telluric bands.
+RED = np.flatnonzero((COARSE_WAVE > 6600.0) & (COARSE_WAVE < 9150.0) & telluric_free(COARSE_WAVE)
+                     & ((COARSE_WAVE < 7590.0) | (COARSE_WAVE > 7640.0))
+                     & ((COARSE_WAVE < 8130.0) | (COARSE_WAVE > 8350.0)) & (COARSE_WAVE < 8950.0))
 
 #: The nearest foreign example must be nearer than this share of the distance of the nearest star ...
 _RATIO = 0.9
@@ -95,28 +104,35 @@ class _Bank:
     whole: NDArray[np.float32]      # over the whole coarse grid, to be rectified again over part of it
     whole_valid: BoolArray
     owner: NDArray[np.int64]        # row of the example each came from
+    partner: NDArray[np.int64]      # and of the one it was mixed with, else the same
     steps: NDArray[np.int64]        # shift or redshift, coarse pixels
 
     @classmethod
-    def of(cls, depth: NDArray[Any], valid: BoolArray, owner: NDArray[np.int64], steps: NDArray[np.int64]) -> _Bank:
+    def of(cls, depth: NDArray[Any], valid: BoolArray, owner: NDArray[np.int64], partner: NDArray[np.int64],
+           steps: NDArray[np.int64]) -> _Bank:
         d = depth.astype(np.float32)
         near = np.where(valid, d, np.float32(0))[:, COMMON]
-        return cls(near, valid[:, COMMON].astype(np.float32), near ** 2, d, valid, owner, steps)
+        return cls(near, valid[:, COMMON].astype(np.float32), near ** 2, d, valid, owner, partner, steps)
 
     def within(self, reach: BoolArray) -> _Bank:
         """The same with the pseudo-continuum drawn over ``reach`` only, as it is for a partial spectrum."""
         ok = self.whole_valid & reach
         depth, _ = rectify_coarse(np.where(ok, self.whole + 1.0, 0.0).astype(float), ok)
-        return _Bank.of(np.clip(depth, -1, 1), ok, self.owner, self.steps)
+        return _Bank.of(np.clip(depth, -1, 1), ok, self.owner, self.partner, self.steps)
 
 
 def _shifted(depth: NDArray[np.float32], valid: BoolArray, step: int) -> tuple[NDArray[np.float32], BoolArray]:
-    d, v = np.roll(depth, step, axis=1), np.roll(valid, step, axis=1)
+    d, v = np.roll(depth, step), np.roll(valid, step)
     if step > 0:
-        v[:, :step] = False
+        v[:step] = False
     elif step < 0:
-        v[:, step:] = False
+        v[step:] = False
     return d, v
+
+
+_BALMER_FREE = np.ones(len(COARSE_WAVE), bool)
+for _line, _half in ((6562.8, 60.0), (4861.3, 45.0), (4340.5, 35.0)):
+    _BALMER_FREE &= np.abs(COARSE_WAVE - _line) > _half
 
 
 class Judge:
@@ -139,36 +155,41 @@ class Judge:
         self.far_rows = np.flatnonzero(~np.isin(far.source, list(without_libraries))
                                        & ~np.isin(far.name, list(without_names)))
         count = np.arange(len(self.stars))
-        self._star_bank = _Bank.of(self.stars.depth, self.stars.valid, count, np.zeros(len(count), np.int64))
+        self._star_bank = _Bank.of(self.stars.depth, self.stars.valid, count, count, np.zeros(len(count), np.int64))
         self._near_bank = self._make_near()
+        cool = np.array([bool(re.match(r"[KM]", t)) for t in self.stars.label])
+        cool &= self.stars.valid[:, RED].mean(axis=1) > 0.9
+        red, l_dwarfs = self.stars.select(cool), self.others.select(self.others.kind == "L dwarf")
+        self._red_depth, self._red_valid, self._red_kind, self._red_label = (
+            np.concatenate([getattr(red, f), getattr(l_dwarfs, f)]) for f in ("depth", "valid", "kind", "label"))
         self._far_bank: _Bank | None = None
         self._partial: dict[tuple[str, bytes], _Bank] = {}
 
     def _make_near(self) -> _Bank:
-        depth, valid, owner, steps = [], [], [], []
-        for shift in _NEAR_SHIFTS:
-            d, v = _shifted(self.others.depth, self.others.valid, shift)
-            depth.append(d)
-            valid.append(v)
-            owner.append(np.arange(len(self.others)))
-            steps.append(np.full(len(self.others), shift))
+        """Foreign examples at rest, shifted by up to 900 km/s, with galaxies and DA white dwarfs between examples."""
+        rows: list[tuple[NDArray[np.float32], BoolArray, int, int, int]] = []
         gal = [int(k) for k in self.far_rows if self.far.kind[k] == "galaxy"]
         pairs = [(j, k) for j in gal for k in gal if j < k and self.far.source[j] == self.far.source[k] == "sdss"]
+        o, count = self.others, len(self.others)
+        dwarfs = sorted((k for k in range(count) if re.fullmatch(r"DA[\d.]+", str(o.label[k]))),
+                        key=lambda k: float(o.label[k][2:]))
         for shift in _NEAR_SHIFTS:
-            for j, k in [(k, k) for k in gal] + pairs:      # and galaxies between two examples
-                d, v = self._far_view(j, k, shift)
-                depth.append(d)
-                valid.append(v)
-                owner.append(np.array([len(self.others) + k]))
-                steps.append(np.array([shift]))
-        return _Bank.of(np.concatenate(depth), np.concatenate(valid), np.concatenate(owner), np.concatenate(steps))
+            for k in range(count):
+                rows.append((*_shifted(o.depth[k], o.valid[k], shift), k, k, shift))
+            for j, k in pairwise(dwarfs):
+                middle, both = 0.5 * (o.depth[j] + o.depth[k]), o.valid[j] & o.valid[k]
+                rows.append((*_shifted(middle, both, shift), k, j, shift))
+            for j, k in [(k, k) for k in gal] + pairs:
+                rows.append((*self._far_view(j, k, shift), count + k, count + j, shift))
+        depth, valid, owner, partner, steps = zip(*rows)
+        return _Bank.of(np.array(depth), np.array(valid), np.array(owner), np.array(partner), np.array(steps))
 
     def _far_view(self, first: int, second: int, steps: int) -> tuple[NDArray[np.float32], BoolArray]:
         (one, seen), (two, seen_too) = self.far.at(first, steps), self.far.at(second, steps)
         valid = seen & seen_too
         flux = np.where(valid, one / np.median(one[valid]) + two / np.median(two[valid]), 0.0)
         view = view_of_coarse(flux[None], valid[None], np.zeros((1, len(flux))), np.array([10.0]))
-        return view.depth, view.valid
+        return view.depth[0], view.valid[0]
 
     @property
     def far_bank(self) -> _Bank:
@@ -186,7 +207,7 @@ class Judge:
                         steps.append(step)
             ok = np.array(valid)
             view = view_of_coarse(np.array(flux), ok, np.zeros(ok.shape), np.full(len(ok), 10.0))
-            self._far_bank = _Bank.of(view.depth, view.valid, np.array(owner), np.array(steps))
+            self._far_bank = _Bank.of(view.depth, view.valid, np.array(owner), np.array(owner), np.array(steps))
         return self._far_bank
 
     def _bank(self, which: str, reach: BoolArray | None) -> _Bank:
@@ -200,13 +221,11 @@ class Judge:
             self._partial[key] = bank.within(reach)
         return self._partial[key]
 
-    def _names_of(self, bank: _Bank) -> NDArray[np.str_]:
-        return np.concatenate([self.others.name, self.far.name])[bank.owner]
-
-    @staticmethod
-    def _blank(chi2: FloatArray, names: NDArray[np.str_], exclude: Sequence[frozenset[str]]) -> None:
+    def _blank_foreign(self, chi2: FloatArray, bank: _Bank, exclude: Sequence[frozenset[str]]) -> None:
+        names = np.concatenate([self.others.name, self.far.name])
         for row, drop in zip(chi2, exclude):
-            row[np.isin(names, list(drop))] = 1e12
+            out = np.isin(names, list(drop))
+            row[out[bank.owner] | out[bank.partner]] = 1e12
 
     def _about(self, owner: int) -> tuple[str, str, str]:
         if owner < len(self.others):
@@ -214,6 +233,20 @@ class Judge:
             return str(o.kind[owner]), str(o.label[owner]), str(o.name[owner])
         k = owner - len(self.others)
         return str(self.far.kind[k]), "", str(self.far.name[k])
+
+    def red_kind(self, view: View) -> list[tuple[str, str]]:
+        """Kind and label of the nearest example over 6600 to 9150 A; empty where little of that is there.
+
+        Only there L dwarfs show anything: bluer than that they have next to no light.
+        """
+        reach = self._red_valid[:, RED].mean(axis=1) > 0.9
+        depth, valid = self._red_depth[reach][:, RED], self._red_valid[reach][:, RED].astype(np.float32)
+        kinds, labels = self._red_kind[reach], self._red_label[reach]
+        y, ok = view.depth[:, RED], view.valid[:, RED]
+        w = (ok / (view.sigma[:, RED] ** 2 + np.float32(VIEW_FLOOR ** 2))).astype(np.float32)
+        d = (w * y * y) @ valid.T - 2 * (w * y) @ (depth * valid).T + w @ (depth * depth * valid).T
+        best = d.argmin(axis=1)
+        return [(str(kinds[k]), str(labels[k])) if seen > 0.8 else ("", "") for k, seen in zip(best, ok.mean(axis=1))]
 
     def compare(self, view: View, unexplained: FloatArray, exclude: Sequence[frozenset[str]] | None = None) -> Verdict:
         """Hold n spectra against everything.
@@ -243,8 +276,9 @@ class Judge:
         near = _chi2(y, w, self._bank("near", reach), _STRENGTH)
         near_bank = self._bank("near", reach)
         if exclude is not None:
-            self._blank(star, self.stars.name, exclude)
-            self._blank(near, self._names_of(near_bank), exclude)
+            for row, drop in zip(star, exclude):
+                row[np.isin(self.stars.name, list(drop))] = 1e12
+            self._blank_foreign(near, near_bank, exclude)
         out["pixels"][rows] = ok.sum(axis=1)
         out["flat"][rows] = (w * y * y).sum(axis=1)
         best_star, best_near = star.argmin(axis=1), near.argmin(axis=1)
@@ -259,7 +293,7 @@ class Judge:
             bank = self._bank("far", reach)
             far = _chi2(y[search], w[search], bank, _STRENGTH)
             if exclude is not None:
-                self._blank(far, self._names_of(bank), [exclude[q] for q in search])
+                self._blank_foreign(far, bank, [exclude[q] for q in search])
             best = far.argmin(axis=1)
             for q, i, row in zip(range(len(search)), best, rows[search]):
                 if far[q, i] < out["other"][row]:
@@ -299,28 +333,47 @@ def judge_for(without_libraries: tuple[str, ...] = (), without_stars: tuple[int,
     return Judge(without_libraries, without_stars)
 
 
-def judge_foreign(answer: Assignment, batch: PreparedBatch, index: int, found: Match, row: int, flat: FloatArray,
-                  valid: BoolArray, fe_h: float) -> Assignment:
-    """One answer judged: see :func:`judge_foreign_many`."""
-    return judge_foreign_many([answer], batch, np.array([index]), found, np.array([row]), flat[None], valid[None],
-                              np.array([fe_h]))[0]
-
-
 def judge_foreign_many(answers: Sequence[Assignment], batch: PreparedBatch, rows: NDArray[np.int64], found: Match,
                        match_rows: NDArray[np.int64], flat: FloatArray, valid: BoolArray, fe_h: FloatArray,
-                       without: tuple[tuple[str, ...], tuple[int, ...]] = ((), ())) -> list[Assignment]:
+                       without: tuple[tuple[str, ...], tuple[int, ...]] = ((), ()), rung: float = 4.6
+                       ) -> list[Assignment]:
     """The answers as they stand, or refused with ``object_kind`` and the reason, or flagged.
 
     ``batch`` rows ``rows`` hold the prepared spectra, ``found`` rows ``match_rows`` their matches, ``flat``/``valid``
     (n, p) the rectified pixels at the rung over ``surface.PIXELS``. ``without`` names libraries and HIP numbers that
-    nothing may be learned from.
+    nothing may be learned from; ``rung`` is the FWHM that ``flat`` was blurred to, angstrom.
     """
     if not answers:
         return []
+    judge = judge_for(*without)
     view = view_of(batch.flux[rows], batch.valid[rows], batch.sigma[rows], batch.fwhm_angstrom[rows])
-    verdict = judge_for(*without).compare(view, batch.unexplained[rows])
-    return [decide(a, verdict, i, view, float(batch.unexplained[rows[i]]), float(found.chi2[match_rows[i]]))
-            for i, a in enumerate(answers)]
+    flagged = []
+    for i, a in enumerate(answers):
+        noise = 1.0 / max(a.snr, 1.0)
+        emission = a.status == "typed" and h_alpha_emission(flat[i], valid[i], noise, a.t_code)
+        odd = "" if a.status != "typed" else chemically_peculiar(flat[i], valid[i], noise, a.t_code, a.lum_code, rung)
+        words = (*a.flags, *(["emission"] if emission else []), *(["peculiar"] if odd else []))
+        notes = (*a.notes, f"chemically peculiar: {odd}") if odd else a.notes
+        flagged.append(replace(a, flags=tuple(dict.fromkeys(words)), notes=notes) if emission or odd else a)
+        if emission:      # a Be star is judged by the rest of its spectrum
+            view.valid[i] &= _BALMER_FREE
+    verdict = judge.compare(view, batch.unexplained[rows])
+    out = [decide(a, verdict, i, view, float(batch.unexplained[rows[i]]), float(found.chi2[match_rows[i]]))
+           for i, a in enumerate(flagged)]
+    return _late_dwarfs(out, judge, view)
+
+
+def _late_dwarfs(answers: list[Assignment], judge: Judge, view: View) -> list[Assignment]:
+    """L dwarfs among what was typed K7 or later, or refused as nothing known or beyond the stars."""
+    ask = [i for i, a in enumerate(answers) if (a.status == "typed" and a.t_code > 56)
+           or (a.status == "refused" and a.object_kind in ("unknown", "galaxy", "quasar", "L dwarf"))]
+    if not ask:
+        return answers
+    for i, (kind, label) in zip(ask, judge.red_kind(view[np.array(ask)])):
+        if kind == "L dwarf":
+            answers[i] = _refuse(answers[i], kind, label, "the red end looks like an L dwarf: hydrides and broad K I "
+                                 "in place of TiO")
+    return answers
 
 
 def decide(answer: Assignment, verdict: Verdict, index: int, view: View, unexplained: float, chi2_surface: float
@@ -338,11 +391,12 @@ def decide(answer: Assignment, verdict: Verdict, index: int, view: View, unexpla
     if other < _RATIO * star and star - other > _GAIN:
         return _refuse(answer, verdict.kind[index], _other_type(verdict, index),
                        _fits_better(verdict, index, star / pixels, other / pixels))
-    if (height := _wolf_rayet(depth, seen)) and unexplained > 0.7:
+    cool = verdict.star_label[index].startswith(("K", "M")) and other > 1.3 * star      # gaps between TiO bands
+    if (height := _wolf_rayet(depth, seen)) and unexplained > 0.7 and not cool:
         return _refuse(answer, "Wolf-Rayet star", "", "broad emission around 4650 A stands "
                        f"{100 * height:.0f} % above the continuum, as in a Wolf-Rayet star")
     if (unexplained > _STRANGE_UNEXPLAINED and star / pixels > _STRANGE_STAR and chi2_surface > _STRANGE_SURFACE
-            and not (verdict.star_label[index].startswith("M") and other > 1.8 * star)):    # M stars reach beyond the library
+            and not (verdict.star_label[index].startswith("M") and other > 1.8 * star)):    # M stars beyond the library
         near = f"; nearest is a {verdict.kind[index]}" if other < 1.5 * star else ""
         return _refuse(answer, "unknown", "", "no normal star in the library looks like it (chi-squared "
                        f"{star / pixels:.1f} a pixel at best){near}")
