@@ -900,6 +900,9 @@ def test_table_masked_by_a_logical_column(tmp_path):
         ({"TELESCOP": "LAMOST"}, "vacuum"),
         ({"CTYPE1": "WAVE", "AIRORVAC": "air"}, "air"),
         ({"CTYPE1": "WAVE", "VACUUM": False}, "air"),
+        ({"INAIR": True}, "air"),
+        ({"VACUUM": "yes"}, "vacuum"),
+        ({"COMMENT": "wavelengths in air, not vacuum"}, "air"),
         ({"CTYPE1": "AWAV", "TELESCOP": "LAMOST"}, "air"),
         ({"CTYPE1": "WAVE", "COMMENT": "spectrum taken in the air"}, "vacuum"),
         ({"CRVAL1": (WAVE[0], "first wavelength [Angstrom, air]")}, "air"),
@@ -941,6 +944,55 @@ def test_header_hints(tmp_path):
         "fwhm_angstrom": 2.7,
         "flux_calibrated": True,
     }
+
+
+@pytest.mark.parametrize(
+    "cards,key,value",
+    [
+        ({"VRAD": (-31500.0, "[m/s] radial velocity")}, "velocity_kms", -31.5),
+        ({"VRAD": (-31.5, "[km/s]")}, "velocity_kms", -31.5),
+        ({"VRAD": 0.0}, "velocity_kms", None),
+        ({"FWHM": (0.27, "line width in nm")}, "fwhm_angstrom", 2.7),
+        ({"FWHM": 2.7}, "fwhm_angstrom", None),
+        ({"SPEC_FWHM": 2.7}, "fwhm_angstrom", 2.7),
+        ({"FLUXCAL": "ABSOLUTE"}, "flux_calibrated", True),
+        ({"FLUXCAL": "UNCALIBRATED"}, "flux_calibrated", False),
+        ({"CA-FLAG": 0}, "flux_calibrated", False),
+        ({"CA-FLAG": 1}, "flux_calibrated", True),
+        ({"OBJECT": "unknown"}, "object", None),
+        ({"EXPTIME": -5.0}, "exptime_s", None),
+        ({"RA": 400.0, "DEC": 10.0}, "ra_deg", None),
+    ],
+)
+def test_single_hints(tmp_path, cards, key, value):
+    spec = read(tmp_path, as_bytes(image(FLUX, **{**LINEAR, **cards})))
+    assert spec.meta.get(key) == (None if value is None else pytest.approx(value))
+
+
+@pytest.mark.parametrize(
+    "cards,log",
+    [
+        ({"CRVAL1": np.log(3801.25), "CDELT1": 5e-4, "CUNIT1": "Angstrom", "DC-FLAG": 1}, "ln"),
+        ({"CRVAL1": LOG_WAVE[0], "CDELT1": 2.4e-4, "CUNIT1": "nm", "DC-FLAG": 1}, "log10"),
+    ],
+)
+def test_logarithms_under_a_unit_that_does_not_fit(tmp_path, cards, log):
+    exponent = cards["CRVAL1"] + cards["CDELT1"] * np.arange(N)
+    w = np.exp(exponent) if log == "ln" else 10**exponent
+    same_star(read(tmp_path, as_bytes(image(flux_at(w), **cards))), w, flux_at(w))
+
+
+@pytest.mark.parametrize("unit", ["pixel", "PIX"])
+def test_axes_in_pixels_are_no_wavelengths(tmp_path, unit):
+    with pytest.raises(SpectrumError, match="nothing about wavelengths"):
+        read(tmp_path, as_bytes(image(FLUX, CRVAL1=4000.0, CDELT1=1.0, CUNIT1=unit)))
+
+
+def test_errors_and_masks_of_another_length_are_left_out(tmp_path):
+    data = table({"WAVE": WAVE[None], "FLUX": FLUX[None], "ERR": SIGMA[None, :7], "MASK": np.ones((1, 9))})
+    spec = read(tmp_path, data)
+    same_star(spec)
+    assert any("uncertainties left out" in n for n in spec.notes) and any("mask left out" in n for n in spec.notes)
 
 
 def test_seeing_is_not_resolution(tmp_path):
