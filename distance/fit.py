@@ -54,7 +54,7 @@ class Recipe:
 
 
 #: Guess of the scatter before any star is seen: main sequence, subgiants and giants, bright giants and supergiants.
-_SCATTER_GUESS = ((5.0, 0.25), (4.0, 0.60), (3.0, 0.45), (2.0, 0.80), (0.0, 0.80))
+_SCATTER_GUESS = ((5.0, 0.25), (4.0, 0.60), (3.0, 0.38), (2.0, 0.80), (0.0, 0.80))
 #: Guess of the colour term in mag per mag of (B-V)_0: (class, step, value). On the main sequence a star too red for
 #: its type is fainter; a red giant too red for it is brighter.
 _SLOPE_GUESS: tuple[tuple[float, tuple[tuple[float, float], ...]], ...] = (

@@ -110,7 +110,7 @@ def without_one(
 
 
 def of_the_others(i: int, ebv: FloatArray, ebv_err: FloatArray) -> tuple[float, float]:
-    """E(B-V) of the other members, at least zero; its error allows for patchy dust, and the median forgives outliers."""
+    """E(B-V) of the other members, at least zero; its error allows for patchy dust; the median forgives outliers."""
     rest = np.arange(len(ebv)) != i
     error = float((np.hypot(ebv_err[rest], PATCHY_EBV) ** -2).sum() ** -0.5)
     return max(float(_weighted_median(ebv[rest], ebv_err[rest])), 0.0), float(np.hypot(1.25 * error, PATCHY_EBV))
