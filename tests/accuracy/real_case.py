@@ -4,9 +4,9 @@ The star's STELIB spectrum is typed by a classifier that has learned from no STE
 that star, and its distance is taken from a scale fitted without the star. Magnitudes (V from Hp, B-V) and the parallax
 are those of Hipparcos (van Leeuwen 2007, A&A 474, 653), the parallax used for nothing but the comparison.
 
-The star of the README was chosen before any result was seen: a single dwarf not much unlike the Sun, not in MILES, whole
-from 3900 to 6800 A, parallax better than 2 %. ``--all`` does every STELIB star of which the last three are true, as a
-check that the one is no exception.
+The star of the README was chosen before any result was seen: a single dwarf not much unlike the Sun, not in MILES,
+whole from 3900 to 6800 A, parallax better than 2 %. ``--all`` does every STELIB star of which the last three are true,
+as a check that the one is no exception.
 """
 
 from __future__ import annotations
@@ -117,7 +117,7 @@ def main(arguments: list[str]) -> None:
     off = np.array([c.per_cent for c in cases])
     sigma = np.array([c.fathoming.parallax_sigma for c in cases])
     print(
-        f"{len(cases)} stars: median {np.median(off):+.1f} %, 68 % of them within {np.percentile(np.abs(off), 68):.1f} %; "
+        f"{len(cases)} stars: median {np.median(off):+.1f} %, 68 % within {np.percentile(np.abs(off), 68):.1f} %; "
         f"{np.mean(np.abs(sigma) < 1):.0%} within one sigma, {np.mean(np.abs(sigma) < 2):.0%} within two"
     )
 

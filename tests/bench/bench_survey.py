@@ -96,6 +96,21 @@ def _stages(paths: list[Path]) -> dict[str, float]:
     return {name: 1e3 * seconds for name, seconds in found.items()}
 
 
+def _templates(paths: list[Path]) -> list[tuple[int, float]]:
+    """(templates, milliseconds a spectrum) with one source library, with the other, with both."""
+    from starfathom.classify.engine import Classifier, Settings
+    from starfathom.classify.reading import read_plain
+
+    spectra = [read_plain(p) for p in paths]
+    found = []
+    for left_out in (("miles",), ("stelib",), ()):
+        classifier = Classifier.load(without_libraries=left_out)
+        classifier.classify_many(spectra[:BATCH], Settings())
+        spent = best_of(3, lambda c=classifier: c.classify_many(spectra, Settings()))  # type: ignore[misc]
+        found.append((len(classifier.library), 1e3 * spent / len(spectra)))
+    return found
+
+
 def _run(listed: Path, workers: int) -> tuple[float, float]:
     """Seconds and the sum of the peak memories (MB) of a run in processes of its own."""
     with tempfile.TemporaryDirectory() as folder:
@@ -153,6 +168,12 @@ def rows() -> list[dict[str, Any]]:
             f"{stage['product']:.3f} ms",
             whole / stage["product"],
         )
+        *fewer, (number, milliseconds) = _templates(paths[: 2 * BATCH])
+        for fewer_number, fewer_milliseconds in fewer:
+            add(
+                f"classification with {number} templates against {fewer_number}", f"{milliseconds:.2f} ms",
+                f"{fewer_milliseconds:.2f} ms", milliseconds / fewer_milliseconds,
+            )  # fmt: skip
         lists = {n: write_list(Path(folder) / f"list{n}.csv", paths[:n]) for n in sorted({100, 1000, MANY // 2, MANY})}
         seconds: dict[tuple[int, int], float] = {}
         memory: dict[int, float] = {}
