@@ -157,7 +157,9 @@ def draw_hr_diagram(fathomings: Iterable[Any], ax: Any = None) -> Any:
     ax.set_xlabel("effective temperature (K)")
     ax.set_ylabel(r"log$_{10}$ luminosity ($L_\odot$)")
     if points.counts:
-        ax.legend(title="class (stars)", fontsize=8, title_fontsize=8, loc="lower left", frameon=False)
+        ax.legend(
+            title="class (stars)", fontsize=8, title_fontsize=8, loc="lower left", framealpha=0.9, edgecolor="none"
+        )
     if points.note:
         ax.set_title(points.note, fontsize=8, color="0.35", wrap=True)
     return ax
