@@ -44,6 +44,7 @@ BoolArray = NDArray[np.bool_]
 MODEL_DIR = Path(__file__).parent / "data" / "model"
 _FOLDS = 5
 _NOISE = 0.005      # white noise given to library spectra in training, a 60 km/s pixel
+_PERTURBED_NOISE = 0.006
 #: (components, weight) of the regressors that are averaged.
 _SIZES = (20, 40)
 _MIN_COVERAGE = 0.9
@@ -136,7 +137,7 @@ def perturb(flux: FloatArray, valid: BoolArray, rng: np.random.Generator) -> tup
 
     Wavelength error and wander (10 km/s), line spread off by some 8 %, 4 % scattered light or its opposite,
     calibration ripple on 30 A (0.8 %) and more of it across the Balmer lines (1.5 %, for flux standards are mostly hot
-    stars whose Balmer lines are badly divided out), pixel noise (1.2 %).
+    stars whose Balmer lines are badly divided out), pixel noise (0.6 %).
     """
     n, m = flux.shape
     pixel = np.arange(m, dtype=float)
@@ -153,7 +154,7 @@ def perturb(flux: FloatArray, valid: BoolArray, rng: np.random.Generator) -> tup
         good = np.flatnonzero(valid[i])
         row = np.interp(pixel + wander / GRID_KMS, good, row[good])
         ripple = 1 + np.interp(ln, fine, rng.normal(0, 0.008, 120)) + rng.normal(0, 0.015, len(_BALMER)) @ bumps
-        out[i] = row * ripple * (1 + rng.normal(0, 0.012, m))
+        out[i] = row * ripple * (1 + rng.normal(0, _PERTURBED_NOISE, m))
     return np.where(valid, out, 0.0), valid
 
 
@@ -306,7 +307,7 @@ def learn_rung(aligned: Aligned, names: NDArray[np.str_], labels: NDArray[np.str
     fold = rng.integers(0, _FOLDS, len(groups))[inverse]
     fold_of_group = dict(zip(lessons.group[typed], fold))
     held_parts = []
-    sigma = np.full(flat_p.shape, 0.012)
+    sigma = np.full(flat_p.shape, _PERTURBED_NOISE)
     for f in range(_FOLDS):
         test = np.flatnonzero(fold == f)
         train = np.flatnonzero(fold != f)
