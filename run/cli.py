@@ -580,19 +580,29 @@ def demo(
 
 @app.command()
 def plan(
-    types: Annotated[str, typer.Option("--types", metavar="TYPE,TYPE", help='Rival types, such as "G8 III,G8 V".')],
-    fwhm: Fwhm = None,
+    types: Annotated[
+        str | None,
+        typer.Option(
+            "--types", metavar="TYPE,TYPE", help='Rival types, such as "G8 III,G8 V"; else the whole H-R diagram.'
+        ),
+    ] = None,
+    fwhm: Annotated[
+        float | None, typer.Option(metavar="ANGSTROM", help="Width of the line spread; 5 if not given.")
+    ] = None,
     wave_range: Annotated[
         str | None, typer.Option("--range", metavar="LO-HI", help="Wavelengths observed, angstrom.")
     ] = None,
     want: Annotated[str, typer.Option(metavar="GOAL", help='"class", or such as "distance 15%".')] = "class",
+    figure: Annotated[
+        str | None, typer.Option("--figure", metavar="PICTURE", help="Draw it too: .png, .pdf or .svg.")
+    ] = None,
     as_json: AsJson = False,
 ) -> None:
     """What S/N it would take, before the night."""
     from starfathom import advice
 
     _positive(fwhm, "--fwhm", "angstrom")
-    advice.run_plan(types, fwhm_angstrom=fwhm, wave_range=wave_range, want=want, as_json=as_json)
+    advice.run_plan(types, fwhm_angstrom=fwhm, wave_range=wave_range, want=want, as_json=as_json, figure=figure)
 
 
 @templates_app.command()
