@@ -22,6 +22,7 @@ from starfathom.classify.evidence import gather_evidence, remark_on
 from starfathom.classify.foreign import judge_foreign_many
 from starfathom.classify.grid import PIXEL_ANGSTROM, WAVE, blur, continuum, rectify
 from starfathom.classify.learn import MODEL_DIR, Aligned, align_library, average, learn_rung, load_nodes
+from starfathom.classify.linespread import line_spread
 from starfathom.classify.model import RUNGS, Model
 from starfathom.classify.prepared import Prepared
 from starfathom.classify.resample import Native
@@ -243,7 +244,7 @@ class Classifier:
         fwhm = np.where(has_f, given_f, 5.0)
         if (~has_f).any():
             rows = np.flatnonzero(~has_f)
-            fwhm[rows] = alignment.line_spread(flux[rows], flat[rows], valid[rows], best[rows], nodes,
+            fwhm[rows] = line_spread(flux[rows], flat[rows], valid[rows], best[rows], nodes,
                                                np.array([natives[i].pixel_angstrom for i in rows]))
         curve, error = alignment.wander(flat, valid, best, np.clip(fwhm, alignment.LADDER[0], None), nodes)
         reach = nodes.valid
