@@ -82,6 +82,8 @@ def build(filters: Path, atlas: Path) -> list[list[object]]:
         response[band] = np.interp(
             wave, np.asarray(table["wavelength"], float), np.asarray(table["response"], float), left=0, right=0
         )
+        if name.startswith("bessell"):  # printed as response to energy; the sums below count photons
+            response[band] = response[band] / wave
     curves = [G23(Rv=float(rv))(wave * u.AA) for rv in CURVE_RV]
     spectra = atlas_spectra(atlas, wave)
     hot = next(flux for teff, flux in reversed(spectra) if teff > 30000)
