@@ -34,7 +34,8 @@ def star(label: str, library: str = "miles", **how: object) -> tuple[PlainSpectr
         wave = wave * (1 + float(velocity) / 299792.458)   # type: ignore[arg-type]
     if window := how.get("window"):
         valid = valid & (wave > window[0]) & (wave < window[1])   # type: ignore[index]
-    return PlainSpectrum(wave, np.where(valid, flux, 0.0), sigma, valid, "air", "test", label), float(step_of(c["t_code"][i]))
+    spectrum = PlainSpectrum(wave, np.where(valid, flux, 0.0), sigma, valid, "air", "test", label)
+    return spectrum, float(step_of(c["t_code"][i]))
 
 
 @pytest.mark.parametrize("label", ["B5V", "A0V", "F5V", "G2V", "K0III", "K5V", "M2III"])

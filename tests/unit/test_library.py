@@ -7,7 +7,15 @@ import pytest
 
 from starfathom.templates.labels import read_label
 from starfathom.templates.library import DATA, LIBRARY_FILE, decode_flux, encode_flux, load_library
-from starfathom.templates.subtypes import CLASSES, LUM_CODES, STEPS, SUBTYPES, nearest_subtype, step_of, t_code_from_step
+from starfathom.templates.subtypes import (
+    CLASSES,
+    LUM_CODES,
+    STEPS,
+    SUBTYPES,
+    nearest_subtype,
+    step_of,
+    t_code_from_step,
+)
 
 
 def test_it_is_compact_and_holds_enough_normal_stars():
