@@ -73,7 +73,8 @@ class Session:
         self.said = WELCOME
         self.editing = False
         self.dark = False
-        self.who = ""
+        history = night.log.history()
+        self.who = history[-1].who if history else ""      # whoever decided last is likely the one who goes on
         self._looks: dict[int, Look] = {}
         self._standards: dict[Cell, list[str]] = {}
         self._templates: dict[tuple[Any, ...], FloatArray] = {}
@@ -292,7 +293,7 @@ class Session:
     def _hello(self, v: dict[str, Any]) -> None:
         self.said = WELCOME
         self.dark = bool(v.get("dark", self.dark))
-        self.who = str(v.get("who", self.who))[:12]
+        self.who = str(v.get("who") or self.who)[:12]
 
     # ---- the queue ------------------------------------------------------------------------------------------------
 

@@ -232,7 +232,7 @@ class View:
 
     def forget_words(self) -> None:
         """Send every word again at the next refresh: the page has only now begun to listen."""
-        for key in [k for k in self._sent if isinstance(k, tuple)]:
+        for key in [k for k in self._sent if isinstance(k, tuple) or k == "who"]:
             del self._sent[key]
 
     def _put(self, key: str, data: dict[str, Any], stamp: Any = None) -> None:
@@ -469,6 +469,9 @@ class View:
             self._sent["remark_of"] = s.index
             news.append(("remark", "value", ""))
             news.append(("", "reveal", ""))
+        if self._sent.get("who") != s.who:
+            self._sent["who"] = s.who
+            news.append(("who", "value", s.who))
         if s.editing and not self._sent.get("was_editing"):
             news += [("type", "value", plane.cell_name(s.look.place.cell)), ("type", "focus", "")]
         self._sent["was_editing"] = s.editing

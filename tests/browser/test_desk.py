@@ -224,6 +224,9 @@ def test_names_are_shown_not_obeyed(page):
 def test_a_crash_loses_nothing(chromium, desk, night):
     page = Page(chromium, desk.address)
     star = page.run("return document.querySelector('#star .big').textContent")
+    page.keys("w")
+    page.run("document.getElementById('who').value = ''")
+    page.keys("cr", Keys.ENTER)
     page.press("a", "said")
     assert "kept" in page.text("said")
     desk.crash()
@@ -236,6 +239,7 @@ def test_a_crash_loses_nothing(chromium, desk, night):
     queue = page.run("return [...document.querySelectorAll('#queue li.done .name')].map((n) => n.textContent)")
     assert queue == [star]
     assert page.run("return document.querySelector('#star .big').textContent") != star
+    page.until("return document.getElementById('who').value === 'cr'")     # the same hand goes on
     page.press("u", "said")
     assert log_of(night).current() == {}
     assert [m for m in page.severe() if old not in m] == []    # the dead desk's page may well complain

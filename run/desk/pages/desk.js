@@ -64,7 +64,6 @@ document.addEventListener("click", (event) => {
   act(hit.dataset.do, values)
   if (hit.tagName === "BUTTON") hit.blur()
 })
-byId("who").addEventListener("change", () => localStorage.setItem("starfathom-who", byId("who").value))
 
 let blinking = 0
 const blink = (on, pinned) => {
@@ -97,6 +96,5 @@ page.connect(page.properties.data.change, () => {
 
 const kept = localStorage.getItem("starfathom-dark")
 const dark = kept === null ? matchMedia("(prefers-color-scheme: dark)").matches : kept === "1"
-byId("who").value = localStorage.getItem("starfathom-who") || ""
 send("hello", {dark})
 root.dataset.ready = "1"
