@@ -27,7 +27,7 @@ def test_the_fast_likelihood_is_the_dense_one(model):
     valid = np.ones(flat.shape, bool)
     valid[0, CORE[400:]] = False
     valid[0, CORE[300:330]] = False
-    valid[0, CORE[1000:]] = True
+    valid[0, CORE[800:]] = True
     sigma = np.full(flat.shape, 0.02)
     found = match(s, flat, valid, sigma)
     use = CORE[valid[0, CORE]]
