@@ -21,6 +21,7 @@ from numpy.typing import NDArray
 
 from starfathom.classify.alignment import telluric_free
 from starfathom.classify.assignment import Assignment
+from starfathom.classify.composite import Pair, PairFinder
 from starfathom.classify.foreign_library import (
     COARSE_WAVE,
     COMMON,
@@ -50,6 +51,9 @@ RED = np.flatnonzero((COARSE_WAVE > 6600.0) & (COARSE_WAVE < 9150.0) & telluric_
 _RATIO = 0.9
 #: ... by at least this much chi-squared.
 _GAIN = 12.0
+#: A pair of stars is sought above this chi-squared a pixel of the nearest star, and is flagged ``composite`` when it
+#: comes below this share of it, by at least this much, and below this share of the nearest foreign example.
+_PAIR_ABOVE, _PAIR_RATIO, _PAIR_GAIN, _PAIR_OTHER = 0.6, 0.55, 100.0, 0.4
 #: Within this ratio the foreign example is no worse than a tie: flagged ``kind-doubtful``.
 _DOUBT = 1.1
 #: Less than this in chi-squared between the nearest star and no feature at all: nothing stands above the noise.
@@ -57,6 +61,7 @@ _FEATURE_GAIN = 15.0
 #: Nothing fits: share of the structure left by the alignment node, chi-squared a pixel of the nearest star and of the
 #: template surface. Met by no normal library star that is not an extreme emission object.
 _STRANGE_UNEXPLAINED, _STRANGE_STAR, _STRANGE_SURFACE = 0.8, 1.2, 0.75
+_STRANGE_EMISSION = 6.0      # with H alpha in emission and the Balmer lines left out
 #: Swan bands of C2, step across the head in the coarse view: where 4737 and 5165 are both seen, and one alone. Normal
 #: stars reach 0.06, a barium star 0.11.
 _SWAN_PAIR, _SWAN_ALONE = 0.14, 0.3
@@ -162,6 +167,7 @@ class Judge:
         red, l_dwarfs = self.stars.select(cool), self.others.select(self.others.kind == "L dwarf")
         self._red_depth, self._red_valid, self._red_kind, self._red_label = (
             np.concatenate([getattr(red, f), getattr(l_dwarfs, f)]) for f in ("depth", "valid", "kind", "label"))
+        self.pairs = PairFinder(self.stars)
         self._far_bank: _Bank | None = None
         self._partial: dict[tuple[str, bytes], _Bank] = {}
 
@@ -280,7 +286,8 @@ class Judge:
                 row[np.isin(self.stars.name, list(drop))] = 1e12
             self._blank_foreign(near, near_bank, exclude)
         out["pixels"][rows] = ok.sum(axis=1)
-        out["flat"][rows] = (w * y * y).sum(axis=1)
+        again, _ = rectify_coarse(np.where(view.valid, view.depth + 1.0, 0.0).astype(float), view.valid)
+        out["flat"][rows] = np.minimum((w * y * y).sum(axis=1), (w * again[:, COMMON] ** 2).sum(axis=1))
         best_star, best_near = star.argmin(axis=1), near.argmin(axis=1)
         for q, row in enumerate(rows):
             out["star"][row] = star[q, best_star[q]]
@@ -358,8 +365,14 @@ def judge_foreign_many(answers: Sequence[Assignment], batch: PreparedBatch, rows
         if emission:      # a Be star is judged by the rest of its spectrum
             view.valid[i] &= _BALMER_FREE
     verdict = judge.compare(view, batch.unexplained[rows])
-    out = [decide(a, verdict, i, view, float(batch.unexplained[rows[i]]), float(found.chi2[match_rows[i]]))
-           for i, a in enumerate(flagged)]
+    out = []
+    for i, a in enumerate(flagged):
+        pair = None
+        whole = not _reach_key(view.valid[i])
+        if a.status == "typed" and whole and verdict.star[i] > _PAIR_ABOVE * verdict.pixels[i]:
+            pair = judge.pairs.best(view, i)
+        chi2 = float(found.chi2[match_rows[i]])
+        out.append(decide(a, verdict, i, view, float(batch.unexplained[rows[i]]), chi2, pair))
     return _late_dwarfs(out, judge, view)
 
 
@@ -376,18 +389,23 @@ def _late_dwarfs(answers: list[Assignment], judge: Judge, view: View) -> list[As
     return answers
 
 
-def decide(answer: Assignment, verdict: Verdict, index: int, view: View, unexplained: float, chi2_surface: float
-           ) -> Assignment:
-    """What row ``index`` of the comparison makes of one answer."""
+def decide(answer: Assignment, verdict: Verdict, index: int, view: View, unexplained: float, chi2_surface: float,
+           pair: Pair | None = None) -> Assignment:
+    """What row ``index`` of the comparison makes of one answer; ``pair`` is the best pair of stars, if sought."""
     if answer.status != "typed":
         return answer
     pixels = max(float(verdict.pixels[index]), 1.0)
     star, other, flat = (float(v[index]) for v in (verdict.star, verdict.other, verdict.flat))
     depth, seen = view.depth[index], view.valid[index]
-    if flat - star < _FEATURE_GAIN and flat - other < _FEATURE_GAIN:
+    emission = "emission" in answer.flags
+    if flat - star < _FEATURE_GAIN and flat - other < _FEATURE_GAIN and not emission:
         return _refuse(answer, "unknown", "", "no spectral feature stands above the noise, so a type would be a guess")
     if swan := _swan_bands(depth, seen):
         return _refuse(answer, "carbon star", "C", swan)
+    if pair is not None and _two_stars(pair, star, other):
+        words = (f"two stars rather than one: {pair.first} and {pair.second} together (share of the first "
+                 f"{100 * pair.share:.0f} % at 5200 A) fit {star / pair.chi2:.1f} times better than any single star")
+        return replace(answer, flags=(*answer.flags, "composite"), notes=(*answer.notes, words))
     if other < _RATIO * star and star - other > _GAIN:
         return _refuse(answer, verdict.kind[index], _other_type(verdict, index),
                        _fits_better(verdict, index, star / pixels, other / pixels))
@@ -395,7 +413,8 @@ def decide(answer: Assignment, verdict: Verdict, index: int, view: View, unexpla
     if (height := _wolf_rayet(depth, seen)) and unexplained > 0.7 and not cool:
         return _refuse(answer, "Wolf-Rayet star", "", "broad emission around 4650 A stands "
                        f"{100 * height:.0f} % above the continuum, as in a Wolf-Rayet star")
-    if (unexplained > _STRANGE_UNEXPLAINED and star / pixels > _STRANGE_STAR and chi2_surface > _STRANGE_SURFACE
+    least = _STRANGE_EMISSION if emission else _STRANGE_STAR
+    if (unexplained > _STRANGE_UNEXPLAINED and star / pixels > least and chi2_surface > _STRANGE_SURFACE
             and not (verdict.star_label[index].startswith("M") and other > 1.8 * star)):    # M stars beyond the library
         near = f"; nearest is a {verdict.kind[index]}" if other < 1.5 * star else ""
         return _refuse(answer, "unknown", "", "no normal star in the library looks like it (chi-squared "
@@ -403,6 +422,11 @@ def decide(answer: Assignment, verdict: Verdict, index: int, view: View, unexpla
     if other < _DOUBT * star:
         answer = replace(answer, flags=(*answer.flags, "kind-doubtful"))
     return answer
+
+
+def _two_stars(pair: Pair, star: float, other: float) -> bool:
+    """A pair beats every single star, and every foreign object by far (a galaxy is a sum of stars too)."""
+    return pair.chi2 < _PAIR_RATIO * star and star - pair.chi2 > _PAIR_GAIN and pair.chi2 < _PAIR_OTHER * other
 
 
 def _refuse(answer: Assignment, kind: str, other_type: str, reason: str) -> Assignment:
