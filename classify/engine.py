@@ -41,6 +41,7 @@ _LEAST_PIXELS = 100          # valid grid pixels between 3640 and 7390 A
 _LEAST_SNR = 2.0
 _VELOCITY_LIMIT_KMS = 450.0
 _AIR_VACUUM_KMS = 83.5
+_METAL_WEAK = -0.8           # [Fe/H] below which the flag is set; the regression is good to 0.1 dex there
 _BATCH = 32
 
 
@@ -404,7 +405,7 @@ class Classifier:
         found, flat, valid = self.matched(batch, rows, model)
         mag, mag_extra = average(model.abs_mag, found.components, found.spread)
         grav, grav_extra = average(model.log_g, found.components, found.spread)
-        fe_h, fe_h_sd = model.fe_h.predict(found.components, found.spread)
+        fe_h, fe_h_extra = average((model.fe_h,), found.components, found.spread)
         by_regression, by_regression_extra = average(model.step, found.components, found.spread)
         evidence = gather_evidence(batch, rows, self.model)
         log_p = post.weigh(post.evidence_pieces(found.log_like, mag, mag_extra, grav, grav_extra, by_regression,
@@ -441,8 +442,9 @@ class Classifier:
                 flags.append("partial-coverage")
             if not batch.velocity_given[i] and abs(batch.velocity_kms[i]) > _VELOCITY_LIMIT_KMS:
                 flags.append("velocity-doubtful")
-            if fe_h[q] + 0.5 * fe_h_sd[q] < -0.8 and step[q] > 28 and p[q][:, 5:].sum() > 0.3:
+            if fe_h[q] + fe_h_extra[q] < _METAL_WEAK and step[q] > 28 and p[q][:, 5:].sum() > 0.3:
                 flags.append("metal-weak")
+                ok_mag = False      # few such stars have a parallax good enough to learn from
             if abs(np.interp(step[q], STEPS, np.arange(len(STEPS))) - i_t) > 3:
                 flags.append("types-disagree")
             answer = Assignment(
