@@ -556,6 +556,8 @@ def _signal_to_noise(flux: FloatArray, sigma: FloatArray, valid: BoolArray
     for i in range(len(flux)):
         name = ""
         for w, lo, hi in _WINDOW_PIXELS:
+            if hi > 9000 and name:
+                continue      # the whole range is for spectra that have none of the windows
             inside = valid[i, w]
             if inside.mean() > 0.7 or (not name and hi > 9000 and inside.any()):
                 here = float(np.median(ratio[i, w][inside]))

@@ -38,14 +38,15 @@ class Evidence:
         """
         rules = load_criteria()
         n, k = self.values.shape
+        low, high = np.array([r.t_lo - 1 for r in rules]), np.array([r.t_hi + 1 for r in rules])
+        listed = np.isfinite(self.values) & (t_code[:, None] >= low) & (t_code[:, None] <= high)
+        near = np.where(listed, self.values, np.nan)
         t, t_err, lum, lum_err = (np.full((n, k), np.nan) for _ in range(4))
         for scales in {id(s): s for s in self.scales}.values():
             mine = np.flatnonzero([s is scales for s in self.scales])
-            said = point(scales, self.values[mine], self.errors[mine], t_code[mine])
+            said = point(scales, near[mine], self.errors[mine], t_code[mine])
             t[mine], t_err[mine], lum[mine], lum_err[mine] = said
         say = np.nan_to_num(1 / t_err ** 2) + np.nan_to_num(0.25 / lum_err ** 2)
-        low, high = np.array([r.t_lo - 1 for r in rules]), np.array([r.t_hi + 1 for r in rules])
-        listed = np.isfinite(self.values) & (t_code[:, None] >= low) & (t_code[:, None] <= high)
         say = np.where(listed, say, 0.0)
         weight = say / np.maximum(say.sum(axis=1, keepdims=True), 1e-12)
         out = []
