@@ -55,11 +55,11 @@ bench: $(DEV)
 # mypy looks for packages by folder name, which the folders here do not have; a tree of links gives them their
 # import names without building a wheel.
 lint: $(DEV)
-	$(BIN)/ruff check .
 	@rm -rf build/typing && mkdir -p build/typing/starfathom
 	@for f in run/*; do ln -s "../../../$$f" build/typing/starfathom/; done
-	@for d in classify distance templates; do ln -s "../../../$$d" build/typing/starfathom/$$d; done
-	cd build/typing && ../../$(BIN)/mypy --config-file ../../pyproject.toml -p starfathom
+	@for d in classify distance templates demo_spectra; do ln -s "../../../$$d" build/typing/starfathom/$$d; done
+	@$(BIN)/ruff check . ; ruff=$$?; \
+	cd build/typing && ../../$(BIN)/mypy --config-file ../../pyproject.toml -p starfathom && exit $$ruff
 
 clean:
 	rm -rf build dist *.egg-info demo_report .pytest_cache .mypy_cache .ruff_cache .hypothesis

@@ -44,7 +44,7 @@ def rows() -> list[dict[str, object]]:
     """Rows of the speed table."""
     spent = time_many()
     return [{
-        "task": f"{spent['stars']:.0f} distances from type and photometry, {spent['samples']:.0f} samples each, with budget",
+        "task": f"{spent['stars']:.0f} distances from types and magnitudes, {spent['samples']:.0f} samples each",
         "ours": f"{spent['seconds']:.1f} s", "against": "60 s", "ratio": spent["seconds"] / 60, "target": "<= 1",
     }]  # fmt: skip
 
