@@ -1,8 +1,8 @@
 """What would settle it: for one star, the observations that would help most, each with its expected effect.
 
 What a better spectrum would bring is counted among injected library stars (:mod:`starfathom.advice_grid`), given how
-certain the star is now; what it, a band, a dust value or a parallax would do to the distance is worked out by the
-distance step itself with the hypothetical data. Exposure times scale as the square of S/N, as they do where photons
+certain the star is now; what it, a band or a dust value would do to the distance is worked out by the distance step
+itself with the hypothetical data. Exposure times scale as the square of S/N, as they do where photons
 of star and sky limit it; near the read noise less time is needed, near the moon or in cloud more.
 """
 
@@ -17,11 +17,12 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 from numpy.typing import NDArray
 
-from starfathom.advice_grid import GROUPS, Setup, Trials, group_of, load_trials, predicted, state_rate
+from starfathom.advice_grid import FEWEST_STARS, GROUPS, Setup, Trials, load_trials, predicted, state_rate
 from starfathom.classify.errors import RequestError
 
 if TYPE_CHECKING:
     from starfathom.classify.assignment import Assignment
+    from starfathom.classify.spectrum import PlainSpectrum
     from starfathom.distance import Fathoming, Request
 
 FloatArray = NDArray[np.float64]
@@ -35,7 +36,8 @@ _FULL = (3900.0, 6800.0)
 #: Advice that gains less than this of what is open is not given.
 _LEAST_SCORE = 0.04
 _COST = 0.03             # taken off a score for each doubling of the time
-_N_SAMPLES = 400
+_SAMPLES = (400, 4000)
+_LEAST_SAMPLES = 25
 _BAND_ERROR, _DUST_ERROR = 0.02, 0.03
 #: Bands worth adding, with the ones that make each needless.
 _BANDS = (("Ks", ("J", "H", "Ks")), ("V", ("V", "G")), ("B", ("B", "BP", "g")), ("I", ("I", "RP", "i", "R", "r")))
@@ -93,7 +95,7 @@ class Advice:
     stars: float = math.nan
 
     def __str__(self) -> str:
-        return f"{self.action}: {self.effect}"
+        return f"{self.action} {self.effect}" if self.kind == "none" else f"{self.action}: {self.effect}"
 
 
 @dataclass(frozen=True)
@@ -191,7 +193,8 @@ def needs_advice(a: Assignment, wanted: Wanted) -> bool:
 # The distance with hypothetical data ---------------------------------------------------------------------------------
 
 def _percent(f: Any) -> float:
-    if not hasattr(f, "percentiles"):
+    """Half the 68 % interval of a distance, per cent; NaN where too few samples carry it to say."""
+    if not hasattr(f, "percentiles") or f.n_eff < _LEAST_SAMPLES:
         return math.nan
     low, middle, high = f.percentiles["distance_pc"][1:4]
     return float(50.0 * (high - low) / middle)
@@ -283,7 +286,9 @@ def _others(a: Assignment, known: Known, base: Any, wanted: Wanted) -> list[_Opt
         value = v + float(offset[band][cell]) + (per_ebv[band] - 3.1) * ebv
         if not any(b in known.magnitudes for b in enough) and math.isfinite(value):
             added = dict(known.magnitudes) | {band: (value, _BAND_ERROR)}
-            out.append(_Option("band", f"a {band} magnitude to {_BAND_ERROR:g} mag", changes={"magnitudes": added}))
+            article = "an" if band == "I" else "a"
+            out.append(_Option("band", f"{article} {band} magnitude to {_BAND_ERROR:g} mag",
+                               changes={"magnitudes": added}))
     if known.ebv is None or known.ebv[1] > 1.5 * _DUST_ERROR:
         out.append(_Option("dust", f"a value of E(B-V) to {_DUST_ERROR:g} mag, from a map or from neighbours",
                            changes={"ebv": (max(ebv, 0.0), _DUST_ERROR)}))
@@ -293,10 +298,10 @@ def _others(a: Assignment, known: Known, base: Any, wanted: Wanted) -> list[_Opt
     held = known.parallax
     if held is None or held[1] > need:
         out.append(_Option("parallax", f"a parallax good to {need:.2g} mas",
-                           changes={"parallax": (1000.0 / parsec, need), "use_parallax": True}))
+                           changes={"parallax": (1000.0 / parsec, need)}))
     elif held[0] > 3 * held[1]:
         out.append(_Option("parallax", f"the parallax you have ({held[0]:g} ± {held[1]:g} mas), used and not only "
-                           "compared", changes={"parallax": held, "use_parallax": True}))
+                           "compared", changes={"parallax": held}))
     return out
 
 
@@ -328,17 +333,33 @@ def advise(assignment: Assignment, fathoming: Fathoming | None = None, wanted: W
     seconds = exptime_s or assignment.meta.get("exptime_s")
     seconds = float(seconds) if seconds and math.isfinite(float(seconds)) and float(seconds) > 0 else None
     options = _spectra(assignment, now, seconds) if now is not None else []
+    state = _State.of(assignment, now, trials) if now is not None else None
+    if state is not None and state.stars < FEWEST_STARS:      # nobody like it was tried: nothing to promise
+        state, options, type_open = None, [], False
     if distance_open and known is not None and known.magnitudes:
         options += _others(assignment, known, base, goal)
     if not options:
-        return []
-    state = _State.of(assignment, now, trials) if now is not None else None
+        return [_no_spectrum_helps(state)] if type_open and state is not None else []
     gains = [state.then(o.setup) if state is not None and o.setup is not None else None for o in options]
     distances = _distances(assignment, options, gains, known) if distance_open and known is not None else None
     out = [_weigh(o, g, state, None if distances is None else (distances[0], distances[k + 1]), goal,
                   type_open, distance_open) for k, (o, g) in enumerate(zip(options, gains))]
-    kept = sorted((x for x in out if x.score >= _LEAST_SCORE), key=lambda x: -x.score)
-    return _one_a_kind(kept)[:most]
+    kept = sorted((x for x in out if x.score >= _LEAST_SCORE and x.effect), key=lambda x: -x.score)
+    told = _one_a_kind(kept)[:most]
+    if type_open and state is not None and not any(x.setup for x in told):
+        told.append(_no_spectrum_helps(state))
+    return told
+
+
+def _no_spectrum_helps(state: _State) -> Advice:
+    """Said where the class is open and nothing tried would close it, so that nobody wastes a night on it."""
+    classes = rivals(state.a)
+    between = f"{', '.join(classes[:-1])} or {classes[-1]}" if len(classes) > 1 else f"{classes[0]} or not"
+    best = max(state.then(state.now.at(snr=_MOST_SNR, fwhm_angstrom=_FINEST_FWHM, range_angstrom=_FULL)).success,
+               state.success_now)
+    return Advice("none", "a better spectrum of this kind", f"would hardly settle {between}: the class comes out right "
+                  f"in {in_ten(best)} such stars even at S/N {_MOST_SNR:.0f}", 0.0, success_now=state.success_now,
+                  success_then=best, stars=state.stars)
 
 
 def _one_a_kind(found: Sequence[Advice]) -> list[Advice]:
@@ -402,6 +423,8 @@ def _distances(a: Assignment, options: Sequence[_Option], gains: Sequence[_Then 
     requests, owner, weight = [_request(a, known)], [0], [1.0]
     shares = group_shares(a)
     for k, (option, gain) in enumerate(zip(options, gains), start=1):
+        if option.kind == "parallax":
+            continue
         if gain is None:
             requests.append(_request(a, known, **(option.changes or {})))
             owner.append(k)
@@ -413,11 +436,18 @@ def _distances(a: Assignment, options: Sequence[_Option], gains: Sequence[_Then 
                                                gain.mag_err), known))
             owner.append(k)
             weight.append(float(shares[g]))
-    found = fathom_many(requests, scale=known.scale, prior=known.prior, n_samples=_N_SAMPLES, seed=0,
-                        with_budget=False, workers=1, common_groups=False)
-    percent, share = np.array([_percent(f) for f in found]), np.array(weight)
-    out = []
+    percent, share = np.full(len(requests), math.nan), np.array(weight)
+    for n_samples in _SAMPLES:       # more where too few of the samples carry the answer
+        todo = np.flatnonzero(np.isnan(percent))
+        found = fathom_many([requests[k] for k in todo], scale=known.scale, prior=known.prior, n_samples=n_samples,
+                            seed=0, with_budget=False, workers=1, common_groups=False)
+        percent[todo] = [_percent(f) for f in found]
+    out: list[float] = []
     for k in range(len(options) + 1):
+        if k and options[k - 1].kind == "parallax":      # two independent distances, weighted
+            value, error = (options[k - 1].changes or {})["parallax"]
+            out.append(1 / math.hypot(1 / out[0], value / (100 * error)))
+            continue
         mine = np.flatnonzero((np.array(owner) == k) & np.isfinite(percent))
         out.append(float(np.average(percent[mine], weights=share[mine])) if mine.size else math.nan)
     return out
@@ -436,7 +466,8 @@ def _weigh(option: _Option, gain: _Then | None, state: _State | None, distance: 
             gained.append(1 - sub_then / sub_now) if sub_now >= 1.5 else None
             told = rivals(state.a)[:2]
             what = f"separates {told[0]} from {told[1]}" if len(told) > 1 else f"finds class {told[0]} rightly"
-            words.append(f"{what} in {in_ten(then)} such stars (now {in_ten(now)})")
+            if then - now > 0.02:
+                words.append(f"{what} in {in_ten(then)} such stars (now {in_ten(now)})")
             if sub_now - sub_then > 0.15:
                 words.append(f"subtype ± {sub_now:.1f} → {sub_then:.1f}")
     elif type_open:
@@ -444,8 +475,10 @@ def _weigh(option: _Option, gain: _Then | None, state: _State | None, distance: 
     far_now, far_then = distance if distance is not None else (math.nan, math.nan)
     if distance_open and math.isfinite(far_then):
         far_then = min(far_then, far_now)
-        gained.append((far_now - far_then) / max(far_now - min(goal.distance or 0.0, far_now - 1), 1.0))
-        words.append(f"distance error {far_now:.0f} → {far_then:.0f} %")
+        gain_there = far_now - far_then if far_now - far_then >= 1 else 0.0
+        gained.append(gain_there / max(far_now - (goal.distance or 0.0), 3.0))
+        if gain_there:
+            words.append(f"distance error {far_now:.0f} → {far_then:.0f} %")
     best = float(np.mean(np.clip(gained, 0, 1))) if gained else 0.0
     score = best - _COST * math.log2(max(option.time_factor, 1.0))
     return Advice(option.kind, option.action, "; ".join(words), score, option.setup, option.time_factor,
@@ -453,14 +486,31 @@ def _weigh(option: _Option, gain: _Then | None, state: _State | None, distance: 
                   state.stars if gain is not None and state is not None else math.nan)
 
 
+def worth(assignment: Assignment, trials: Trials | None = None) -> float:
+    """By how much a better spectrum would raise the chance that the class is right, 0 to 1: for ordering stars."""
+    now = setup_of(assignment)
+    if now is None or not needs_advice(assignment, Wanted()):
+        return 0.0
+    state = _State.of(assignment, now, trials)
+    return max([state.then(o.setup).success - state.success_now for o in _spectra(assignment, now, None) if o.setup]
+               + [0.0])
+
+
+def range_of(spectrum: PlainSpectrum) -> tuple[float, float]:
+    """First and last wavelength of a spectrum that hold something, angstrom, for ``meta["range_angstrom"]``."""
+    wave = spectrum.wave_angstrom[spectrum.valid]
+    return (float(wave[0]), float(wave[-1])) if len(wave) else (math.nan, math.nan)
+
+
 def summary(found: Sequence[Advice]) -> str:
     """The best advice as one sentence for a table; "" where there is none."""
-    return f"{found[0]}." if found else ""
+    text = str(found[0]) if found else ""
+    return f"{text[:1].upper()}{text[1:]}." if text else ""
 
 
 def lines(found: Sequence[Advice]) -> list[str]:
-    """The advice as numbered lines for a terminal or a page."""
-    return [f"{k}. {x}" for k, x in enumerate(found, start=1)]
+    """The advice as sentences for a terminal or a page, best first."""
+    return [summary([x]) for x in found]
 
 
 def run_plan(types: str | None = None, fwhm_angstrom: float | None = None, wave_range: str | None = None,
@@ -471,4 +521,4 @@ def run_plan(types: str | None = None, fwhm_angstrom: float | None = None, wave_
     run(types, fwhm_angstrom=fwhm_angstrom, wave_range=wave_range, want=want, as_json=as_json, figure=figure)
 
 
-__all__ = ["Advice", "Known", "Wanted", "advise", "group_of", "lines", "needs_advice", "run_plan", "summary"]
+__all__ = ["Advice", "Known", "Wanted", "advise", "lines", "needs_advice", "range_of", "run_plan", "summary", "worth"]

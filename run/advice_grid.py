@@ -25,7 +25,8 @@ P_GROUP, STEP, STEP_ERR, ABS_MAG, ABS_MAG_ERR, ABS_MAG_OK = slice(0, 5), 5, 6, 7
 WIDEST_FWHM = 17.0
 _WIDTHS = (2.0, 3.0, 4.5, 7.0)       # of the neighbourhood, subtypes
 _STARS_WANTED = 8.0
-_FEWEST_STARS = 2.0
+#: Below so many stars like it a type is not spoken of.
+FEWEST_STARS = 2.0
 _SHRINK = 1.5                        # stars' worth of weight of the wider neighbourhood
 _CHANCE_SNR = 1.0                    # where nothing is known
 _CLASS_CHANCE, _PAIR_CHANCE = 0.25, 0.5

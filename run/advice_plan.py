@@ -17,6 +17,7 @@ from starfathom.advice_grid import (
     ABS_MAG,
     ABS_MAG_ERR,
     ABS_MAG_OK,
+    FEWEST_STARS,
     GROUPS,
     P_GROUP,
     STEP,
@@ -39,7 +40,6 @@ DEFAULT_FWHM, DEFAULT_RANGE = 5.0, (3900.0, 6800.0)
 SHOWN = (5.0, 10.0, 20.0, 40.0, 100.0)
 _SEARCHED = np.geomspace(3.0, 100.0, 181)
 TABLE_FWHM = (4.6, 6.5, 9.0, 12.5)
-_FEWEST_STARS = 2.0
 #: Types of the table over the whole diagram.
 DIAGRAM = ("B2", "B8", "A2", "A8", "F2", "F8", "G2", "G8", "K2", "K5", "M2")
 #: Columns of that table: classes told apart, or single classes for distances.
@@ -130,8 +130,8 @@ class Curve:
 
 
 def _counted(near: Near, kind: Kind) -> None:
-    if near.count < _FEWEST_STARS:
-        raise RequestError(f"{kind.name}: fewer than {_FEWEST_STARS:.0f} library stars like it could be tried, so "
+    if near.count < FEWEST_STARS:
+        raise RequestError(f"{kind.name}: fewer than {FEWEST_STARS:.0f} library stars like it could be tried, so "
                            "nothing is known of what it takes.")
 
 
@@ -347,7 +347,7 @@ def _diagram(trials: Trials, setup: Setup, goal: Wanted) -> dict[str, Any]:
             stars = min(trials.near(k.step, k.group).count for k in kinds)
             entry: dict[str, Any] = {"types": [k.name for k in kinds], "stars": round(stars, 1), "snr_needed": None,
                                      "best": None}
-            if stars >= _FEWEST_STARS:
+            if stars >= FEWEST_STARS:
                 if goal.distance is None:
                     curves = curves_of(trials, kinds)
                     reach: Callable[[Setup], float] = lambda s, c=curves: success(c, s)  # type: ignore[misc]  # noqa: E731

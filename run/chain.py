@@ -13,6 +13,7 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
+from starfathom.advice import Advice, Known, advise, lines, range_of, summary
 from starfathom.classify.errors import RequestError, SpectrumError, StarfathomError
 from starfathom.record import BatchResult
 from starfathom.targets import Target
@@ -32,6 +33,9 @@ BUDGET_COLUMNS: tuple[Column, ...] = (
     ("per_cent", "", 2, "the same as per cent of the distance"),
     ("share", "", 4, "part of the variance of the total"),
 )
+
+#: Last column of the results.
+ADVICE_COLUMN: Column = ("advice", "", None, "what would settle more, the best of what was weighed")
 
 #: Flags of a star whose type the target list, or a person at the desk, gave.
 TYPE_GIVEN = "type-given"
@@ -55,6 +59,7 @@ class RunSettings:
     medium: str | None = None
     n_samples: int = 2000
     details: bool = True
+    advice: bool = True
 
 
 def result_columns() -> tuple[Column, ...]:
@@ -64,7 +69,7 @@ def result_columns() -> tuple[Column, ...]:
 
     first: tuple[Column, ...] = (("name", "", None, "star, as the target list calls it"), *ASSIGNED)
     taken = {c[0] for c in first}
-    return (*first, *(c for c in FATHOMED if c[0] not in taken))
+    return (*first, *(c for c in FATHOMED if c[0] not in taken), ADVICE_COLUMN)
 
 
 def given_type(text: str) -> Assignment:
@@ -154,7 +159,30 @@ def _classify(targets: Sequence[Target], settings: RunSettings) -> list[Assignme
             Settings(medium=settings.medium, fwhm_angstrom=target.fwhm_angstrom, velocity_kms=target.velocity_kms)
         )
     answers = classifier.classify_many(spectra, asked)
-    return [replace(a, file=t.spectrum) for a, t in zip(answers, targets)]
+    out = []
+    for answer, target, spectrum in zip(answers, targets, spectra):
+        seen = {} if isinstance(spectrum, SpectrumError) else {"range_angstrom": range_of(spectrum)}
+        out.append(replace(answer, file=target.spectrum, meta=answer.meta | seen))
+    return out
+
+
+def advise_targets(
+    targets: Sequence[Target],
+    assignments: Sequence[Assignment],
+    fathomings: Sequence[Fathoming | str | None],
+    settings: RunSettings,
+) -> list[list[Advice]]:
+    """What would help most with each star, best first (see :func:`starfathom.advice.advise`)."""
+    if not settings.advice:
+        return [[] for _ in targets]
+    scale = _scale(settings)
+    out = []
+    for target, assignment, fathoming in zip(targets, assignments, fathomings):
+        known = Known(target.magnitudes, target.parallax, target.ebv, target.ra_deg, target.dec_deg, settings.rv,
+                      scale, settings.prior)  # fmt: skip
+        found = None if isinstance(fathoming, str) else fathoming
+        out.append(advise(assignment, found, known=known if target.magnitudes else None))
+    return out
 
 
 def fathom_targets(
@@ -217,7 +245,9 @@ def _scale(settings: RunSettings) -> Any:
     return settings.scale
 
 
-def row_of(target: Target, assignment: Assignment, fathoming: Fathoming | str | None) -> dict[str, Any]:
+def row_of(
+    target: Target, assignment: Assignment, fathoming: Fathoming | str | None, advice: Sequence[Advice] = ()
+) -> dict[str, Any]:
     """One row of the results: every column of :func:`result_columns`, numbers NaN where there is no distance."""
     row: dict[str, Any] = {
         name: math.nan if decimals is not None else "" for name, _u, decimals, _d in result_columns()
@@ -227,6 +257,7 @@ def row_of(target: Target, assignment: Assignment, fathoming: Fathoming | str | 
         row["cautions"] = fathoming
     elif fathoming is not None:
         row |= {k: v for k, v in fathoming.row().items() if k in row and k not in ("name", "file", "status")}
+    row["advice"] = summary(advice)
     return row
 
 
@@ -246,12 +277,14 @@ def budget_of(target: Target, fathoming: Fathoming | str | None) -> list[dict[st
     ]
 
 
-def detail_of(target: Target, assignment: Assignment, fathoming: Fathoming | str | None) -> dict[str, Any]:
+def detail_of(
+    target: Target, assignment: Assignment, fathoming: Fathoming | str | None, advice: Sequence[Advice] = ()
+) -> dict[str, Any]:
     """What the report and the desk show of a star beyond its row.
 
     Keys: ``name``; ``target`` (the fields of :class:`starfathom.targets.Target`); ``posterior`` (cells of at least 1e-6
     as [subtype index, class index, probability]); ``evidence`` (the fields of each criterion); ``distance_samples_pc``
-    (101 quantiles, 0 to 100 %, or None).
+    (101 quantiles, 0 to 100 %, or None); ``advice`` (sentences, best first).
     """
     from dataclasses import asdict
 
@@ -270,6 +303,7 @@ def detail_of(target: Target, assignment: Assignment, fathoming: Fathoming | str
         "posterior": cells,
         "evidence": [asdict(c) for c in assignment.evidence],
         "distance_samples_pc": quantiles,
+        "advice": lines(advice),
     }
 
 
@@ -298,10 +332,11 @@ def work_batch(number: int, targets: Sequence[Target], settings: RunSettings) ->
     """Do the whole chain for one batch."""
     assignments = assign_targets(targets, settings)
     fathomings = fathom_targets(targets, assignments, settings)
-    triples = list(zip(targets, assignments, fathomings))
+    advice = advise_targets(targets, assignments, fathomings, settings)
+    stars = list(zip(targets, assignments, fathomings, advice))
     return BatchResult(
         number,
-        rows=[row_of(*t) for t in triples],
-        budget=[b for target, _a, f in triples for b in budget_of(target, f)],
-        details=[detail_of(*t) if settings.details or t[0].group else None for t in triples],
+        rows=[row_of(*s) for s in stars],
+        budget=[b for target, _a, f, _advice in stars for b in budget_of(target, f)],
+        details=[detail_of(*s) if settings.details or s[0].group else None for s in stars],
     )

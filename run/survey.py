@@ -38,6 +38,9 @@ ALL_FORMATS_ROWS = 100_000
 ALL_FORMATS = ("ecsv", "csv", "fits", "vot", "parquet")
 STREAMED_FORMATS = ("ecsv", "parquet")
 
+#: Up to this many stars each is told what would settle more, which takes about as long as its type and distance.
+ADVICE_ROWS = 500
+
 #: How long a Dask scheduler may take to answer.
 CONNECT_SECONDS = 15
 
@@ -116,7 +119,7 @@ def run_survey(
             raise RequestError(f"{suffix} names no table format; use {', '.join(ALL_FORMATS)}.")
     n_rows = targets.check()
     size = BATCH_WITH_SPECTRA if targets.has_spectra else BATCH_TYPES_ONLY
-    settings = replace(settings, details=n_rows <= DETAIL_ROWS)
+    settings = replace(settings, details=n_rows <= DETAIL_ROWS, advice=n_rows <= ADVICE_ROWS)
     with _started(targets, run_dir, settings, n_rows, size, resume) as record:
         facts = record.facts()
         settings, size = _settings_from(facts), facts["batch_size"]

@@ -285,6 +285,8 @@ def star_block(row: Row, budget: Sequence[Row] = (), *, width: int = 80, colour:
         if shares:
             lines += _wrapped("errors", shares, width)
         lines += _caution_lines(row, said, width, colour)
+        if row.get("advice"):
+            lines += _wrapped("next", str(row["advice"]), width)
     return "\n".join(lines)
 
 

@@ -8,6 +8,7 @@ from functools import cache
 import numpy as np
 from numpy.typing import NDArray
 
+from starfathom.advice import worth
 from starfathom.classify.assignment import Assignment
 from starfathom.desk.plane import inner_set
 from starfathom.templates.subtypes import LUM_CODES, T_CODES
@@ -20,10 +21,12 @@ MagnitudeGrid = FloatArray
 
 @dataclass(frozen=True)
 class Need:
-    """``score``: the larger, the sooner one should look. ``why``: a few words."""
+    """``score``: the larger, the sooner one should look. ``why``: a few words. ``percent``: scatter of the distance
+    from the spread of types alone, NaN where there is none."""
 
     score: float
     why: str
+    percent: float = float("nan")
 
 
 def need(assignment: Assignment, magnitudes: MagnitudeGrid | None = None) -> Need:
@@ -31,8 +34,9 @@ def need(assignment: Assignment, magnitudes: MagnitudeGrid | None = None) -> Nee
 
     For a typed star the score is the scatter, in per cent of the distance, that the spread of types in the posterior
     brings (0.46 of the scatter in absolute magnitude: d ln r = 0.2 ln 10 dM), and a tenth of the share of probability
-    that the best type leaves to the others, so that equals in distance go by certainty. A star refused has no
-    distance at all and comes first; one whose file failed shows nothing and comes last.
+    that the best type leaves to the others, so that equals in distance go by certainty; and the per cent by which a
+    better spectrum would raise the chance that the class is right, since such a star can still be observed tonight. A
+    star refused has no distance at all and comes first; one whose file failed shows nothing and comes last.
     """
     if assignment.status == "failed":
         return Need(-1.0, "not readable")
@@ -53,7 +57,7 @@ def need(assignment: Assignment, magnitudes: MagnitudeGrid | None = None) -> Nee
         why = f"subtype ±{assignment.t_code_err:.1f}"
     else:
         why = "clear"
-    return Need(percent + 10.0 * left, why)
+    return Need(percent + 10.0 * left + 100.0 * worth(assignment), why, percent)
 
 
 def distance_scatter(posterior: FloatArray, magnitudes: MagnitudeGrid | None = None) -> float:

@@ -131,8 +131,8 @@ def _wanted(run: RunResult, paged: set[int]) -> str:
     rows = []
     for s in wanted:
         why = s.need.why
-        if s.need.score < 1000:
-            why += f"; its type leaves the distance open by {s.need.score:.0f} %"
+        if math.isfinite(s.need.percent):
+            why += f"; its type leaves the distance open by {s.need.percent:.0f} %"
         first = s.text_of("reason") or (s.cautions[0] if s.cautions else "")
         first = first if len(first) <= 110 else first[:first.rfind(" ", 0, 108)] + " …"
         rows.append(f'<tr><td>{_link(s, paged)}</td><td class="type">{_type(s)}</td><td>{escape(why)}'
@@ -273,6 +273,7 @@ def star_page(star: StarResult, artist: SpectrumArtist, before: StarResult | Non
         decided = None
     cautions = "".join(f"<li>{escape(c)}</li>" for c in star.cautions)
     body = (head + _section("Keep in mind", f'<ul class="cautions">{cautions}</ul>' if cautions else "")
+            + _section("What would settle it", _advice(star))
             + _section("Decided by hand", _decisions(star.decisions))
             + _section("Spectrum", artist.draw(star))
             + '<div class="pair">' + _section("Type", pictures.type_plane(said, decided) if said else "")
@@ -280,6 +281,12 @@ def star_page(star: StarResult, artist: SpectrumArtist, before: StarResult | Non
             + _section("Budget", pictures.budget_bars(star.budget)) + "</div>"
             + _section("Everything", _everything(star)))
     return _page(star.name, body)
+
+
+def _advice(star: StarResult) -> str:
+    """What would help most, best first; nothing where a person has settled the type."""
+    told = [] if star.decision is not None or star.detail is None else star.detail.get("advice", [])
+    return "<ol>" + "".join(f"<li>{escape(t)}</li>" for t in told) + "</ol>" if told else ""
 
 
 def _decisions(history: list[Decision]) -> str:
