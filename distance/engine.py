@@ -26,8 +26,8 @@ from starfathom.distance.sources import cells_of_assignment, cells_of_type, pars
 
 FloatArray = NDArray[np.float64]
 
-#: Correlation of the errors of the two routes, class and spectrum: measured as 0.35 on 70 stars of one library with good
-#: parallaxes, typed by models trained without that library.
+#: Correlation of the errors of the two routes, class and spectrum: measured as 0.35 on 70 stars of one library with
+#: good parallaxes, typed by models trained without that library.
 ROUTE_CORRELATION = 0.35
 #: Samples x stars worked on at a time; keeps the arrays in the processor's cache.
 _CHUNK = 60_000

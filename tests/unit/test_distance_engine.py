@@ -348,3 +348,37 @@ def test_exports_match():
     assert set(package.__all__) == set(package._HOME)
     with pytest.raises(AttributeError, match="nothing"):
         _ = package.nothing
+
+
+def test_scatter_has_the_tail_it_says():
+    f = fathom("K0 III", {"V": (6.0, 0.001)}, ebv=(0.0, 0.001), rv=3.1, n_samples=20000)
+    scale, cell = load_scale(), int(cell_of(50.0, 3.0))
+    width = np.hypot(np.hypot(scale.sigma[cell], scale.mean_err[cell]), scale.slope[cell] * scale.bv_scatter[cell])
+    beyond = np.mean(np.abs(f.samples["abs_mag_v"] - np.median(f.samples["abs_mag_v"])) > 2.5 * width)
+    # a Gaussian has 0.012 there; a tenth of the stars scatter two and a half times wider
+    assert 0.017 < beyond < 0.05
+
+
+def test_two_equal_routes_meet_halfway_with_their_correlation():
+    # 0.3 mag each, correlation 0.35: the mean of the two, and 0.3 sqrt((1 + 0.35)/2) = 0.2465 mag
+    source = typed(abs_mag_v=4.3, abs_mag_v_err=0.3, abs_mag_v_ok=True)
+    f = fathom(source, {"V": (8.0, 0.001)}, ebv=(0.0, 0.001), rv=3.1, scale="mamajek", n_samples=20000)
+    assert f.median("abs_mag_v") == pytest.approx(4.55, abs=0.01)
+    assert np.std(f.samples["abs_mag_v"]) == pytest.approx(0.2465, abs=0.006)
+
+
+def test_redder_is_cooler_and_the_correction_follows():
+    plain, red = (fathom("K0 V", {"V": (6.0, 0.01), "B": (6.0 + c, 0.01)}) for c in (0.816, 0.90))
+    # 0.084 mag at -0.5 per mag: 4 % cooler
+    assert red.median("teff_k") / plain.median("teff_k") == pytest.approx(np.exp(-0.5 * 0.08), abs=0.012)
+    for f, sign in ((plain, 1), (fathom("B2 V", {"V": 6.0, "B": 5.8}), -1)):
+        bc = 4.74 - 2.5 * f.samples["log_lum_lsun"] - f.samples["abs_mag_v"]
+        # a warmer K star needs less correction, a hotter B star more
+        assert sign * np.corrcoef(bc, np.log(f.samples["teff_k"]))[0, 1] > 0.9
+
+
+def test_an_odd_colour_moves_the_luminosity_only_so_far():
+    scale, cell = load_scale(), int(cell_of(55.0, 3.0))
+    f = fathom("K5 III", {"V": (1.0, 0.01), "B": (1.0 + 2.1, 0.01)}, ebv=(0.0, 0.001))
+    reach = abs(scale.slope[cell]) * 3 * scale.bv_scatter[cell]
+    assert f.median("abs_mag_v") > scale.mean[cell] - reach - 0.3
