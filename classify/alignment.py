@@ -1,11 +1,9 @@
-"""Velocity, line-spread width and the wander of the wavelength scale, all found against the same template nodes.
+"""Velocity and the wander of the wavelength scale, found against the same template nodes.
 
-Three steps, each on a batch:
+Two steps, each on a batch, with :func:`starfathom.classify.linespread.line_spread` between them:
 
 1. :func:`first_velocity`: masked least squares over shifts of +-840 km/s against some eighty typed nodes.
-2. :func:`line_spread`: which blur of the best nodes fits the star; when the star is finer than the nodes, which blur
-   of the star.
-3. :func:`wander`: velocities of overlapping chunks, smoothed by a Gaussian process. Wavelength scales of real
+2. :func:`wander`: velocities of overlapping chunks, smoothed by a Gaussian process. Wavelength scales of real
    spectrographs bend by tens of km/s between arc lines; left in, that costs a third of the luminosity error.
 """
 
@@ -31,7 +29,6 @@ _TELLURIC = ((5860.0, 5920.0), (6865.0, 6935.0), (7160.0, 7330.0))
 #: Effective number of independent pieces in a spectrum, for weighing one velocity peak against another.
 _PIECES = 120.0
 _PRIOR_KMS = 300.0
-_PIECES_HOT, _HOT_STEP = 20.0, 27.0
 
 _CHUNKS = np.array([3800.0, 4050.0, 4300.0, 4600.0, 4950.0, 5350.0, 5850.0, 6500.0, 7100.0])
 _HALF_WIDTHS = np.array([130.0, 150.0, 170.0, 190.0, 220.0, 260.0, 330.0, 400.0, 350.0])
@@ -76,7 +73,7 @@ class Nodes:
         return cls(np.array(rungs), valid, step, lum_code)
 
 
-def _parabola(chi: FloatArray, axis_values: FloatArray) -> tuple[FloatArray, FloatArray]:
+def parabola(chi: FloatArray, axis_values: FloatArray) -> tuple[FloatArray, FloatArray]:
     """Minimum of (n, s) curves by a parabola through the lowest point: its place and the curvature."""
     n, s = chi.shape
     j = np.clip(chi.argmin(axis=1), 1, s - 2)
@@ -104,13 +101,13 @@ def first_velocity(flat: FloatArray, valid: BoolArray, nodes: Nodes) -> tuple[Fl
     amplitude = np.clip(cross / np.maximum(norm, 1e-9), 0.4, 1.6)
     left = power[:, None, None] - 2 * amplitude * cross + amplitude ** 2 * norm
     left = np.maximum(left, 1e-6 * power[:, None, None] + 1e-12)
-    shifts_kms = _SEARCH_SHIFTS * 2.0 * GRID_KMS
+    shifts_kms: FloatArray = (_SEARCH_SHIFTS * 2.0 * GRID_KMS).astype(float)
     # the penalty keeps a chance peak at hundreds of km/s from beating a fit as good near rest
     score = _PIECES * np.log(left) + np.minimum((shifts_kms / _PRIOR_KMS) ** 2, 6.0)
     per_node = score.min(axis=2)
     best = np.argsort(per_node, axis=1)[:, :5]
     rows = np.arange(len(y))
-    found = np.array([_parabola(left[rows, best[:, i]], shifts_kms)[0] for i in range(best.shape[1])])
+    found = np.array([parabola(left[rows, best[:, i]], shifts_kms)[0] for i in range(best.shape[1])])
     # nodes that fit clearly worse have no say
     worse = np.take_along_axis(per_node, best, 1) - per_node.min(axis=1, keepdims=True)
     found = np.where(worse.T < 20.0, found, np.nan)
@@ -118,43 +115,6 @@ def first_velocity(flat: FloatArray, valid: BoolArray, nodes: Nodes) -> tuple[Fl
     scatter = np.nanmax(np.abs(found - velocity), axis=0)
     unexplained = left.min(axis=(1, 2)) / np.maximum(power, 1e-12)
     return velocity, scatter, best, unexplained
-
-
-def line_spread(flux: FloatArray, flat: FloatArray, valid: BoolArray, best: NDArray[np.int64], nodes: Nodes,
-                pixel_angstrom: FloatArray) -> FloatArray:
-    """FWHM (angstrom) of the line spread of (n, m) spectra at rest, from the blur that makes star and nodes agree.
-
-    ``pixel_angstrom`` (n,) is the spectrum's own sampling: spectrographs put 2 to 4 pixels on a resolution element,
-    and that is the prior, with a factor of 1.6 as its width. Among hot stars rotation widens the few lines there are,
-    so there the prior weighs more.
-    """
-    use = np.flatnonzero(nodes.valid & telluric_free(WAVE) & (WAVE > 3750) & (WAVE < 6800))[::2]
-    expected = np.log(np.clip(2.7 * pixel_angstrom, 1.0, 25.0))
-    hot = nodes.step[best[:, 0]] < _HOT_STEP
-    pieces = np.where(hot, _PIECES_HOT, _PIECES)
-
-    def settle(curves: list[FloatArray], trial: FloatArray, rows: NDArray[np.int64]) -> tuple[FloatArray, FloatArray]:
-        chi = np.maximum(np.array(curves).T, 1e-12)
-        score = pieces[rows, None] * np.log(chi) + ((np.log(trial)[None] - expected[rows, None]) / np.log(1.6)) ** 2
-        at = _parabola(score, np.arange(len(trial), dtype=float))[0]
-        return np.exp(np.interp(at, np.arange(len(trial)), np.log(trial))), score.argmin(axis=1)
-
-    weight = valid[:, use]
-    y = np.where(weight, flat[:, use] - 1.0, 0.0)
-    curves = [(np.where(weight, y - nodes.rect[f][best[:, :3]][:, :, use].mean(axis=1), 0.0) ** 2).sum(axis=1)
-              for f in range(len(LADDER))]
-    out, lowest = settle(curves, np.array(LADDER), np.arange(len(flat)))
-    fine = np.flatnonzero(lowest == 0)
-    if fine.size:   # the star is as fine as the nodes or finer: blur the star instead
-        trial = np.array([0.8, 1.1, 1.6, 2.2, 2.7, 3.2])
-        curves = []
-        mean = nodes.rect[2][best[fine, :3]][:, :, use].mean(axis=1)
-        for f in trial:
-            blurred, ok = blur(flux[fine], valid[fine], float(np.sqrt(LADDER[2] ** 2 - f ** 2)))
-            level, _ = rectify(blurred, ok)
-            curves.append((np.where(ok[:, use], level[:, use] - 1.0 - mean, 0.0) ** 2).sum(axis=1))
-        out[fine] = np.clip(settle(curves, trial, fine)[0], 0.8, 3.2)
-    return out
 
 
 def wander(flat: FloatArray, valid: BoolArray, best: NDArray[np.int64], fwhm_angstrom: FloatArray, nodes: Nodes
@@ -177,7 +137,7 @@ def wander(flat: FloatArray, valid: BoolArray, best: NDArray[np.int64], fwhm_ang
         ok = valid[:, w]
         y = np.where(ok, flat[:, w] - 1.0, 0.0)
         chi = np.array([(np.where(ok, y - mean[:, w - s], 0.0) ** 2).sum(axis=1) for s in shifts]).T
-        place, bend = _parabola(chi, shifts.astype(float))
+        place, bend = parabola(chi, shifts.astype(float))
         enough = ok.mean(axis=1) > 0.6
         variance = 6.0 * chi.min(axis=1) / np.maximum(ok.sum(axis=1), 1) / bend * GRID_KMS ** 2
         velocity[:, c] = np.where(enough, place * GRID_KMS, 0.0)

@@ -298,7 +298,8 @@ class Classifier:
         """One spectrum made ready (see :class:`Prepared`). Raises SpectrumError when it has too little to work on."""
         settings = settings or Settings()
         native = self._native(spectrum, settings)
-        b = self.prepare_batch([native], [spectrum], [settings])
+        with np.errstate(all="ignore"):
+            b = self.prepare_batch([native], [spectrum], [settings])
         scale = np.median(b.flux[0][b.valid[0]])
         level = np.where(b.level[0] > 0, b.level[0], 1.0)
         return Prepared(spectrum, WAVE, b.flux[0] / scale, b.flat[0], b.sigma[0] / level, b.valid[0],
@@ -521,7 +522,8 @@ class Classifier:
         blurred, ok = blur(spectrum[None], valid[None], kernel)
         seen = ok & prepared.valid[None]
         level = continuum(np.where(seen, blurred, 0.0), seen if seen.any() else ok)
-        return np.where(ok[0], blurred[0] / np.where(level[0] > 0, level[0], 1.0), np.nan)
+        with np.errstate(all="ignore"):
+            return np.where(ok[0], blurred[0] / np.where(level[0] > 0, level[0], 1.0), np.nan)
 
     def standards(self, t_code: float, lum_code: float, n: int = 5) -> list[str]:
         """Names of the library stars whose labels are nearest to a type."""

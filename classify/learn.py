@@ -234,7 +234,8 @@ def _fit_blend(held: _Held, lessons: Lessons, surface: Surface, loci: Loci) -> B
 
     def unpack(x: FloatArray) -> Blend:
         prior = np.array([-1.2, 0, 0, 0, x[5], 0, x[6], 0])
-        return Blend(*(float(v) for v in np.exp(x[:5])), prior, 0.0)
+        temper, abs_mag, log_g, step, criteria = (float(v) for v in np.exp(x[:5]))
+        return Blend(temper, abs_mag, log_g, step, criteria, prior, 0.0)
 
     def moments(blend: Blend) -> tuple[FloatArray, FloatArray, FloatArray]:
         p = normalise(weigh(pieces, blend))

@@ -5,8 +5,7 @@ from __future__ import annotations
 import numpy as np
 from numpy.typing import NDArray
 
-from starfathom.classify.alignment import LADDER, Nodes, telluric_free
-from starfathom.classify.alignment import _parabola as parabola
+from starfathom.classify.alignment import LADDER, Nodes, parabola, telluric_free
 from starfathom.classify.grid import WAVE, blur, rectify
 
 FloatArray = NDArray[np.float64]

@@ -178,7 +178,7 @@ def build() -> tuple[dict[str, NDArray[Any]], list[dict[str, Any]]]:
                      "parallax_mas": h.get("parallax", nan), "e_parallax_mas": h.get("e_parallax", nan),
                      "hp_mag": h.get("hp", nan), "v_mag": round(v, 3), "b_v": h.get("b_v", nan),
                      "e_b_v": h.get("e_b_v", nan), "v_i": h.get("v_i", nan)})
-    arrays = {"codes": np.array(codes, np.int16), "refs": np.array(refs, np.float32),
+    arrays: dict[str, NDArray[Any]] = {"codes": np.array(codes, np.int16), "refs": np.array(refs, np.float32),
               "grid": np.array([grid.first_angstrom, GRID_KMS, grid.size])}
     return arrays, rows
 
@@ -203,7 +203,7 @@ def write(directory: Path = HERE) -> None:
     from astropy.table import Table
 
     arrays, rows = build()
-    np.savez_compressed(directory / LIBRARY_FILE, **arrays)
+    np.savez_compressed(directory / LIBRARY_FILE, codes=arrays["codes"], refs=arrays["refs"], grid=arrays["grid"])
     table = Table(rows=rows, names=list(COLUMNS))
     for name, (unit, doc) in COLUMNS.items():
         table[name].description = doc
