@@ -351,6 +351,16 @@ def advise(assignment: Assignment, fathoming: Fathoming | None = None, wanted: W
     return told
 
 
+def weigh_spectra(assignment: Assignment, exptime_s: float | None = None, trials: Trials | None = None) -> list[Advice]:
+    """Every better spectrum that is weighed for a star, in no order, with its score for the type alone."""
+    now = setup_of(assignment)
+    if now is None or assignment.status != "typed" or assignment.posterior is None:
+        return []
+    state = _State.of(assignment, now, trials)
+    return [_weigh(o, state.then(o.setup), state, None, Wanted(0.999, None), True, False)
+            for o in _spectra(assignment, now, exptime_s) if o.setup is not None]
+
+
 def _no_spectrum_helps(state: _State) -> Advice:
     """Said where the class is open and nothing tried would close it, so that nobody wastes a night on it."""
     classes = rivals(state.a)
@@ -521,4 +531,5 @@ def run_plan(types: str | None = None, fwhm_angstrom: float | None = None, wave_
     run(types, fwhm_angstrom=fwhm_angstrom, wave_range=wave_range, want=want, as_json=as_json, figure=figure)
 
 
-__all__ = ["Advice", "Known", "Wanted", "advise", "lines", "needs_advice", "range_of", "run_plan", "summary", "worth"]
+__all__ = ["Advice", "Known", "Wanted", "advise", "lines", "needs_advice", "range_of", "run_plan", "summary",
+           "weigh_spectra", "worth"]

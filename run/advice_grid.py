@@ -173,14 +173,13 @@ class Trials:
 
         ``chance`` is the value where nothing is seen, at S/N 1; None holds the value of the poorest S/N tried.
         """
-        first = values[:1, :1, :1] if chance is None else np.full((1, 1, 1), chance)
-        lowest = np.broadcast_to(first, (*values.shape[:2], 1)) if chance is not None else values[..., :1]
+        # a rare class is found less often than by chance: then nothing seen is no better than the poorest tried
+        lowest = values[..., :1] if chance is None else np.minimum(chance, values[..., :1])
         table = np.concatenate([lowest, values], axis=-1)
         snr = np.concatenate([[_CHANCE_SNR], self.snr])
         blue, red = coverage_shares(setup.range_angstrom)
         share = np.array([blue * red, blue * (1 - red), red * (1 - blue)])
-        mixed = np.tensordot(table, share, axes=(1, 0)) + (1 - share.sum()) * (lowest[:, 0] if chance is not None
-                                                                               else table[:, 0])
+        mixed = np.tensordot(table, share, axes=(1, 0)) + (1 - share.sum()) * table[:, 0, :1]
         x = np.log(np.clip(setup.snr, snr[0], snr[-1]))
         column = np.array([np.interp(x, np.log(snr), row) for row in mixed])
         f = np.log(np.clip(setup.fwhm_angstrom, self.fwhm[0], WIDEST_FWHM))
