@@ -185,17 +185,24 @@ class Judge:
             for j, k in pairwise(dwarfs):
                 middle, both = 0.5 * (o.depth[j] + o.depth[k]), o.valid[j] & o.valid[k]
                 rows.append((*_shifted(middle, both, shift), k, j, shift))
-            for j, k in [(k, k) for k in gal] + pairs:
-                rows.append((*self._far_view(j, k, shift), count + k, count + j, shift))
+        mixed = [(j, k, shift) for shift in _NEAR_SHIFTS for j, k in [(k, k) for k in gal] + pairs]
+        if mixed:
+            rows.extend((d, v, count + k, count + j, shift)
+                        for d, v, (j, k, shift) in zip(*self._far_views(mixed), mixed))
         depth, valid, owner, partner, steps = zip(*rows)
         return _Bank.of(np.array(depth), np.array(valid), np.array(owner), np.array(partner), np.array(steps))
 
-    def _far_view(self, first: int, second: int, steps: int) -> tuple[NDArray[np.float32], BoolArray]:
-        (one, seen), (two, seen_too) = self.far.at(first, steps), self.far.at(second, steps)
-        valid = seen & seen_too
-        flux = np.where(valid, one / np.median(one[valid]) + two / np.median(two[valid]), 0.0)
-        view = view_of_coarse(flux[None], valid[None], np.zeros((1, len(flux))), np.array([10.0]))
-        return view.depth[0], view.valid[0]
+    def _far_views(self, mixed: list[tuple[int, int, int]]) -> tuple[NDArray[np.float32], BoolArray]:
+        """Views of the sum of two far examples each, shifted by coarse pixels."""
+        fluxes, masks = [], []
+        for first, second, steps in mixed:
+            (one, seen), (two, seen_too) = self.far.at(first, steps), self.far.at(second, steps)
+            both = seen & seen_too
+            masks.append(both)
+            fluxes.append(np.where(both, one / np.median(one[both]) + two / np.median(two[both]), 0.0))
+        ok = np.array(masks)
+        view = view_of_coarse(np.array(fluxes), ok, np.zeros(ok.shape), np.full(len(ok), 10.0))
+        return view.depth, view.valid
 
     @property
     def far_bank(self) -> _Bank:

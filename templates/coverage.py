@@ -81,7 +81,7 @@ def cells(library: Library) -> list[Cell]:
 def as_text(grid: list[Cell]) -> str:
     """The grid for a terminal, 80 columns: counts, ``-`` for none, ``!`` few, ``1`` one library, ``p`` no parallax."""
     lines = ["Distinct normal stars by type and luminosity class", "",
-             "          " + "".join(f"{c:>7}" for c in CLASSES) + "   total"]
+             "          " + "".join(f"{c:>6} " for c in CLASSES) + "   total"]
     names = list(dict.fromkeys(cell.types for cell in grid))
     letter = names[0][0]
     for name in names:
@@ -91,9 +91,9 @@ def as_text(grid: list[Cell]) -> str:
         row = [cell for cell in grid if cell.types == name]
         words = [("-" if not cell.stars else str(cell.stars)) + _mark(cell) for cell in row]
         lines.append(f"  {name:<8}" + "".join(f"{w:>7}" for w in words) + f"{sum(c.stars for c in row):>8}")
-    lines += ["", f"  -  none: types here are interpolated or carried over     !  fewer than {FEW} stars",
-              "  s  stars of a single library                             p  no good parallax: the",
-              "                                                              luminosity is a guess"]
+    lines += ["", f"  -  none: types here are interpolated or carried over   !  fewer than {FEW} stars",
+              "  s  stars of a single library",
+              "  p  no good parallax: the luminosity is carried over from elsewhere"]
     return "\n".join(lines)
 
 
