@@ -307,7 +307,7 @@ class Judge:
             bank = self._bank("far", reach)
             far = _chi2(y[search], w[search], bank, _STRENGTH)
             if exclude is not None:
-                self._blank_foreign(far, bank, [exclude[q] for q in search])
+                self._blank_foreign(far, bank, [exclude[int(q)] for q in search])
             best = far.argmin(axis=1)
             for q, i, row in zip(range(len(search)), best, rows[search]):
                 if far[q, i] < out["other"][row]:

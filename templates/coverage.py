@@ -3,8 +3,8 @@
 Gaps are stated, not filled from elsewhere. The Pickles atlas and the SDSS star templates were looked at: the models
 already type their M dwarfs within 1 subtype of the label (Pickles M2, M4, M5 V: 0.1, -0.4, -0.3), so nothing is missing
 there; the atlas spectra of other types are means of several stars at low resolution and lie 1.5 subtypes (68 %) from
-the models, their labels being ranges or whole subtypes; and the SDSS templates named O, O/B and B look like hot subdwarfs and a
-DB white dwarf. Kept out, both serve as an independent check. (No model was trained with them to compare.)
+the models, their labels being ranges or whole subtypes; and the SDSS templates named O, O/B and B look like hot subdwarfs and
+a DB white dwarf. Kept out, both serve as an independent check. (No model was trained with them to compare.)
 """
 
 from __future__ import annotations
