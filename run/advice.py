@@ -512,15 +512,26 @@ def range_of(spectrum: PlainSpectrum) -> tuple[float, float]:
     return (float(wave[0]), float(wave[-1])) if len(wave) else (math.nan, math.nan)
 
 
+#: What an observer can do with the telescope.
+_AT_TELESCOPE = ("exposure", "resolution", "range", "band", "none")
+
+
+def _sentence(x: Advice) -> str:
+    text = str(x)
+    return f"{text[:1].upper()}{text[1:]}."
+
+
 def summary(found: Sequence[Advice]) -> str:
-    """The best advice as one sentence for a table; "" where there is none."""
-    text = str(found[0]) if found else ""
-    return f"{text[:1].upper()}{text[1:]}." if text else ""
+    """The best advice as a sentence for a table, and the best for the telescope where that is another; "" for none."""
+    told = list(found[:1])
+    if told and told[0].kind not in _AT_TELESCOPE:
+        told += [x for x in found if x.kind in _AT_TELESCOPE][:1]
+    return " ".join(_sentence(x) for x in told)
 
 
 def lines(found: Sequence[Advice]) -> list[str]:
     """The advice as sentences for a terminal or a page, best first."""
-    return [summary([x]) for x in found]
+    return [_sentence(x) for x in found]
 
 
 def run_plan(types: str | None = None, fwhm_angstrom: float | None = None, wave_range: str | None = None,

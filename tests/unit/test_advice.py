@@ -270,6 +270,16 @@ def test_bands_one_has_are_not_proposed_and_a_good_parallax_is_pointed_at() -> N
     assert told[0].action.startswith("the parallax you have (5 ± 0.05 mas)")
 
 
+def test_what_the_telescope_can_do_is_told_beside_a_parallax() -> None:
+    a = advice.Advice("parallax", "a parallax good to 1 mas", "distance error 30 → 10 %", 0.9)
+    b = advice.Advice("dust", "a value of E(B-V)", "distance error 30 → 25 %", 0.3)
+    c = advice.Advice("band", "a Ks magnitude", "distance error 30 → 27 %", 0.1)
+    assert advice.summary([a, b, c]) == (
+        "A parallax good to 1 mas: distance error 30 → 10 %. A Ks magnitude: distance error 30 → 27 %.")
+    assert advice.summary([c, a]) == "A Ks magnitude: distance error 30 → 27 %."
+    assert advice.summary([]) == ""
+
+
 def test_distance_already_good_enough_leaves_only_the_type() -> None:
     bands = {"V": (9.0, 0.02), "B": (9.95, 0.02)}
     a = typed({"V": 0.99, "IV": 0.01}, spread=0.5, snr=80.0)
