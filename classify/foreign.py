@@ -51,6 +51,8 @@ RED = np.flatnonzero((COARSE_WAVE > 6600.0) & (COARSE_WAVE < 9150.0) & telluric_
 _RATIO = 0.9
 #: ... by at least this much chi-squared.
 _GAIN = 12.0
+#: Chi-squared a pixel within which the example of a hot subdwarf fits by itself.
+_RELATION_FITS = 1.5
 #: A pair of stars is sought above this chi-squared a pixel of the nearest star, and is flagged ``composite`` when it
 #: comes below this share of it, by at least this much, and below this share of the nearest foreign example.
 _PAIR_ABOVE, _PAIR_RATIO, _PAIR_GAIN, _PAIR_OTHER = 0.6, 0.55, 100.0, 0.4
@@ -413,7 +415,11 @@ def decide(answer: Assignment, verdict: Verdict, index: int, view: View, unexpla
         words = (f"two stars rather than one: {pair.first} and {pair.second} together (share of the first "
                  f"{100 * pair.share:.0f} % at 5200 A) fit {star / pair.chi2:.1f} times better than any single star")
         return replace(answer, flags=(*answer.flags, "composite"), notes=(*answer.notes, words))
-    if other < _RATIO * star and star - other > _GAIN:
+    # a hot subdwarf is a near relation of O and B stars, which the library has few of: its example must fit by itself
+    near_relation = verdict.kind[index] == "hot subdwarf" and other > _RELATION_FITS * pixels and other > 0.5 * star
+    if near_relation and other < _RATIO * star:
+        answer = replace(answer, flags=tuple(dict.fromkeys((*answer.flags, "kind-doubtful"))))
+    elif other < _RATIO * star and star - other > _GAIN:
         return _refuse(answer, verdict.kind[index], _other_type(verdict, index),
                        _fits_better(verdict, index, star / pixels, other / pixels))
     cool = verdict.star_label[index].startswith(("K", "M")) and other > 1.3 * star      # gaps between TiO bands

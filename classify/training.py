@@ -96,9 +96,10 @@ def lessons_from(library: Library, *, vetted: bool = True) -> Lessons:
     normal = (c["kind"] == "normal") | hot_emission
     typed = normal & np.isfinite(step) & np.isfinite(lum)
     trust = np.where(typed, np.where(c["doubtful"], 0.5, 1.0), 0.0)
-    # a supergiant or dwarf label that the published gravity contradicts outright is not used
+    # a label that the published gravity contradicts outright is not used
     with np.errstate(invalid="ignore"):
         contradicted = ((lum > 4.4) & (c["log_g"] < 3.0)) | ((lum < 3.4) & (c["log_g"] > 4.35) & (step > 30))
+        contradicted |= (c["log_g"] > 4.9) & (step < 30)       # a hot subdwarf under a B label
     trust = np.where(contradicted & vetted, 0.0, trust)
     steady = steady_steps(step, c["teff_k"], c["log_g"], c["fe_h"], typed) if vetted else step.copy()
     parallax, error = c["parallax_mas"], c["e_parallax_mas"]
