@@ -417,9 +417,7 @@ def decide(answer: Assignment, verdict: Verdict, index: int, view: View, unexpla
         return replace(answer, flags=(*answer.flags, "composite"), notes=(*answer.notes, words))
     # a hot subdwarf is a near relation of O and B stars, which the library has few of: its example must fit by itself
     near_relation = verdict.kind[index] == "hot subdwarf" and other > _RELATION_FITS * pixels and other > 0.5 * star
-    if near_relation and other < _RATIO * star:
-        answer = replace(answer, flags=tuple(dict.fromkeys((*answer.flags, "kind-doubtful"))))
-    elif other < _RATIO * star and star - other > _GAIN:
+    if other < _RATIO * star and star - other > _GAIN and not near_relation:
         return _refuse(answer, verdict.kind[index], _other_type(verdict, index),
                        _fits_better(verdict, index, star / pixels, other / pixels))
     cool = verdict.star_label[index].startswith(("K", "M")) and other > 1.3 * star      # gaps between TiO bands
