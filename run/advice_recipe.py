@@ -36,11 +36,11 @@ FloatArray = NDArray[np.float64]
 FWHM_ANGSTROM = (4.6, 6.5, 12.5)
 #: Stretches observed, angstrom: all of it, the blue, the green and red.
 COVERAGES = ((3850.0, 6800.0), (3850.0, 4900.0), (4900.0, 6800.0))
-SNR_PER_ANGSTROM = (5.0, 12.0, 30.0, 100.0)
+SNR_PER_ANGSTROM = (2.5, 5.0, 10.0, 20.0, 40.0, 100.0)
 DATA_FILE = Path(__file__).parent / "data" / "advice.npz"
 _GROUP_COLUMNS = ((0, 1, 2, 3), (4,), (5,), (6,), (7,))
-_WANTED = 8              # stars of one letter and class
-_BATCH = 32
+_WANTED = 12             # stars of one letter and class
+_BATCH = 24
 _SEED = 20260
 
 
