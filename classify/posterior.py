@@ -92,9 +92,10 @@ def best_type(posterior: FloatArray) -> tuple[int, int]:
     j = max(group, key=lambda c: float(by_class[c]))
     given = posterior[:, list(group)].sum(axis=1)
     mean = float(given @ STEPS / given.sum())
-    # a seldom used half is printed only when the mean stands close to it
-    off = np.abs(STEPS - mean) + np.where(USAGE < 0.2, 0.3, np.where(USAGE < 1, 0.1, 0.0))
-    return int(np.argmin(off)), j
+    # of the subtypes about the mean the most probable, so that a half is printed only where halves are in use
+    near = np.flatnonzero(np.abs(STEPS - mean) <= 0.55)
+    share = given[near] / _CELL_WIDTH[near] * np.exp(-0.5 * ((STEPS[near] - mean) / 0.25) ** 2)
+    return int(near[share.argmax()]), j
 
 
 def set_score(posterior: FloatArray, i: int, j: int) -> float:
