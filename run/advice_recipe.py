@@ -5,7 +5,8 @@
 Stars are injected into a classifier that has learned nothing of them: the STELIB library is left out as a whole, and
 so is every injected star by its HIP number. First come the STELIB spectra of stars that MILES has too: another
 instrument's spectra of left-out stars, so what differs between instruments is in the count. Where these are few, MILES
-stars of the same kind are added, never more than a third of those that MILES has. STELIB stars that are not in MILES
+stars of the same kind are added, never more than a third of those that MILES has; a second lot of MILES stars is left
+out and injected in the same way. STELIB stars that are not in MILES
 are injected nowhere: they are kept for testing the predictions.
 
 Every star is seen with each line spread and coverage at a rising S/N, the noise of the poorer spectrum being part of
@@ -39,7 +40,8 @@ COVERAGES = ((3850.0, 6800.0), (3850.0, 4900.0), (4900.0, 6800.0))
 SNR_PER_ANGSTROM = (2.5, 5.0, 10.0, 20.0, 40.0, 100.0)
 DATA_FILE = Path(__file__).parent / "data" / "advice.npz"
 _GROUP_COLUMNS = ((0, 1, 2, 3), (4,), (5,), (6,), (7,))
-_WANTED = 12             # stars of one letter and class
+_WANTED = 12             # stars of one letter and class a lot
+_LOTS = 2
 _BATCH = 24
 _SEED = 20260
 
@@ -49,18 +51,26 @@ def group_index(lum_code: FloatArray) -> NDArray[np.int64]:
     return np.digitize(np.asarray(lum_code, float), (1.8, 2.5, 3.5 + 1e-6, 4.5))
 
 
-def chosen_stars(library: Library) -> NDArray[np.int64]:
-    """Rows of the library to inject, by the rule above."""
+def chosen_stars(library: Library) -> list[NDArray[np.int64]]:
+    """Rows of the library to inject, by the rule above: several lots, each left out together."""
+    lots: list[NDArray[np.int64]] = []
+    for lot in range(_LOTS):
+        lots.append(_lot(library, np.concatenate([np.zeros(0, np.int64), *lots]), with_stelib=lot == 0))
+    return lots
+
+
+def _lot(library: Library, used: NDArray[np.int64], with_stelib: bool) -> NDArray[np.int64]:
+    """One lot: the STELIB stars if asked for, and MILES stars not ``used`` before."""
     c = library.catalogue
     window = (WAVE > 3900) & (WAVE < 6800)
     typed = (c["kind"] == "normal") & np.isfinite(c["lum_code"]) & np.isfinite(c["t_code"]) & (c["hip"] > 0)
     typed &= library.valid[:, window].mean(axis=1) >= 0.95
     miles, stelib = typed & (c["library"] == "miles"), typed & (c["library"] == "stelib")
     known = set(c["hip"][c["library"] == "miles"].tolist())
-    first = np.flatnonzero(stelib & np.isin(c["hip"], list(known)))
+    first = np.flatnonzero(stelib & np.isin(c["hip"], list(known))) if with_stelib else np.zeros(0, np.int64)
     own = set(c["hip"][first].tolist())
     in_stelib = set(c["hip"][c["library"] == "stelib"].tolist())
-    spare = miles & ~np.isin(c["hip"], list(in_stelib))
+    spare = miles & ~np.isin(c["hip"], list(in_stelib)) & ~np.isin(np.arange(len(c["hip"])), used)
     letter, group = (c["t_code"] // 10).astype(float), group_index(c["lum_code"])
     rows = list(first)
     for ell in range(7):
@@ -74,7 +84,7 @@ def chosen_stars(library: Library) -> NDArray[np.int64]:
             if more > 0 and len(of):
                 pick = np.unique(np.linspace(0, len(of) - 1, min(more, len(of)) + 2)[1:-1].round().astype(int))
                 rows += list(of[pick])
-    return np.array(rows)
+    return np.array(rows, np.int64)
 
 
 def noise_ladder(rng: np.random.Generator, size: int, snr: tuple[float, ...]) -> FloatArray:
@@ -139,13 +149,15 @@ def build(path: Path = DATA_FILE) -> None:
     """Inject and write the file."""
     library = load_library()
     c = library.catalogue
-    rows = chosen_stars(library)
-    hips = tuple(sorted({int(h) for h in c["hip"][rows]}))
-    print(f"{len(rows)} stars, {int((c['library'][rows] == 'stelib').sum())} of them from STELIB", flush=True)
-    classifier = Classifier.load(("stelib",), hips)
-    folder = _cache_dir().parent / "advice" / _recipe_fingerprint()
-    folder.mkdir(parents=True, exist_ok=True)
-    found = inject(classifier, library, rows, folder)
+    parts = []
+    lots = chosen_stars(library)
+    for number, lot in enumerate(lots):
+        print(f"lot {number}: {len(lot)} stars, {int((c['library'][lot] == 'stelib').sum())} from STELIB", flush=True)
+        folder = _cache_dir().parent / "advice" / f"{_recipe_fingerprint()}-{number}"
+        folder.mkdir(parents=True, exist_ok=True)
+        classifier = Classifier.load(("stelib",), tuple(sorted({int(h) for h in c["hip"][lot]})))
+        parts.append(inject(classifier, library, lot, folder))
+    rows, found = np.concatenate(lots), np.concatenate(parts)
     lessons = lessons_from(library)
     facts: dict[str, Any] = {
         "step": step_of(c["t_code"][rows]).astype(np.float32), "lum_code": c["lum_code"][rows].astype(np.float32),

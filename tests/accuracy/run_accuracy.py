@@ -361,6 +361,7 @@ def main() -> None:
     extra("foreign", "Not normal stars")
     extra("lines", "Lines")
     extra("distance", "Distances")
+    extra("advice", "What would settle it")
     say(f"\nTook {(time.time() - start) / 60:.0f} minutes.")
     (HERE / "RESULTS.md").write_text(out.getvalue())
 
