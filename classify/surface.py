@@ -32,6 +32,9 @@ CLASS_AT = np.array([0.6, *LUM_CODES[1:]])
 BANDS = (-9.0, 14.0, 26.0, 37.0, 47.0, 56.0, 90.0)
 #: Misfit of a pixel that no component describes: library noise and what differs between instruments.
 FLOOR = 0.008
+#: Degrees of freedom of the multivariate Student's t that stands for the scatter: a star that lies far from every node
+#: (an odd instrument, an odd star) must not be drawn to whatever type scatters most.
+TAIL = 20.0
 
 
 @dataclass(frozen=True)
@@ -192,6 +195,9 @@ def _match_rows(surface: Surface, use: NDArray[np.int64], flat: FloatArray, vali
     band_of = np.clip(np.searchsorted(BANDS, STEPS) - 1, 0, len(BANDS) - 2)
     # a first look, scatter ignored, tells which temperature bands can matter at all
     all_z = surface.nodes.reshape(-1, k)
+    # what no combination of components can fit is the same for every node and has no say
+    rest = yy - np.einsum("ni,ni->n", b, np.linalg.solve(g + 1e-6 * np.trace(g, axis1=1, axis2=2)[:, None, None]
+                                                         / k * np.eye(k), b[..., None])[..., 0])
     bend = np.array([np.einsum("zi,zi->z", all_z @ one, all_z) for one in g])
     rough = (bend - 2 * b @ all_z.T).reshape(r, *log_shape(surface))
     centre = band_of[rough.min(axis=2).argmin(axis=1)]
@@ -214,7 +220,8 @@ def _match_rows(surface: Surface, use: NDArray[np.int64], flat: FloatArray, vali
         z = surface.nodes[inside].reshape(-1, k)
         quad = (yy[rows] - np.einsum("ni,nij,nj->n", b[rows], m, b[rows]))[:, None] - 2 * h_vec @ z.T
         quad += np.einsum("nzj,zj->nz", z[None] @ h_mat, z)
-        value = -0.5 * quad - 0.5 * (np.linalg.slogdet(scatter)[1] + np.linalg.slogdet(total)[1])[:, None]
+        value = -0.5 * (TAIL + k) * np.log1p(np.maximum(quad - rest[rows, None], 0.0) / TAIL)
+        value -= 0.5 * (np.linalg.slogdet(scatter)[1] + np.linalg.slogdet(total)[1])[:, None]
         out[np.ix_(rows, inside)] = value.reshape(len(rows), len(inside), -1)
         top = value.argmax(axis=1)
         peak = value[np.arange(len(rows)), top]
