@@ -5,8 +5,8 @@
 Stars are injected into a classifier that has learned nothing of them: the STELIB library is left out as a whole, and
 so is every injected star by its HIP number. First come the STELIB spectra of stars that MILES has too: another
 instrument's spectra of left-out stars, so what differs between instruments is in the count. Where these are few, MILES
-stars of the same kind are added, never more than a third of those that MILES has; a second lot of MILES stars is left
-out and injected in the same way. STELIB stars that are not in MILES
+stars of the same kind are added, never more than a third of those that MILES has (``_LOTS`` = 2 leaves out and
+injects a second lot of them in the same way, at twice the time). STELIB stars that are not in MILES
 are injected nowhere: they are kept for testing the predictions.
 
 Every star is seen with each line spread and coverage at a rising S/N, the noise of the poorer spectrum being part of
@@ -41,7 +41,7 @@ SNR_PER_ANGSTROM = (2.5, 5.0, 10.0, 20.0, 40.0, 100.0)
 DATA_FILE = Path(__file__).parent / "data" / "advice.npz"
 _GROUP_COLUMNS = ((0, 1, 2, 3), (4,), (5,), (6,), (7,))
 _WANTED = 12             # stars of one letter and class a lot
-_LOTS = 2
+_LOTS = 1
 _BATCH = 24
 _SEED = 20260
 
