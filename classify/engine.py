@@ -43,6 +43,9 @@ _VELOCITY_LIMIT_KMS = 450.0
 _AIR_VACUUM_KMS = 83.5
 _METAL_WEAK = -0.8           # [Fe/H] below which the flag is set; the regression is good to 0.1 dex there
 _BATCH = 32
+_EDGE_ANGSTROM = 100.0       # beside a long gap: less than two widths of the smooth that stands for the continuum
+_GAP_ANGSTROM = 50.0
+_PASSES = 2                  # of the match of partly covered spectra
 
 
 @dataclass(frozen=True)
@@ -378,19 +381,24 @@ class Classifier:
             flux[q], ok[q] = blur(batch.flux[rows][q], batch.valid[rows][q], float(w))
         flat, level = rectify(flux, ok)
         sigma = batch.sigma[rows] / np.where(np.abs(level) > 0, np.abs(level), 1.0)
-        f, v, s = flat[:, PIXELS], ok[:, PIXELS], sigma[:, PIXELS]
-        found = match(model.surface, f, v, s)
+        f, v, s = flat[:, PIXELS], ok[:, PIXELS].copy(), sigma[:, PIXELS]
         partial = np.flatnonzero(v.mean(axis=1) < 0.985)
+        # Next to a long gap the pseudo-continuum is one-sided and follows the slope of the flux: leave that out.
         if partial.size:
-            # a pseudo-continuum over part of the range differs from the library's over all of it: give the templates'
-            # own smooth over the same pixels back to the star, and match again
+            v[partial] &= ~_beside_gaps(ok[partial])[:, PIXELS]
+        found = match(model.surface, f, v, s)
+        if not partial.size:
+            return found, f, v
+        # A pseudo-continuum over part of the range differs from the library's over all of it: give the templates' own
+        # smooth over the same pixels back to the star, and match again.
+        first = f
+        for _ in range(_PASSES):
             full = np.ones((partial.size, len(WAVE)))
             full[:, PIXELS] = found.level[partial]
-            again, _ = rectify(full, np.broadcast_to(_IN_PIXELS, full.shape))
             mask = ok[partial] & _IN_PIXELS
-            smooth = continuum(np.where(mask, again, 0.0), mask)
-            f = f.copy()
-            f[partial] = np.where(v[partial], (f[partial] * smooth[:, PIXELS]), 1.0)
+            smooth = continuum(np.where(mask, full, 0.0), mask)
+            f = first.copy()
+            f[partial] = np.where(v[partial], first[partial] * smooth[:, PIXELS], 1.0)
             second = match(model.surface, f[partial], v[partial], s[partial])
             merged = {}
             for name in ("log_like", "components", "spread", "chi2", "noise_share", "level"):
@@ -438,7 +446,7 @@ class Classifier:
             code = float(code_of[q])
             ok_mag = self._mag_valid(model, found.components[q], p[q], step[q])
             flags: list[str] = []
-            share = float(valid[q][CORE].mean())
+            share = float(batch.valid[i][PIXELS][CORE].mean())
             if share < 0.9:
                 flags.append("partial-coverage")
             if not batch.velocity_given[i] and abs(batch.velocity_kms[i]) > _VELOCITY_LIMIT_KMS:
@@ -548,6 +556,19 @@ _IN_PIXELS[PIXELS] = True
 _SNR_WINDOWS = ((4400.0, 4600.0), (4900.0, 5100.0), (5300.0, 5600.0), (4000.0, 4200.0), (6100.0, 6400.0),
                 (6600.0, 6800.0), (7000.0, 7300.0), (3540.0, 9300.0))
 _WINDOW_PIXELS = [(np.flatnonzero((WAVE > lo) & (WAVE < hi)), lo, hi) for lo, hi in _SNR_WINDOWS]
+
+
+def _beside_gaps(valid: BoolArray) -> BoolArray:
+    """Pixels (n, m) within ``_EDGE_ANGSTROM`` of a stretch of ``_GAP_ANGSTROM`` without data."""
+    per_pixel = PIXEL_ANGSTROM
+    out = np.zeros_like(valid)
+    for i, row in enumerate(valid):
+        edges = np.flatnonzero(np.diff(np.concatenate([[True], row, [True]]).astype(np.int8)))
+        for start, stop in zip(edges[::2], edges[1::2]):           # runs of invalid pixels
+            if per_pixel[start:stop].sum() > _GAP_ANGSTROM:
+                lo, hi = WAVE[start] - _EDGE_ANGSTROM, WAVE[stop - 1] + _EDGE_ANGSTROM
+                out[i] |= (WAVE > lo) & (WAVE < hi)
+    return out
 
 
 def _signal_to_noise(flux: FloatArray, sigma: FloatArray, valid: BoolArray

@@ -157,3 +157,13 @@ def test_the_public_function_takes_specutils_and_plain_spectra():
     a = classify(spectrum)
     b = classify(spectrum.to_specutils())
     assert a.mk_type == b.mk_type
+
+
+@pytest.mark.parametrize("start", [3650.0, 3700.0, 3800.0, 3900.0, 4000.0])
+def test_where_a_spectrum_begins_does_not_change_its_type(classifier, start):
+    """The pseudo-continuum of an A star next to its first pixel is not that of the library, which begins at 3541 A."""
+    whole, step = star("A1V")
+    cut, _ = star("A1V", window=(start, 7000.0))
+    a, b = (classifier.classify_one(s, Settings(fwhm_angstrom=2.5)) for s in (whole, cut))
+    assert abs(float(step_of(a.t_code)) - float(step_of(b.t_code))) < 1.0
+    assert abs(float(step_of(b.t_code)) - step) < 2.5
