@@ -92,7 +92,7 @@ def _far_row(wave: NDArray[np.float64], flux: NDArray[np.float64]) -> NDArray[np
     return np.where(inside & (mean > 0), mean / np.median(mean[inside]), 0.0).astype(np.float32)
 
 
-def build() -> dict[str, NDArray[Any]]:
+def build() -> dict[str, Any]:
     """The arrays of the shipped file."""
     library = load_library()
     c = library.catalogue
