@@ -29,6 +29,8 @@ FloatArray = NDArray[np.float64]
 #: Correlation of the errors of the two routes, class and spectrum: measured as 0.35 on 70 stars of one library with
 #: good parallaxes, typed by models trained without that library.
 ROUTE_CORRELATION = 0.35
+#: Largest E(B-V) in mag that makes sense as a prior.
+MAX_EBV = 20.0
 #: Samples x stars worked on at a time; keeps the arrays in the processor's cache.
 _CHUNK = 60_000
 #: Where a normal distribution has the percentiles kept.
@@ -96,6 +98,8 @@ def prepare(request: Request) -> tuple[Star, Any]:
     ebv = _pair(request.ebv, "E(B-V)", 0.03)
     if ebv is not None and ebv[0] < 0:
         raise RequestError(f"E(B-V) = {ebv[0]:g} as a prior is negative; dust does not make a star bluer.")
+    if ebv is not None and ebv[0] > MAX_EBV:
+        raise RequestError(f"E(B-V) = {ebv[0]:g} as a prior is above {MAX_EBV:g} mag, behind which no star is typed.")
     parallax = None
     if request.parallax is not None:
         parallax = check_parallax(request.parallax)

@@ -12,6 +12,9 @@ from starfathom.classify.errors import RequestError
 #: Inputs of the Gaia DR3 zero point (Lindegren et al. 2021 A&A 649 A4), as the archive names them.
 GAIA_INPUTS = ("phot_g_mean_mag", "nu_eff_used_in_astrometry", "pseudocolour", "ecl_lat", "astrometric_params_solved")
 
+#: No star but the Sun has a larger one (Proxima: 768 mas).
+MAX_PARALLAX_MAS = 1000.0
+
 
 def gaia_zero_point_mas(inputs: Mapping[str, Any]) -> float:
     """Parallax zero point in mas (to be subtracted) of one Gaia DR3 star, by the public package gaiadr3-zeropoint.
@@ -55,6 +58,8 @@ def check_parallax(parallax: Any) -> tuple[float, float]:
         raise RequestError(f"The parallax is {parallax!r}; give value and error in mas, such as (5.9, 0.3).") from None
     if not (np.isfinite(value) and np.isfinite(error)):
         raise RequestError(f"The parallax is {parallax!r}; both value and error must be finite, in mas.")
+    if abs(value) > MAX_PARALLAX_MAS:
+        raise RequestError(f"The parallax is {value:g} mas, beyond that of the nearest star; give it in mas.")
     if error <= 0:
         raise RequestError(f"The parallax error is {error:g} mas; it must be greater than zero.")
     return value, error

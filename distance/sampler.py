@@ -276,6 +276,12 @@ def draw(stars: list[Star], scale: Scale, prior: str, n_samples: int, seed: int)
     distance = 10 ** (0.2 * modulus + 1)
     log_w = log_w + log_sum + evidence
     log_w = log_w + priors.log_prior(prior, distance, sin_b, step)
+    # with no colour the excess is the prior's alone, drawn where the star would stand undimmed: hold it to the dust
+    # there is where the star then comes to stand, or a thick cloud would put it inside the Local Bubble
+    blind = (kk < 1e-9) & ~own_prior & np.array([s.ebv_measured is None for s in stars])[:, None]
+    if blind.any():
+        there, drawn = (dust.log_density(ebv, d, sin_b) for d in (distance, d_guess))
+        log_w = log_w + np.where(blind, np.minimum(there - drawn, 0.0), 0.0)
 
     # --- equal weights
     top = log_w.max(axis=1, keepdims=True)

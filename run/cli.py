@@ -311,6 +311,8 @@ def desk(
     """Check types by hand, in the browser."""
     from starfathom.desk import serve
 
+    if not 0 <= port <= 65535:
+        raise RequestError(f"--port {port}: give a number from 0 to 65535; 0 takes a free one.")
     serve(files, port, not no_browser)
 
 
@@ -345,6 +347,11 @@ def distance(
     from starfathom.classify.mktype import MKType
     from starfathom.distance import Photometry, fathom
 
+    _check_numbers(seed, rv)
+    if (ra is None) != (dec is None):
+        raise RequestError("--ra and --dec make a position together; give both, in degrees.")
+    if ra is not None and dec is not None and not (math.isfinite(ra) and math.isfinite(dec)):
+        raise RequestError(f"--ra {ra:g} --dec {dec:g}: is not on the sky; give degrees, ICRS.")
     magnitudes = dict(_magnitude(text) for text in mag or [])
     if not magnitudes:
         raise RequestError("--mag is missing: a distance needs at least one magnitude, such as --mag V=7.31,0.01.")
@@ -450,8 +457,7 @@ def run(
     from starfathom.chain import RunSettings
     from starfathom.targets import TargetList
 
-    if seed < 0:
-        raise RequestError(f"--seed {seed}: give a whole number from 0 up.")
+    _check_numbers(seed, rv)
     settings = RunSettings(
         seed=seed,
         scale=scale,
@@ -475,6 +481,14 @@ def run(
     )
     if failed:
         raise typer.Exit(1)
+
+
+def _check_numbers(seed: int, rv: float | None) -> None:
+    """What a run and a single distance both need of their numbers."""
+    if seed < 0:
+        raise RequestError(f"--seed {seed}: give a whole number from 0 up.")
+    if rv is not None and not 2.0 <= rv <= 6.0:
+        raise RequestError(f"--rv {rv:g}: is outside 2 to 6, where extinction curves are known.")
 
 
 def _check_names(scale: str | None, prior: str | None) -> None:

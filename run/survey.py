@@ -7,6 +7,7 @@ the settings. Who does a batch, in which order, how often it had to be tried: no
 from __future__ import annotations
 
 import os
+import re
 import threading
 from collections import deque
 from collections.abc import Callable, Iterable, Iterator, Mapping, Sequence
@@ -388,6 +389,8 @@ def on_dask(jobs: Iterator[Job], work: Work, settings: RunSettings, address: str
         raise RequestError(
             "--scheduler needs Dask, which is not installed; install it with: pip install 'starfathom[survey]'."
         ) from fault
+    if not re.fullmatch(r"[a-z]+://.+:\d+", address):  # Dask itself would print more than a sentence
+        raise RequestError(f"--scheduler {address}: is no address; give one such as tcp://127.0.0.1:8786.")
     try:
         client = Client(address, timeout=CONNECT_SECONDS, set_as_default=False)
     except (OSError, ValueError, TimeoutError) as fault:

@@ -111,6 +111,8 @@ class TargetList:
             self.all_columns, self._units = self._reader.head()
         except RequestError:
             raise
+        except UnicodeDecodeError as fault:
+            raise RequestError(f"{self.path}: is not text in UTF-8; save the list as UTF-8.") from fault
         except Exception as fault:
             raise RequestError(f"{self.path}: cannot be read as a table ({_first_line(fault)}).") from fault
         self._columns = self._recognise()
@@ -210,6 +212,8 @@ class TargetList:
                 start += size
         except RequestError:
             raise
+        except UnicodeDecodeError as fault:
+            raise RequestError(f"{self.path}: is not text in UTF-8; save the list as UTF-8.") from fault
         except Exception as fault:
             raise RequestError(f"{self.path}: cannot be read beyond row {start} ({_first_line(fault)}).") from fault
 

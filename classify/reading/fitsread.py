@@ -305,6 +305,13 @@ def _is_wave(row: FloatArray) -> bool:
     )
 
 
+#: Columns (lower case, no underscores) that only the tables of these surveys have together.
+_SURVEY_COLUMNS = {
+    "SDSS": {"loglam", "flux", "ivar", "andmask"},
+    "LAMOST": {"wavelength", "flux", "ivar", "andmask", "ormask"},
+}
+
+
 # --- binary tables --------------------------------------------------------------------------------------------------
 
 
@@ -353,6 +360,12 @@ def _from_table(hdu: Hdu, units: list[Hdu], request: Request) -> RawSpectrum | t
         found = hints.text_medium(f"wavelength {wave.name} {wave.unit}".replace("_", " "))
         if found != "unknown":
             raw.medium, raw.medium_source = found, f"column name {wave.name}"
+        elif hints.medium_of([u.header for u in units])[0] == "unknown":
+            # survey tables cut out of their file keep their columns and lose the header that names the survey
+            have = {c.name.lower().replace("_", "") for c in all_columns}
+            for survey, columns in _SURVEY_COLUMNS.items():
+                if columns <= have:
+                    raw.medium, raw.medium_source = "vacuum", f"{survey} spectra are in vacuum, by the columns"
     _wdisp(raw, hdu, all_columns)
     return raw
 

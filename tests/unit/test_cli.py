@@ -378,3 +378,38 @@ def test_the_templates_commands_are_there(capsys: pytest.CaptureFixture[str]) ->
     assert call("templates", "--help") == 0
     words = capsys.readouterr().out.split()
     assert {"coverage", "show", "add", "check"} <= set(words)
+
+
+@pytest.mark.parametrize(
+    ("arguments", "word"),
+    [
+        (("distance", "--type", "G2 V", "--mag", "V=10", "--seed", "-1"), "--seed"),
+        (("distance", "--type", "G2 V", "--mag", "V=10", "--ra", "40"), "--dec"),
+        (("distance", "--type", "G2 V", "--mag", "V=10", "--ra", "nan", "--dec", "5"), "not on the sky"),
+        (("distance", "--type", "G2 V", "--mag", "V=10", "--parallax", "1e300,1"), "mas"),
+        (("distance", "--type", "G2 V", "--mag", "V=10", "--ebv", "99,0.1"), "E(B-V)"),
+        (("desk", "--port", "99999", "--no-browser", "star.txt"), "--port"),
+    ],
+)
+def test_impossible_numbers_are_rejected(
+    arguments: tuple[str, ...], word: str, capsys: pytest.CaptureFixture[str]
+) -> None:
+    assert call(*arguments) == 2
+    assert word in capsys.readouterr().err
+
+
+@pytest.mark.parametrize(("option", "value"), [("--rv", "99"), ("--scheduler", "foo")])
+def test_run_rejects_impossible_settings(
+    option: str, value: str, tmp_path: Path, capsys: pytest.CaptureFixture[str]
+) -> None:
+    targets = tmp_path / "list.csv"
+    targets.write_text("name,mk_type,V\na,G2 V,10\n")
+    assert call("run", str(targets), "-o", str(tmp_path / "run"), "-q", "--no-report", option, value) == 2
+    assert capsys.readouterr().err.startswith(f"starfathom: {option} {value}")
+
+
+def test_target_list_in_another_encoding_says_so(tmp_path: Path, capsys: pytest.CaptureFixture[str]) -> None:
+    targets = tmp_path / "list.csv"
+    targets.write_bytes("name,mk_type,V\nétoile,G2 V,10\n".encode("latin1"))
+    assert call("run", str(targets), "-o", str(tmp_path / "run"), "-q") == 2
+    assert "UTF-8" in capsys.readouterr().err

@@ -382,3 +382,8 @@ def test_an_odd_colour_moves_the_luminosity_only_so_far():
     f = fathom("K5 III", {"V": (1.0, 0.01), "B": (1.0 + 2.1, 0.01)}, ebv=(0.0, 0.001))
     reach = abs(scale.slope[cell]) * 3 * scale.bv_scatter[cell]
     assert f.median("abs_mag_v") > scale.mean[cell] - reach - 0.3
+
+
+def test_without_a_colour_no_thick_cloud_stands_within_the_local_bubble():
+    f = fathom("G2 V", {"V": (10.0, 0.02)})
+    assert np.percentile(f.samples["distance_pc"], 2.5) > 45.0

@@ -1016,3 +1016,12 @@ def test_angles(text, hours, degrees):
     from starfathom.classify.reading.hints import angle
 
     assert angle(text, hours) == (None if degrees is None else pytest.approx(degrees, abs=1e-9))
+
+
+def test_survey_columns_tell_vacuum_without_the_survey_header(tmp_path):
+    ivar, mask = (0.01 * FLUX_LOG) ** -2.0, np.zeros(N, np.int32)
+    sdss = {"flux": FLUX_LOG, "loglam": LOG_WAVE, "ivar": ivar, "and_mask": mask}
+    assert read(tmp_path, table(sdss)).medium == "vacuum"
+    lamost = {"FLUX": FLUX_LOG, "IVAR": ivar, "WAVELENGTH": 10**LOG_WAVE, "ANDMASK": mask, "ORMASK": mask}
+    assert read(tmp_path, table(lamost)).medium == "vacuum"
+    assert read(tmp_path, table({"flux": FLUX_LOG, "loglam": LOG_WAVE, "ivar": ivar})).medium == "unknown"
