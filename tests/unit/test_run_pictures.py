@@ -54,3 +54,27 @@ def test_a_star_that_is_not_there_is_named(run_dir: Path, tmp_path: Path) -> Non
     with pytest.raises(RequestError, match="TH17-99"):
         pictures.main(str(run_dir), str(tmp_path / "out"), "TH17-99")
     assert (tmp_path / "out" / "hr_diagram.png").stat().st_size > 10_000
+
+
+def test_a_spectrum_is_drawn_over_its_template_and_both_pictures_are_written(tmp_path: Path) -> None:
+    import matplotlib
+
+    matplotlib.use("Agg")
+    import matplotlib.pyplot as plt
+
+    from starfathom.demo_spectra import __file__ as demo
+
+    spectra = sorted(p for p in Path(demo).parent.glob("th17_0*") if p.suffix in (".dat", ".txt", ".csv"))
+    figure, ax = plt.subplots()
+    pictures.over_template(spectra[0], ax)
+    drawn = [line for line in ax.lines if len(line.get_xdata()) > 300]
+    assert len(drawn) >= 2, "the star and its template"
+    assert "template of" in ax.get_title(loc="left") and "rest" in ax.get_xlabel()
+    plt.close(figure)
+    listed = tmp_path / "one.csv"
+    listed.write_text(f"name,spectrum,V,B\nTH17-10,{spectra[0]},10.1,10.8\n")
+    run_survey(TargetList(listed), tmp_path / "one", RunSettings(n_samples=400), workers=1, formats=["csv"],
+               progress=False)
+    pictures.main(str(tmp_path / "one"), str(tmp_path / "out"))
+    assert sorted(p.name for p in (tmp_path / "out").iterdir()) == ["hr_diagram.png", "spectrum.png"]
+    assert (tmp_path / "out" / "spectrum.png").stat().st_size > 10_000
