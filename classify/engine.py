@@ -416,7 +416,7 @@ class Classifier:
         grav, grav_extra = average(model.log_g, found.components, found.spread)
         fe_h, fe_h_extra = average((model.fe_h,), found.components, found.spread)
         by_regression, by_regression_extra = average(model.step, found.components, found.spread)
-        evidence = gather_evidence(batch, rows, self.model)
+        evidence = gather_evidence(batch, rows, self.model, by_regression, model.blend.criteria_weight)
         log_p = post.weigh(post.evidence_pieces(found.log_like, mag, mag_extra, grav, grav_extra, by_regression,
                                                 by_regression_extra, evidence.log_like, model.surface, model.loci),
                            model.blend)

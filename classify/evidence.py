@@ -12,7 +12,7 @@ from numpy.typing import NDArray
 from starfathom.classify.assignment import Assignment, Criterion
 from starfathom.classify.criteria import CriterionScales, load_criteria, log_likelihood, measure_criteria, point
 from starfathom.classify.grid import WAVE, blur
-from starfathom.classify.lines.direct import measure_many
+from starfathom.classify.lines.direct import BulkLines, measure_many
 from starfathom.classify.model import RUNGS, Model
 from starfathom.templates.subtypes import CLASSES, SUBTYPES, class_of, nearest_subtype
 
@@ -64,13 +64,39 @@ class Evidence:
         return out
 
 
+#: The published He II criteria of O stars, how much they count, and the regressed subtype before which they do.
+_HELIUM = [i for i, rule in enumerate(load_criteria()) if rule.name in ("he1_he2", "he2_4686")]
+_RATIO = next(i for i, rule in enumerate(load_criteria()) if rule.name == "he1_he2")
+_HELIUM_WEIGHT = 1.0
+_HELIUM_BEFORE_STEP = 18.0
+
+
+def _limit_helium(bulk: BulkLines, values: FloatArray, errors: FloatArray) -> None:
+    """Where He II 4541 is there and He I 4471 is not: the ratio at what 4471 may be at most, for the earliest O stars.
+
+    Fills ``values`` and ``errors`` in place. The error is that of a line seen at one standard deviation.
+    """
+    (neutral, neutral_err), (ionised, ionised_err) = bulk.column("HeI_4471"), bulk.column("HeII_4541")
+    rule = load_criteria()[_RATIO]
+    there = ionised > 4.0 * np.hypot(ionised_err, rule.floor)
+    fill = np.isnan(values[:, _RATIO]) & there & (bulk.fwhm_angstrom <= rule.coarsest_fwhm)
+    least = np.hypot(neutral_err, rule.floor)
+    with np.errstate(all="ignore"):
+        values[fill, _RATIO] = np.log10(np.maximum(neutral, least) / ionised)[fill]
+    errors[fill, _RATIO] = 0.2
+
+
 def line_rung(fwhm_angstrom: float) -> float:
     """Rung at which lines are measured for the criteria: the finest that is not finer than the star."""
     return next((r for r in RUNGS if r >= fwhm_angstrom - 0.05), RUNGS[-1])
 
 
-def gather_evidence(batch: PreparedBatch, rows: NDArray[np.int64], model_of: Callable[[float], Model]) -> Evidence:
-    """Criteria for ``rows`` of a prepared batch, measured at the rung next to each spectrum's own line spread."""
+def gather_evidence(batch: PreparedBatch, rows: NDArray[np.int64], model_of: Callable[[float], Model],
+                    step: FloatArray, criteria_weight: float) -> Evidence:
+    """Criteria for ``rows`` of a prepared batch, measured at the rung next to each spectrum's own line spread.
+
+    ``step`` (n,) is the regressed subtype, ``criteria_weight`` the weight their sum will get in the posterior.
+    """
     n, k = len(rows), len(load_criteria())
     log_like = np.zeros((n, len(SUBTYPES), len(CLASSES)))
     all_values, all_errors = np.full((n, k), np.nan), np.full((n, k), np.nan)
@@ -86,8 +112,13 @@ def gather_evidence(batch: PreparedBatch, rows: NDArray[np.int64], model_of: Cal
         bulk = measure_many(WAVE, flux, batch.sigma[rows[mine]], ok, np.full(len(mine), r),
                             velocity_kms=batch.velocity_kms[rows[mine]])
         values, errors, _ = measure_criteria(bulk)
+        _limit_helium(bulk, values, errors)
         own = model_of(float(r)).criteria
-        log_like[mine] = log_likelihood(own, values, errors).sum(axis=1)
+        each = log_likelihood(own, values, errors)
+        # O types rest on the published He criteria, which are few: near O they have their full say, where the learned
+        # ones, many and akin, are tempered together (``criteria_weight``)
+        helium = each[:, _HELIUM].sum(axis=1) * (_HELIUM_WEIGHT / criteria_weight - 1.0)
+        log_like[mine] = each.sum(axis=1) + np.where(step[mine] < _HELIUM_BEFORE_STEP, 1.0, 0.0)[:, None, None] * helium
         all_values[mine], all_errors[mine] = values, errors
         for q in mine:
             scales[q] = own
