@@ -76,6 +76,14 @@ def test_line_depth_is_no_matter_for_the_velocity(nodes):
     assert first_velocity(1 + 3.0 * (flat - 1), valid, nodes)[3][0] > 0.15
 
 
+def test_the_search_ends_at_840_kilometres_a_second(nodes):
+    k = node_near(nodes, 50.0, 3.0)
+    for sign in (-1, 1):
+        flat = moved(nodes, k, sign * 960.0)
+        found = first_velocity(flat, np.broadcast_to(nodes.valid, flat.shape), nodes)[0]
+        assert abs(found[0]) <= 840.0
+
+
 def test_noise_is_not_explained_by_any_node(nodes):
     flat = 1 + np.random.default_rng(5).normal(0, 0.2, (1, len(WAVE)))
     *_, unexplained = first_velocity(flat, np.broadcast_to(nodes.valid, flat.shape), nodes)

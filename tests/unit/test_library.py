@@ -65,7 +65,8 @@ def test_flux_survives_storage():
     ("A3Ia+...", 23, 0, "normal"), ("F8 Ib-II", 38, 1.8, "normal"), ("B2Iave", 12, 1, "emission"),
     ("G5IIIw", 45, 3, "metal-weak"), ("A0p...", 20, np.nan, "peculiar"), ("G6 IV + M6 V", 46, 4, "composite"),
     ("WN", np.nan, np.nan, "foreign"), ("DA:", np.nan, np.nan, "foreign"), ("", np.nan, np.nan, "none"),
-    ("F6VI", 36, np.nan, "metal-weak"), ("G8IIIvar", 48, 3, "normal")])
+    ("F6VI", 36, np.nan, "metal-weak"), ("sdF8", 38, np.nan, "metal-weak"),
+    ("G0V-VI", 40, 5, "metal-weak"), ("G8IIIvar", 48, 3, "normal")])
 def test_labels(text, t_code, lum_code, kind):
     label = read_label(text)
     np.testing.assert_equal([label.t_code, label.lum_code], [t_code, lum_code])
