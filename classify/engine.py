@@ -270,6 +270,8 @@ class Classifier:
             if not has_v[i] and abs(abs(velocity[i]) - _AIR_VACUUM_KMS) < 12 and "assumed" in words:
                 remarks.append(f"a velocity of {velocity[i]:.0f} km/s is what air taken for vacuum (or the other way "
                                "round) would give: check the wavelength medium")
+            if count := int(natives[i].struck.sum()):
+                remarks.append(f"{count} pixel{'s' if count > 1 else ''} left out that stand alone like cosmic rays")
             if natives[i].sigma_estimated:
                 remarks.append("no uncertainties given: noise estimated from the spectrum")
             if not has_f[i]:

@@ -47,6 +47,35 @@ def noise_from_pixels(flux: FloatArray, valid: BoolArray, blocks: int = 12) -> F
     return np.interp(np.arange(n), (use + 0.5) * size, np.maximum(middle, least))
 
 
+def spikes(flux: FloatArray, valid: BoolArray) -> BoolArray:
+    """Pixels struck by cosmic rays: one or two pixels that stand alone, half as high again as all around them.
+
+    A line of the sky or of the star is spread over more pixels than that. The height must also be ten times the scatter
+    of the neighbourhood (median of absolute deviations from a running median of nine pixels).
+    """
+    from scipy.ndimage import median_filter
+
+    around = median_filter(flux, size=9, mode="nearest")
+    off = np.where(valid, flux - around, 0.0)
+    high = off > 0.5 * np.abs(around)
+    if not high.any():
+        return high
+    scatter = 1.4826 * median_filter(np.abs(off), size=201, mode="nearest")
+    high &= off > 10.0 * scatter
+    if not high.any():
+        return high
+    out = np.zeros_like(high)
+    starts = np.flatnonzero(high & ~np.concatenate([[False], high[:-1]]))
+    for i in starts:
+        j = i
+        while j + 1 < len(high) and high[j + 1]:
+            j += 1
+        beside = off[[k for k in (i - 1, j + 1) if 0 <= k < len(off)]]
+        if j - i < 2 and (beside < 0.25 * off[i:j + 1].max()).all():
+            out[i:j + 1] = True
+    return out
+
+
 class Native:
     """A spectrum on its own pixels, in air, ready to be put on the grid at any velocity.
 
@@ -57,7 +86,7 @@ class Native:
         wave = np.asarray(spectrum.wave_angstrom, float)
         near = (wave > WAVE[0] * 0.995) & (wave < WAVE[-1] * 1.005)
         wave = wave[near]
-        self.valid = np.asarray(spectrum.valid, bool)[near]
+        self.valid = np.asarray(spectrum.valid, bool)[near].copy()
         flux = np.asarray(spectrum.flux, float)[near]
         self.count = int(self.valid.sum())
         if self.count < 20:
@@ -65,6 +94,8 @@ class Native:
             return
         if vacuum:
             wave = air_from_vacuum(wave)
+        self.struck = spikes(flux, self.valid)
+        self.valid &= ~self.struck
         self.scale = float(np.median(np.abs(flux[self.valid]))) or 1.0
         flux = flux / self.scale
         good = np.flatnonzero(self.valid)

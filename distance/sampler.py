@@ -34,6 +34,8 @@ IntArray = NDArray[np.intp]
 #: wider these scatter, and how far, in ordinary widths, the colour term of the scale still follows.
 ODD_SHARE, ODD_WIDTH, ODD_FOLLOW = 0.04, 4.0, 3.0
 _NUMBERS = 12
+#: Samples that must carry an answer at the least.
+LEAST_SAMPLES = 60.0
 _NO_COLOUR_PRECISION = 1e-2
 
 
@@ -117,6 +119,27 @@ def usable_bands(star: Star) -> list[str]:
     """Bands of the star whose intrinsic colour is known at every cell its type may be."""
     offset = intrinsic().offset
     return [b for b in star.magnitudes if np.isfinite(offset[b][star.cells]).all()]
+
+
+def _spread_out(weights: FloatArray, n_eff: FloatArray, least: float) -> FloatArray:
+    """Weights (n_stars, n_samples) flattened by a power until at least ``least`` samples carry each answer.
+
+    Where type, colours and dust agree badly a handful of samples would take all the weight, and their interval would be
+    far too narrow; ``n_eff`` itself is left as it was, and told in the cautions.
+    """
+    out = weights.copy()
+    for i in np.flatnonzero(n_eff < least):
+        log_w = np.log(np.maximum(weights[i], 1e-300))
+        low, high = 0.0, 1.0
+        for _ in range(30):
+            power = 0.5 * (low + high)
+            w = np.exp(power * (log_w - log_w.max()))
+            w /= w.sum()
+            low, high = (power, high) if 1.0 / (w**2).sum() > least else (low, power)
+        w = np.exp(low * (log_w - log_w.max()))
+        out[i] = w / w.sum()
+    return out
+
 
 
 def draw(stars: list[Star], scale: Scale, prior: str, n_samples: int, seed: int) -> Draws:
@@ -289,6 +312,7 @@ def draw(stars: list[Star], scale: Scale, prior: str, n_samples: int, seed: int)
     total = weights.sum(axis=1, keepdims=True)
     weights /= total
     n_eff = 1.0 / (weights**2).sum(axis=1)
+    weights = _spread_out(weights, n_eff, min(LEAST_SAMPLES, n_samples / 4))
     edges = np.cumsum(weights, axis=1)
     marks = (np.arange(n_samples) + 0.5) / n_samples
     pick = np.stack([np.minimum(np.searchsorted(row, marks * row[-1]), n_samples - 1) for row in edges])

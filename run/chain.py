@@ -181,7 +181,10 @@ def advise_targets(
         known = Known(target.magnitudes, target.parallax, target.ebv, target.ra_deg, target.dec_deg, settings.rv,
                       scale, settings.prior)  # fmt: skip
         found = None if isinstance(fathoming, str) else fathoming
-        out.append(advise(assignment, found, known=known if target.magnitudes else None))
+        try:
+            out.append(advise(assignment, found, known=known if target.magnitudes else None))
+        except StarfathomError:      # a set-up that no star could have was tried: no advice, but the result stands
+            out.append([])
     return out
 
 

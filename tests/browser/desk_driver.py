@@ -26,7 +26,9 @@ class DeskProcess:
 
     def start(self) -> None:
         command = [sys.executable, "-c", "from starfathom.cli import main; main()", "desk", *self.words, "--no-browser"]
-        self.process = subprocess.Popen(command, stdout=subprocess.PIPE, stderr=subprocess.STDOUT, text=True)
+        # a test runner in the background has Ctrl-C ignored, and its children would inherit that
+        self.process = subprocess.Popen(command, stdout=subprocess.PIPE, stderr=subprocess.STDOUT, text=True,
+                                        preexec_fn=lambda: signal.signal(signal.SIGINT, signal.SIG_DFL))
         lines = []
         for line in self.process.stdout:
             lines.append(line)

@@ -387,3 +387,11 @@ def test_an_odd_colour_moves_the_luminosity_only_so_far():
 def test_without_a_colour_no_thick_cloud_stands_within_the_local_bubble():
     f = fathom("G2 V", {"V": (10.0, 0.02)})
     assert np.percentile(f.samples["distance_pc"], 2.5) > 45.0
+
+
+def test_few_samples_never_make_a_narrow_interval():
+    """A B0 dwarf reddened by 3.8 mag at 50 pc: type, colour and dust agree badly; the scale's own scatter remains."""
+    found = fathom("B0 V", Photometry(V=(10.0, 0.02), B=(13.5, 0.02)), seed=3)
+    low, high = found.interval("distance_pc")
+    assert (high - low) / (2 * found.median("distance_pc")) > 0.15
+    assert any("agree badly" in caution for caution in found.cautions)

@@ -99,3 +99,15 @@ def test_noise_is_found_from_the_pixels():
     flux = 100 + rng.normal(0, 2.0, 6000)
     sigma = noise_from_pixels(flux, np.ones(6000, bool))
     assert np.median(sigma) == pytest.approx(2.0, rel=0.05)
+
+
+def test_cosmic_rays_are_left_out_and_lines_are_not():
+    from starfathom.classify.resample import spikes
+
+    rng = np.random.default_rng(5)
+    x = np.arange(3000.0)
+    flux = 100 + rng.normal(0, 1.0, 3000)
+    flux += 400 * np.exp(-0.5 * ((x - 1500) / 1.3) ** 2)        # an emission line of 3 pixels
+    flux[[200, 900, 901, 2500]] += (500, 300, 250, 90)
+    found = spikes(flux, np.ones(3000, bool))
+    assert set(np.flatnonzero(found)) == {200, 900, 901, 2500}
