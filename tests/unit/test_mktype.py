@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+import re
 import time
 
 import pytest
@@ -469,7 +470,7 @@ def test_whatever_is_accepted_round_trips(text):
         return
     again = MKType.parse(str(mk))
     assert again == mk and str(again) == str(mk)
-    for c in text.replace(" ", ""):
+    for c in re.sub(r"(?<=\d)\.(?!\d)", "", text.replace(" ", "")):   # a point that no digit follows may go: "G2."
         assert c.lower() in str(mk).lower() or c in "+-0I", (text, str(mk))  # only Ia+ and Ia-0 are spelled anew
 
 
