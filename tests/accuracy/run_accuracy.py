@@ -38,6 +38,8 @@ out = io.StringIO()
 def say(text: str = "") -> None:
     print(text, flush=True)
     out.write(text + "\n")
+    if text.startswith("\n## "):      # a run that is stopped leaves the sections it finished
+        (HERE / "RESULTS.md").write_text(out.getvalue().rsplit("\n## ", 1)[0])
 
 
 def boot(statistic: Callable[[np.ndarray], float], n: int, draws: int = 400, seed: int = 0) -> tuple[float, float]:
