@@ -69,6 +69,8 @@ _HELIUM = [i for i, rule in enumerate(load_criteria()) if rule.name in ("he1_he2
 _RATIO = next(i for i, rule in enumerate(load_criteria()) if rule.name == "he1_he2")
 _HELIUM_WEIGHT = 1.0
 _HELIUM_BEFORE_STEP = 18.0
+#: Spectra whose criteria are laid over the plane of types at once: half a megabyte a spectrum, several times over.
+_AT_ONCE = 8
 
 
 def _limit_helium(bulk: BulkLines, values: FloatArray, errors: FloatArray) -> None:
@@ -114,11 +116,12 @@ def gather_evidence(batch: PreparedBatch, rows: NDArray[np.int64], model_of: Cal
         values, errors, _ = measure_criteria(bulk)
         _limit_helium(bulk, values, errors)
         own = model_of(float(r)).criteria
-        each = log_likelihood(own, values, errors)
-        # O types rest on the published He criteria, which are few: near O they have their full say, where the learned
-        # ones, many and akin, are tempered together (``criteria_weight``)
-        helium = each[:, _HELIUM].sum(axis=1) * (_HELIUM_WEIGHT / criteria_weight - 1.0)
-        log_like[mine] = each.sum(axis=1) + np.where(step[mine] < _HELIUM_BEFORE_STEP, 1.0, 0.0)[:, None, None] * helium
+        for part in np.split(np.arange(len(mine)), range(_AT_ONCE, len(mine), _AT_ONCE)):
+            each = log_likelihood(own, values[part], errors[part])
+            # O types rest on the published He criteria, which are few: near O they have their full say, where the
+            # learned ones, many and akin, are tempered together (``criteria_weight``)
+            near_o = np.where(step[mine[part]] < _HELIUM_BEFORE_STEP, _HELIUM_WEIGHT / criteria_weight - 1.0, 0.0)
+            log_like[mine[part]] = each.sum(axis=1) + near_o[:, None, None] * each[:, _HELIUM].sum(axis=1)
         all_values[mine], all_errors[mine] = values, errors
         for q in mine:
             scales[q] = own
