@@ -231,8 +231,11 @@ class Judge:
             return bank
         key = (which, reach.tobytes())
         if key not in self._partial:
-            if len(self._partial) > 24:
-                self._partial.clear()
+            # a bank over part of the range weighs up to a hundred megabytes: keep few, and of the redshifts only one
+            for old in [k for k in self._partial if k[0] == which == "far"]:
+                del self._partial[old]
+            while len(self._partial) >= 6:
+                del self._partial[next(iter(self._partial))]
             self._partial[key] = bank.within(reach)
         return self._partial[key]
 
