@@ -188,3 +188,12 @@ def test_balmer_wings_of_hot_stars_tell_nothing_of_the_instrument(nodes):
 def test_the_grid_step_is_sixty_kilometres_a_second():
     assert np.diff(LN_WAVE).mean() == pytest.approx(np.log1p(60.0 / 299792.458), rel=1e-9)
     assert LN_STEP == pytest.approx(np.log1p(GRID_KMS / LIGHT_KMS), rel=1e-12)
+
+
+def test_chunks_of_the_wander_follow_one_another_and_overlap():
+    from starfathom.classify.alignment import _CHUNKS, _HALF_WIDTHS
+
+    assert np.all(np.diff(_CHUNKS) > 0), "interpolation between them needs them in order"
+    assert np.all(_CHUNKS[1:] - _HALF_WIDTHS[1:] < _CHUNKS[:-1] + _HALF_WIDTHS[:-1])
+    # steps in ln(wavelength) are shorter than the length over which the scale is taken to bend
+    assert np.all(np.diff(np.log(_CHUNKS)) < 0.12)

@@ -115,3 +115,15 @@ def test_the_nearest_cell():
     i, j = post.cell_of(42.3, 4.6)
     assert (SUBTYPES[i], CLASSES[j]) == ("G2.5", "V")
     assert LUM_CODES[post.cell_of(10.0, 1.4)[1]] == 1.3
+
+
+def test_cells_that_cover_more_are_not_named_for_that_alone():
+    """Between K5 and K7 with equal mass the denser cell is named: K5 stands for 0.75 of a step, K7 for a whole one."""
+    p = cells(K5_V=0.5, K7_V=0.5)
+    assert SUBTYPES[post.best_type(p)[0]] == "K5"
+
+
+def test_a_set_that_is_to_hold_everything_leaves_out_the_impossible():
+    p = np.full(SHAPE, 1e-9)
+    p[SUBTYPES.index("G2"), 7] = 1.0
+    assert post.type_set(p / p.sum(), 1.0) == ("G2 V",)

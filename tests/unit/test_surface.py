@@ -12,6 +12,7 @@ from starfathom.classify.surface import (
     CORE,
     FLOOR,
     PIXELS,
+    TAIL,
     WIDE,
     Surface,
     class_index,
@@ -164,3 +165,38 @@ def test_what_masked_pixels_hold_does_not_matter():
 @pytest.mark.parametrize(("lum_code", "name"), [(0.4, "Ia0"), (1.2, "Iab"), (2.4, "II"), (3.6, "IV"), (5.5, "V")])
 def test_the_nearest_class(lum_code, name):
     assert CLASSES[class_index(lum_code)] == name
+
+
+def test_shrinking_takes_from_what_components_share_and_nothing_from_their_own():
+    flat, step, lum, _ = stars()
+    none, some, whole = (fit_surface(flat, step, lum, np.ones(len(step)), components=4, shrink=s)[0].scatter[2]
+                         for s in (0.0, 0.3, 1.0))
+    own = np.eye(4, dtype=bool)
+    np.testing.assert_allclose(some[own], none[own])
+    np.testing.assert_allclose(whole[own], none[own])
+    np.testing.assert_allclose(some[~own], 0.7 * none[~own], atol=1e-12)
+    np.testing.assert_allclose(whole[~own], 0.0, atol=1e-12)
+    # and 2 per cent of the mean variance are added to every direction
+    assert np.linalg.eigvalsh(none).min() >= 0.02 * np.trace(none) / 1.02 / 4 * (1 - 1e-9)
+
+
+def test_types_of_different_scatter_are_weighed_by_their_determinants():
+    """Student's t with one component, written out with its normalisation, for nodes in two temperature bands."""
+    bands = np.array([0.1, 0.1, 0.1, 0.1, 0.9, 0.9])[:, None, None]
+    base = plane(0.001, 0.0)
+    k_loadings = np.where(np.arange(len(PIXELS)) % 3 == 0, 1.0, -0.4)[:, None]
+    s = Surface(base.mean, k_loadings, base.floor, base.nodes, base.support, bands)
+    flat = 1 + 0.046 * k_loadings.T
+    sigma = np.full(flat.shape, 0.3)
+    found = match(s, flat, np.ones(flat.shape, bool), sigma).log_like[0, :, V]
+    p = k_loadings[CORE, 0]
+    noise = FLOOR ** 2 + 0.3 ** 2 / 2
+    information = (p ** 2).sum() / noise
+    values = []
+    for name, scatter in (("G5", 0.1), ("K2", 0.9)):
+        off = 0.046 - 0.001 * STEPS[SUBTYPES.index(name)]
+        quad = off ** 2 / (scatter + 1 / information)
+        determinant = np.log(scatter) + np.log(1 / scatter + information)
+        values.append(-0.5 * (TAIL + 1) * np.log1p(quad / TAIL) - 0.5 * determinant)
+    got = found[SUBTYPES.index("G5")] - found[SUBTYPES.index("K2")]
+    assert got == pytest.approx(values[0] - values[1], rel=1e-3)
