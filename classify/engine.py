@@ -27,7 +27,7 @@ from starfathom.classify.model import RUNGS, Model
 from starfathom.classify.prepared import Prepared
 from starfathom.classify.resample import Native
 from starfathom.classify.spectrum import PlainSpectrum
-from starfathom.classify.surface import CORE, PIXELS, WIDE, Match, match
+from starfathom.classify.surface import CORE, PIXELS, Match, match
 from starfathom.templates import user
 from starfathom.templates.library import Library, load_library
 from starfathom.templates.subtypes import CLASSES, STEPS, SUBTYPES, step_of, t_code_from_step
@@ -613,4 +613,4 @@ def _shared(without_libraries: tuple[str, ...], without_stars: tuple[int, ...]) 
     return Classifier(without_libraries, without_stars)
 
 
-__all__ = ["WIDE", "Classifier", "PreparedBatch", "Settings"]
+__all__ = ["Classifier", "PreparedBatch", "Settings"]

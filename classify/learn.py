@@ -48,7 +48,7 @@ _PERTURBED_NOISE = 0.006
 #: (components, weight) of the regressors that are averaged.
 _SIZES = (20, 40)
 _MIN_COVERAGE = 0.9
-#: Share of library labels whose class the published gravity or the parallax contradicts outright, about.
+#: Share of library labels taken to have a plainly wrong class; assumed, not measured.
 _WRONG_LABELS = 0.05
 _BALMER = np.array([3889.1, 3970.1, 4101.7, 4340.5, 4861.3, 6562.8])
 
